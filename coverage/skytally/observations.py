@@ -1,0 +1,171 @@
+"""Executed observations in columns, and the rows that could not be used."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+__all__ = ["LogTable", "Observations", "SetAside", "night_of"]
+
+SECONDS_PER_DAY = 86400.0
+
+
+@dataclass(frozen=True)
+class SetAside:
+    """One row of a log that does not count, and why.
+
+    Attributes
+    ----------
+    telescope, file : str
+        Where it stands.
+    row : int
+        Line of a text file (first line is 1) or row of a binary table (first is 1).
+    exposure : str
+        The exposure's name, empty if unreadable.
+    reason : str
+        Short reason, the same words for the same cause, to count by:
+        "before the event", "not accepted", "duplicate", "unreadable", "missing".
+    detail : str
+        A sentence with column, value and what to do.
+    column : str
+        The column at fault, empty where none is.
+    """
+
+    telescope: str
+    file: str
+    row: int
+    exposure: str
+    reason: str
+    detail: str
+    column: str = ""
+
+    @property
+    def is_fault(self) -> bool:
+        """Whether somebody should mend the log (unlike a plain aborted exposure)."""
+        return self.reason in {"unreadable", "missing"}
+
+
+@dataclass(frozen=True, eq=False)
+class LogTable:
+    """What one log held: accepted rows in columns, the others with reasons.
+
+    All arrays have shape (n,), n accepted rows in the order of the file.
+
+    Attributes
+    ----------
+    telescope, file, sha256 : str
+        Whose log, which file (as given), and the hash of what was read.
+    read : int
+        Rows in the file; equals n + len(set_aside).
+    row : int64 array
+        Line or row number in the file, as in `SetAside.row`.
+    exposure : object array of str
+        Name of each exposure, never empty.
+    ra_deg, dec_deg : float64 arrays
+        Pointing, ICRS; ra in [0, 360). NaN where only a region is given.
+    angle_deg : float64 array
+        Position angle of the camera's η axis, east of north.
+    start_mjd : float64 array
+        UTC start.
+    duration_s : float64 array
+        Exposure time, ≥ 0; NaN never (0 where unknown, and noted).
+    band : object array of str
+        Band as written; empty where missing.
+    depth : float64 array
+        Limiting magnitude as written; NaN where missing.
+    extinction : float64 array
+        Galactic extinction A_b in magnitudes from an `extinction` column; NaN
+        where missing or no such column.
+    region : object array of str
+        Region text or the path of a MOC file; empty where the camera is meant.
+    set_aside : tuple of SetAside
+        The other rows.
+    notes : tuple of str
+        What the reader noticed or assumed about the file as a whole.
+    """
+
+    telescope: str
+    file: str
+    sha256: str
+    read: int
+    row: NDArray[np.int64]
+    exposure: NDArray[np.object_]
+    ra_deg: NDArray[np.float64]
+    dec_deg: NDArray[np.float64]
+    angle_deg: NDArray[np.float64]
+    start_mjd: NDArray[np.float64]
+    duration_s: NDArray[np.float64]
+    band: NDArray[np.object_]
+    depth: NDArray[np.float64]
+    extinction: NDArray[np.float64]
+    region: NDArray[np.object_]
+    set_aside: tuple[SetAside, ...] = ()
+    notes: tuple[str, ...] = ()
+
+    def __len__(self) -> int:
+        return int(self.row.size)
+
+
+@dataclass(frozen=True, eq=False)
+class Observations:
+    """All accepted exposures of a campaign, sorted by start.
+
+    All arrays have shape (n,).
+
+    Attributes
+    ----------
+    telescopes, bands, nights : tuple of str
+        Names; the index arrays below point into them. Nights are dates
+        ("2031-03-14") of the evening, in order.
+    telescope, night : int64 arrays
+        Index of the telescope and of the night.
+    band : int64 array
+        Index of the band, −1 where the log gives none.
+    footprint : int64 array
+        Index of the footprint (owner in the footprint tables).
+    row : int64 array
+        Row in the telescope's log.
+    exposure : object array of str
+        Names.
+    ra_deg, dec_deg, angle_deg : float64 arrays
+        Pointing (ICRS); NaN where a region was given outright.
+    start_mjd, end_mjd : float64 arrays
+        UTC.
+    depth : float64 array
+        Limiting magnitude in the campaign's system and significance; NaN where
+        missing.
+    extinction : float64 array
+        A_b in magnitudes from the log; NaN where the log gives none.
+    """
+
+    telescopes: tuple[str, ...]
+    bands: tuple[str, ...]
+    nights: tuple[str, ...]
+    telescope: NDArray[np.int64]
+    night: NDArray[np.int64]
+    band: NDArray[np.int64]
+    footprint: NDArray[np.int64]
+    row: NDArray[np.int64]
+    exposure: NDArray[np.object_]
+    ra_deg: NDArray[np.float64]
+    dec_deg: NDArray[np.float64]
+    angle_deg: NDArray[np.float64]
+    start_mjd: NDArray[np.float64]
+    end_mjd: NDArray[np.float64]
+    depth: NDArray[np.float64]
+    extinction: NDArray[np.float64]
+
+    def __len__(self) -> int:
+        return int(self.row.size)
+
+
+def night_of(start_mjd: NDArray[np.float64], longitude_deg: float | None) -> NDArray[np.int64]:
+    """Night of each exposure, as the MJD of the date on which it began.
+
+    Nights break at local mean noon of the site's longitude (degrees east), at
+    12:00 UTC where there is no site.
+    """
+    local = start_mjd + (0.0 if longitude_deg is None else longitude_deg / 360.0)
+    return np.floor(local - 0.5).astype(np.int64)

@@ -1,0 +1,208 @@
+"""Frozen, serialisable results: the one hand-over to everything that shows something."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from skytally.skymap import SkyMap
+from skytally.spans import Spans
+from skytally.tally import AsPointed, TallyRow, Timeline
+
+__all__ = [
+    "Event",
+    "ExposureInfo",
+    "InputFile",
+    "LogCount",
+    "MapInfo",
+    "Results",
+    "SetAsideInfo",
+    "Settings",
+    "SkyData",
+    "TelescopeInfo",
+]
+
+
+@dataclass(frozen=True)
+class Event:
+    """What was followed up: its name and time (UTC, ISO 8601 with Z)."""
+
+    name: str
+    time: str
+    time_mjd: float
+
+
+@dataclass(frozen=True)
+class InputFile:
+    """A file that was read: its role, its path as the campaign names it, its SHA-256."""
+
+    role: str
+    path: str
+    sha256: str
+
+
+@dataclass(frozen=True)
+class MapInfo:
+    """One map version in numbers; distances and volumes are None without a distance layer."""
+
+    version: str
+    issued: str | None
+    hours: float | None
+    cells: int
+    order_max: int
+    area_50_deg2: float
+    area_90_deg2: float
+    distance_mean_mpc: float | None
+    distance_sd_mpc: float | None
+    volume_50_mpc3: float | None
+    volume_90_mpc3: float | None
+    probability_without_distance: float | None
+    path: str | None
+    sha256: str | None
+    notes: tuple[str, ...]
+
+
+@dataclass(frozen=True)
+class TelescopeInfo:
+    """One telescope as used: its camera in words and how finely it was rasterised."""
+
+    name: str
+    camera: str
+    camera_area_deg2: float | None
+    site: str | None
+    bands: tuple[str, ...]
+    exposures: int
+    footprints: int
+    order_min: int | None
+    order_max: int | None
+    depth_system: str
+    depth_significance: float
+
+
+@dataclass(frozen=True)
+class LogCount:
+    """Reconciliation of one log: read = used + set_aside, the latter by reason."""
+
+    telescope: str
+    file: str
+    read: int
+    used: int
+    set_aside: int
+    reasons: tuple[tuple[str, int], ...]
+
+
+@dataclass(frozen=True)
+class SetAsideInfo:
+    """One row that does not count, and why."""
+
+    telescope: str
+    file: str
+    row: int
+    exposure: str
+    reason: str
+    detail: str
+
+
+@dataclass(frozen=True)
+class ExposureInfo:
+    """One accepted exposure as tallied."""
+
+    telescope: str
+    exposure: str
+    row: int
+    start: str
+    end: str
+    hours: float
+    band: str | None
+    ra_deg: float | None
+    dec_deg: float | None
+    area_deg2: float
+    depth: float | None
+    map_in_force: str | None
+    probability_in_force: float | None
+    probability_newest: float
+
+
+@dataclass(frozen=True)
+class Settings:
+    """Every choice that moves a number."""
+
+    magnitude_system: str
+    significance: float
+    revisit_visits: int
+    revisit_gap_minutes: float
+    bracket_target: float
+    extinction: str
+
+
+@dataclass(frozen=True, eq=False)
+class SkyData:
+    """The geometry behind the numbers, for charts and region files; not in the JSON.
+
+    Attributes
+    ----------
+    maps : tuple of SkyMap
+        In the order of ``Results.maps``.
+    covered : tuple of Spans
+        Union of each telescope's footprints, in the order of ``Results.telescopes``.
+    outlines : tuple of tuples of float64 arrays, shape (m, 2)
+        Per telescope, the distinct footprints' outlines as closed rings of
+        ICRS lon, lat in degrees (first vertex not repeated); empty where
+        regions were given outright as MOC.
+    """
+
+    maps: tuple[SkyMap, ...]
+    covered: tuple[Spans, ...]
+    outlines: tuple[tuple[NDArray[np.float64], ...], ...]
+
+
+@dataclass(frozen=True)
+class Results:
+    """Everything that the report, the circular and the JSON say.
+
+    Maps are in order of issue: the last is the newest. ``rows`` hold, for each
+    map in that order, the selections: all; each telescope; each band; each
+    telescope and band; each night.
+    """
+
+    software: str
+    event: Event
+    settings: Settings
+    inputs: tuple[InputFile, ...]
+    maps: tuple[MapInfo, ...]
+    telescopes: tuple[TelescopeInfo, ...]
+    logs: tuple[LogCount, ...]
+    rows: tuple[TallyRow, ...]
+    timelines: tuple[Timeline, ...]
+    as_pointed: tuple[AsPointed, ...]
+    exposures: tuple[ExposureInfo, ...]
+    set_aside: tuple[SetAsideInfo, ...]
+    notes: tuple[str, ...]
+    sky: SkyData = field(repr=False, compare=False)
+
+    @property
+    def newest(self) -> MapInfo:
+        """The map version issued last."""
+        return self.maps[-1]
+
+    def row(
+        self,
+        map: str | None = None,
+        telescope: str | None = None,
+        band: str | None = None,
+        night: str | None = None,
+    ) -> TallyRow:
+        """Return the row of one selection; the newest map if none is named.
+
+        Raises
+        ------
+        KeyError
+            If there is no such row.
+        """
+        version = self.newest.version if map is None else map
+        for row in self.rows:
+            if row.map == version and row.selection == (telescope, band, night):
+                return row
+        raise KeyError((version, telescope, band, night))

@@ -1,0 +1,1 @@
+"""Templates, style sheets and scripts of the report."""
