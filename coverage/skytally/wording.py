@@ -1,0 +1,358 @@
+"""Numbers and sentences, worded once for every form of the report.
+
+Text is Unicode with no-break spaces between a number and its unit; `to_ascii`
+makes the 7-bit form of the same words. Digits follow the uncertainty that is
+printed beside the number.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+
+from skytally.results import Results, Settings
+from skytally.tally import TallyRow
+from skytally.times import hours_since, iso_to_mjd
+
+__all__ = [
+    "MISSING",
+    "NBSP",
+    "area_text",
+    "count",
+    "decimals_for",
+    "depth_range",
+    "distance_text",
+    "has",
+    "headline",
+    "hours_text",
+    "join_words",
+    "limit_terms",
+    "magnitude_text",
+    "number_text",
+    "number_word",
+    "percent",
+    "probability_text",
+    "row_probability",
+    "since_event",
+    "to_ascii",
+    "utc_text",
+    "version_text",
+]
+
+NBSP = "\u00a0"
+MISSING = "—"
+BRACKET_TARGET = 0.005
+# What a row's total area is tested to hold, whatever its bracket: 0.1 %.
+AREA_ACCURACY = 0.001
+# A map normalised in floating point sums to one only this closely.
+_EXACT = 1e-9
+_WORDS = (
+    *("no", "one", "two", "three", "four", "five", "six"),
+    *("seven", "eight", "nine", "ten", "eleven", "twelve"),
+)
+# Bands that a sentence names one by one; more are given as a range.
+_BANDS_NAMED = 3
+_ASCII = {
+    NBSP: " ",
+    "\u202f": " ",
+    "–": "-",
+    "—": "-",
+    "−": "-",
+    "±": "+/-",
+    "σ": "sigma",
+    "²": "^2",
+    "³": "^3",
+    "≥": ">=",
+    "≤": "<=",
+    "×": "x",
+    "…": "...",
+    "‘": "'",
+    "’": "'",
+    "“": '"',
+    "”": '"',
+    "°": " deg",
+    "µ": "u",
+}
+
+
+def to_ascii(text: str) -> str:
+    """Return the same words in 7-bit characters; what has no equivalent becomes ``?``."""
+    for character, plain in _ASCII.items():
+        text = text.replace(character, plain)
+    return text.encode("ascii", "replace").decode("ascii")
+
+
+def decimals_for(uncertainty: float, most: int = 4) -> int:
+    """Decimals of a number with this uncertainty: two digits of it up to 0.35, else one.
+
+    The rounding rule of the Particle Data Group's reviews (from memory): with
+    the three leading digits of the uncertainty at or below 354 keep two
+    digits, above keep one. Zero or less means exact: ``most`` decimals.
+    """
+    if not uncertainty > 0 or not math.isfinite(uncertainty):
+        return most
+    exponent = math.floor(math.log10(uncertainty))
+    leading = round(uncertainty / 10.0**exponent * 100)
+    digits = 2 if leading <= 354 else 1
+    return max(0, min(most, digits - 1 - exponent))
+
+
+def number_text(value: float, decimals: int = 0) -> str:
+    """Return a number with a comma between thousands and a true minus sign."""
+    text = f"{value:,.{decimals}f}"
+    if text.startswith("-"):
+        text = text[1:] if float(text.replace(",", "")) == 0 else "−" + text[1:]
+    return text
+
+
+def percent(fraction: float, decimals: int = 1, *, unit: bool = True) -> str:
+    """Return a fraction as a percentage that never rounds to a false 0 or 100.
+
+    An exact 0 or 1 prints without decimals; what would round to either prints
+    as a bound, ``< 0.1 %`` or ``> 99.9 %``.
+    """
+    tail = f"{NBSP}%" if unit else ""
+    if fraction <= 0 or fraction >= 1 - _EXACT:
+        return f"{0 if fraction <= 0 else 100}{tail}"
+    step = 10.0**-decimals
+    text = f"{100 * fraction:.{decimals}f}"
+    if float(text) == 0:
+        return f"<{NBSP}{step:.{decimals}f}{tail}"
+    if float(text) >= 100:
+        return f">{NBSP}{100 - step:.{decimals}f}{tail}"
+    return f"{text}{tail}"
+
+
+def _bracket(low: float, high: float, decimals: int) -> str:
+    """Return bounds rounded outwards, so that what is printed still holds the truth."""
+    scale = 10.0**decimals
+    lower = math.floor(low * scale + 1e-6) / scale
+    upper = math.ceil(high * scale - 1e-6) / scale
+    return f"{number_text(lower, decimals)}–{number_text(upper, decimals)}"
+
+
+def _percent_bracket(low: float, high: float, decimals: int) -> str:
+    """Return the bounds of a probability in percent; 0 and 100 are printed as such."""
+    lower, upper = _bracket(100 * low, 100 * high, decimals).split("–")
+    lower = "0" if float(lower) == 0 else lower
+    upper = "100" if float(upper) >= 100 else upper
+    return f"{lower}–{upper}{NBSP}%"
+
+
+def probability_text(
+    value: float,
+    low: float,
+    high: float,
+    error: float,
+    target: float = BRACKET_TARGET,
+) -> str:
+    """Return a probability with what is known of its error.
+
+    Parameters
+    ----------
+    value, low, high, error : float
+        Probability, its bracket and the estimated error of the centre rule, as
+        fractions.
+    target : float
+        The width up to which the bracket is printed; beyond it the refinement
+        ended early and the estimated error is printed instead.
+
+    Returns
+    -------
+    str
+        ``34.62 % (34.45–34.81 %)``, ``34.62 ± 0.20 %`` or, where both bounds
+        are the value, the value alone.
+    """
+    width = high - low
+    if width <= _EXACT:
+        return percent(value, 2)
+    if width <= target or not error > 0:
+        decimals = decimals_for(50 * width)
+        return f"{percent(value, decimals)} ({_percent_bracket(low, high, decimals)})"
+    decimals = decimals_for(100 * error)
+    text = percent(value, decimals, unit=False)
+    shown = math.ceil(100 * error * 10**decimals - 1e-6) / 10**decimals
+    return f"{text} ± {shown:.{decimals}f}{NBSP}%" if text[0].isdigit() else f"{text}{NBSP}%"
+
+
+def row_probability(row: TallyRow, settings: Settings) -> str:
+    """Return the probability of a tally row with its bracket or error."""
+    return probability_text(
+        row.probability,
+        row.probability_low,
+        row.probability_high,
+        row.probability_error,
+        max(settings.bracket_target, 0.0),
+    )
+
+
+def area_text(value: float, low: float, high: float, *, bracket: bool = False) -> str:
+    """Return an area in square degrees, its bracket in parentheses if asked for.
+
+    Digits follow the smaller of the bracket's half width and the 0.1 % that a
+    row's total holds whatever its bracket.
+    """
+    if value <= 0:
+        return f"0{NBSP}deg²"
+    uncertainty = min((high - low) / 2, AREA_ACCURACY * value)
+    decimals = decimals_for(uncertainty, most=2 if value >= 0.1 else 4)
+    text = f"{number_text(value, decimals)}{NBSP}deg²"
+    if bracket and high > low:
+        text += f" ({_bracket(low, high, decimals)}{NBSP}deg²)"
+    return text
+
+
+def distance_text(mean_mpc: float | None, sd_mpc: float | None) -> str:
+    """Return a luminosity distance with its standard deviation, or a dash."""
+    if mean_mpc is None or sd_mpc is None:
+        return MISSING
+    decimals = decimals_for(sd_mpc, most=1)
+    return f"{number_text(mean_mpc, decimals)} ± {number_text(sd_mpc, decimals)}{NBSP}Mpc"
+
+
+def magnitude_text(magnitude: float | None, decimals: int = 2) -> str:
+    """Return a magnitude with its unit, or a dash where there is none."""
+    if magnitude is None:
+        return MISSING
+    return f"{number_text(magnitude, decimals)}{NBSP}mag"
+
+
+def limit_terms(settings: Settings) -> str:
+    """Return what every limit must be read with: system, significance, extinction."""
+    return (
+        f"{settings.magnitude_system}, {settings.significance:g}{NBSP}σ, "
+        f"{settings.extinction.rstrip('.')}"
+    )
+
+
+def depth_range(row: TallyRow) -> str:
+    """Return the range of a row's limits, one number where they agree, or a dash."""
+    if row.depth_min is None or row.depth_max is None:
+        return MISSING
+    low, high = number_text(row.depth_min, 2), number_text(row.depth_max, 2)
+    return f"{low}{NBSP}mag" if low == high else f"{low}–{high}{NBSP}mag"
+
+
+def number_word(n: int) -> str:
+    """Return a count in words up to twelve, in digits beyond."""
+    return _WORDS[n] if 0 <= n < len(_WORDS) else number_text(n)
+
+
+def count(noun: str, n: int, plural: str | None = None, *, words: bool = False) -> str:
+    """Return a counted noun: ``1 exposure``, ``no exposures``, ``1,204 exposures``."""
+    if n != 1:
+        noun = plural or (noun + "es" if noun.endswith(("s", "x", "ch", "sh")) else noun + "s")
+    shown = number_word(n) if words or n == 0 else number_text(n)
+    return f"{shown}{NBSP}{noun}"
+
+
+def has(n: int) -> str:
+    """Return the verb that agrees with a count: ``has`` or ``have``."""
+    return "has" if n == 1 else "have"
+
+
+def join_words(words: Sequence[str], last: str = "and") -> str:
+    """Return ``a``, ``a and b`` or ``a, b and c``; empty for none."""
+    words = list(words)
+    if len(words) < 2:
+        return "".join(words)
+    return f"{', '.join(words[:-1])} {last} {words[-1]}"
+
+
+def utc_text(iso: str | None, *, seconds: bool = False) -> str:
+    """Return an ISO 8601 time as ``2031-03-14 05:21 UTC``; a dash for None.
+
+    The text is cut, not rounded: a leap second has no other minute.
+    """
+    if iso is None:
+        return MISSING
+    date, _, clock = iso.removesuffix("Z").partition("T")
+    if not clock:
+        return date
+    return f"{date} {clock[: 8 if seconds else 5]}{NBSP}UTC"
+
+
+def hours_text(hours: float | None, *, sign: bool = False) -> str:
+    """Return hours to three digits or so: ``0.27 h``, ``5.31 h``, ``47.2 h``, ``310 h``."""
+    if hours is None:
+        return MISSING
+    size = abs(hours)
+    decimals = 2 if size < 9.995 else 1 if size < 99.95 else 0
+    text = number_text(hours, decimals)
+    if sign and not text.startswith("−"):
+        text = f"+{text}"
+    return f"{text}{NBSP}h"
+
+
+def since_event(hours: float) -> str:
+    """Return ``5.31 h after the event`` or ``0.40 h before the event``."""
+    return f"{hours_text(abs(hours))} {'before' if hours < 0 else 'after'} the event"
+
+
+def version_text(version: str) -> str:
+    """Return a map version as it is named in a sentence: ``map version “2 arc”``."""
+    return f"map version “{version}”"
+
+
+def headline(results: Results) -> str:
+    """Return the one plain sentence with the answer, on the newest map version."""
+    event = results.event.name
+    total = results.row()
+    if total.exposures == 0:
+        return (
+            f"No exposure of {event} could be used, so nothing is covered and nothing is "
+            f"constrained: every row of the logs was set aside."
+            if any(log.read for log in results.logs)
+            else f"No exposure of {event} was given, so nothing is covered."
+        )
+    used = sum(t.exposures > 0 for t in results.telescopes)
+    until = _until(results)
+    who = f"{count('telescope', used, words=True)} {has(used)}"
+    what = f"{count('exposure', total.exposures)}"
+    version = version_text(results.newest.version)
+    if total.probability <= 0:
+        return (
+            f"{until}, {who} covered none of the probability of {version} for {event} "
+            f"with {what}: every footprint lies outside it."
+        )
+    probability = row_probability(total, results.settings)
+    area = area_text(total.area_deg2, total.area_low_deg2, total.area_high_deg2)
+    return (
+        f"{until}, {who} covered {probability} of the probability of {version} for {event}, "
+        f"with {what} over {area}{_how_deep(results)}."
+    )
+
+
+def _until(results: Results) -> str:
+    """Return the first words of the headline: when the last exposure ended."""
+    end = results.row().last_end
+    if end is None:
+        return "So far"
+    return (
+        f"By {utc_text(end)}, {since_event(hours_since(iso_to_mjd(end), results.event.time_mjd))}"
+    )
+
+
+def _how_deep(results: Results) -> str:
+    """Return the median limits; bands are named, never mixed."""
+    limits = [
+        (row.depth_median, row.band)
+        for row in results.rows
+        if row.map == results.newest.version
+        and row.band is not None
+        and row.telescope is None
+        and row.depth_median is not None
+    ]
+    if not limits:
+        return "; the logs hold no limiting magnitude"
+    terms = limit_terms(results.settings)
+    if len(limits) <= _BANDS_NAMED:
+        named = join_words([f"{magnitude_text(m)} in {band}" for m, band in limits])
+        return (
+            f", to {'a median limit' if len(limits) == 1 else 'median limits'} of {named} ({terms})"
+        )
+    (low, low_band), (high, high_band) = min(limits), max(limits)
+    return (
+        f", to median limits between {magnitude_text(low)} in {low_band} and "
+        f"{magnitude_text(high)} in {high_band} ({terms})"
+    )
