@@ -103,6 +103,10 @@ _ALIASES: Mapping[str, str] = {
 _LOG_TEN_PARSECS = -5.0
 
 
+def _floats(values: ArrayLike) -> Floats:
+    return np.asarray(values, dtype=np.float64)
+
+
 def standard_band(band: str) -> str:
     """Name of a band in its photometric system; the text itself if it is no known alias.
 
@@ -217,7 +221,7 @@ def change_significance(depth: ArrayLike, from_sigma: float, to_sigma: float) ->
                 f"Found a significance of {sigma}, expected a number above 0",
                 remedy="Give the signal to noise of the limits, for example 5.",
             )
-    return np.asarray(depth, dtype=np.float64) - 2.5 * np.log10(to_sigma / from_sigma)
+    return np.asarray(_floats(depth) - 2.5 * np.log10(to_sigma / from_sigma))
 
 
 def stack_groups(depths: ArrayLike, first: ArrayLike) -> Floats:
@@ -241,7 +245,7 @@ def stack_groups(depths: ArrayLike, first: ArrayLike) -> Floats:
     start = np.asarray(first, dtype=np.int64)
     if start.size == 0:
         return np.empty(0)
-    values = np.asarray(depths, dtype=np.float64)
+    values = _floats(depths)
     known = np.where(np.isfinite(values), values, -np.inf)
     deepest = np.maximum.reduceat(known, start)
     # Relative to the deepest of its group no power can overflow.
@@ -262,7 +266,7 @@ def stack_depths(depths: ArrayLike, axis: int = -1) -> Floats:
     axis : int
         The axis that is stacked and disappears, of length ≥ 1.
     """
-    rows = np.moveaxis(np.asarray(depths, dtype=np.float64), axis, -1)
+    rows = np.moveaxis(_floats(depths), axis, -1)
     first = np.arange(rows.size // rows.shape[-1]) * rows.shape[-1]
     return stack_groups(rows.ravel(), first).reshape(rows.shape[:-1])
 
@@ -305,8 +309,8 @@ def reach_mpc(
     extinction, k_correction : array_like
         A_b and K in magnitudes; all four broadcast together.
     """
-    modulus = np.asarray(limit, dtype=np.float64) - absolute - extinction - k_correction
-    return np.asarray(10.0 ** (modulus / 5.0 + _LOG_TEN_PARSECS), dtype=np.float64)
+    modulus = _floats(limit) - _floats(absolute) - _floats(extinction) - _floats(k_correction)
+    return np.asarray(10.0 ** (modulus / 5.0 + _LOG_TEN_PARSECS))
 
 
 def absolute_limit(
@@ -326,12 +330,12 @@ def absolute_limit(
     extinction, k_correction : array_like
         A_b and K in magnitudes; all four broadcast together.
     """
-    distance = np.asarray(distance_mpc, dtype=np.float64)
+    distance = _floats(distance_mpc)
     log_distance = np.log10(np.where(distance > 0, distance, np.nan)) - _LOG_TEN_PARSECS
     modulus = 5.0 * log_distance
-    return np.asarray(limit - modulus - extinction - k_correction, dtype=np.float64)
+    return np.asarray(_floats(limit) - modulus - _floats(extinction) - _floats(k_correction))
 
 
 def flat_spectrum_k_correction(redshift: ArrayLike) -> Floats:
     """K-correction of a source with constant flux per unit frequency, −2.5 log₁₀(1+z)."""
-    return -2.5 * np.log10(1.0 + np.asarray(redshift, dtype=np.float64))
+    return np.asarray(-2.5 * np.log10(1.0 + _floats(redshift)))
