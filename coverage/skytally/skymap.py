@@ -178,7 +178,7 @@ class SkyMap:
         return np.where(inside, self.density_per_sr[safe], 0.0)
 
     def credible_level_at(self, position: Ints) -> Floats:
-        """Smallest credible level whose region holds each position; 1 off the map."""
+        """Probability of the smallest credible region that holds each position; 1 off the map."""
         position = np.asarray(position, dtype=np.int64)
         order, held = self._descending
         level = np.empty(order.size)

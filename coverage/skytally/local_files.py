@@ -1,0 +1,234 @@
+"""Reading files that a user named: local, of bounded size, hashed as read.
+
+Every byte that comes from outside passes here, so that a URL, a directory, a
+pipe, a file that expands a thousandfold or one that was cut short ends in one
+sentence and never in a traceback or a full memory.
+"""
+
+from __future__ import annotations
+
+import gzip
+import hashlib
+import io
+import os
+import re
+import tempfile
+import warnings
+import zlib
+from pathlib import Path
+from stat import S_ISDIR, S_ISREG
+
+from astropy.io import fits
+
+from skytally.errors import InputError, OutputError
+
+__all__ = ["expand", "is_url", "open_fits", "read_local_file", "write_whole"]
+
+_CHUNK = 1 << 22
+# Two letters at least, so that a Windows drive is a path; pathlib folds "//" into "/".
+_URL = re.compile(r"\s*[A-Za-z][A-Za-z0-9+.-]+:/")
+
+
+def is_url(text: str) -> bool:
+    """Tell whether a text names something by URL rather than by local path."""
+    return _URL.match(text) is not None
+
+
+def _size_text(size: float) -> str:
+    for unit in ("bytes", "KiB", "MiB"):
+        if size < 1024:
+            return f"{size:.0f} {unit}"
+        size /= 1024
+    return f"{size:.1f} GiB"
+
+
+def read_local_file(
+    path: str | Path, *, size_limit_bytes: int, error: type[InputError]
+) -> tuple[bytes, str]:
+    """Read a local regular file once.
+
+    Parameters
+    ----------
+    path : str or Path
+        The file; anything that looks like a URL is refused.
+    size_limit_bytes : int
+        A larger file is refused before it is read.
+    error : type
+        Which of our exceptions to raise.
+
+    Returns
+    -------
+    data : bytes
+        The file as it stands on disk.
+    sha256 : str
+        Hash of exactly these bytes, in hexadecimal.
+
+    Raises
+    ------
+    InputError
+        Of the type ``error``.
+    """
+    if is_url(str(path)):
+        raise error(
+            "this is a URL, expected a file on this machine",
+            file=path,
+            remedy="Download it first and give the path of the copy.",
+        )
+    try:
+        status = os.stat(path)
+        if not S_ISREG(status.st_mode):
+            kind = "a directory" if S_ISDIR(status.st_mode) else "not a regular file"
+            raise error(
+                f"this is {kind}, expected a file",
+                file=path,
+                remedy="Give the path of the file itself.",
+            )
+        if status.st_size > size_limit_bytes:
+            raise error(
+                f"the file holds {_size_text(status.st_size)}, "
+                f"more than the limit of {_size_text(size_limit_bytes)}",
+                file=path,
+                remedy="Check that it is the right file.",
+            )
+        with open(path, "rb") as stream:
+            data = stream.read(size_limit_bytes + 1)
+    except (OSError, ValueError) as cause:
+        reason = (getattr(cause, "strerror", None) or str(cause)).lower()
+        raise error(
+            f"the file cannot be read ({reason})",
+            file=path,
+            remedy="Check the path, which is relative to the file that names it, "
+            "and the permissions.",
+        ) from cause
+    return data, hashlib.sha256(data).hexdigest()
+
+
+def expand(
+    data: bytes,
+    path: str | Path,
+    *,
+    size_limit_bytes: int,
+    error: type[InputError],
+    must_begin: bytes = b"",
+) -> bytes:
+    """Return gzip data decompressed, any other data as it is.
+
+    Decompression stops as soon as the limit is passed, or at once where the
+    content does not begin as it must; so a small file that expands to a huge
+    one costs no more than the limit.
+
+    Raises
+    ------
+    InputError
+        Of the type ``error``: cut short, damaged, or beyond the limit.
+    """
+    if not data.startswith(b"\x1f\x8b"):
+        return data
+    whole = io.BytesIO()  # grows in place, and hands out its bytes without a copy
+    begun = False
+    try:
+        with gzip.GzipFile(fileobj=io.BytesIO(data)) as stream:
+            while chunk := stream.read(_CHUNK):
+                if not (begun or chunk.startswith(must_begin)):
+                    return chunk
+                begun = True
+                whole.write(chunk)
+                if whole.tell() > size_limit_bytes:
+                    raise error(
+                        f"the compressed file expands to more than the limit of "
+                        f"{_size_text(size_limit_bytes)}",
+                        file=path,
+                        remedy="Check that it is the right file.",
+                    )
+    except EOFError as cause:
+        raise error(
+            f"the compressed file ends too early, after {_size_text(whole.tell())} of content",
+            file=path,
+            remedy="It was cut short: copy or download it again.",
+        ) from cause
+    except (OSError, zlib.error) as cause:
+        raise error(
+            f"the compressed file is damaged ({cause})",
+            file=path,
+            remedy="Copy or download it again.",
+        ) from cause
+    return whole.getvalue()
+
+
+def open_fits(data: bytes, path: str | Path, *, error: type[InputError]) -> fits.HDUList:
+    """Open FITS held in memory without copying it, and check that it is whole.
+
+    Raises
+    ------
+    InputError
+        Of the type ``error``: not FITS, or cut short.
+    """
+    if not data.startswith(b"SIMPLE  ="):
+        seen = "an empty file" if not data else f"a file that begins with {data[:12]!r}"
+        raise error(
+            f"this is {seen}, expected FITS, plain or compressed with gzip",
+            file=path,
+            remedy="Check that it is the right file.",
+        )
+    with warnings.catch_warnings():
+        # A file cut short is warned about and then read as empty: we look ourselves.
+        warnings.simplefilter("ignore")
+        try:
+            hdus = fits.HDUList.fromstring(data)
+            count = len(hdus)  # reads the headers, which wait until asked for
+        # Damaged headers end in whatever the parser trips over.
+        except Exception as cause:
+            raise error(
+                f"the FITS headers cannot be read ({type(cause).__name__}: {cause})",
+                file=path,
+                remedy="The file is damaged or cut short: copy or download it again.",
+            ) from cause
+        for hdu in hdus[:count]:
+            if isinstance(hdu, fits.BinTableHDU):
+                _check_whole(hdu, path, error)
+    return hdus
+
+
+def _check_whole(hdu: fits.BinTableHDU, path: str | Path, error: type[InputError]) -> None:
+    """Refuse a table with fewer rows than its header announces."""
+    announced = hdu.header["NAXIS2"]
+    try:
+        found = len(hdu.data)
+        trouble = f"it ends after {found} of {announced} rows" if found < announced else None
+    except Exception as cause:  # see above
+        trouble = f"its rows cannot be read: {cause}"
+    if trouble:
+        raise error(
+            f"the table of this FITS file is not whole ({trouble})",
+            file=path,
+            remedy="The file is damaged or cut short: copy or download it again.",
+        )
+
+
+def write_whole(path: str | Path, data: bytes) -> None:
+    """Write a file so that it appears whole or not at all.
+
+    Raises
+    ------
+    OutputError
+        If it cannot be written; nothing is left behind.
+    """
+    target = Path(path)
+    try:
+        handle, beside = tempfile.mkstemp(dir=target.parent, prefix=f".{target.name}.")
+        try:
+            with os.fdopen(handle, "wb") as stream:
+                stream.write(data)
+            mask = os.umask(0)
+            os.umask(mask)
+            os.chmod(beside, 0o666 & ~mask)  # mkstemp makes a private file
+            os.replace(beside, target)
+        except BaseException:
+            os.unlink(beside)
+            raise
+    except OSError as cause:
+        raise OutputError(
+            f"the file cannot be written ({(cause.strerror or str(cause)).lower()})",
+            file=path,
+            remedy="Check that the folder exists, is writable and has room.",
+        ) from cause
