@@ -1,0 +1,505 @@
+"""One campaign: its file read and checked, and everything that it names loaded."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field, replace
+from datetime import UTC, datetime, timedelta
+from pathlib import Path
+from typing import TypeVar
+
+import numpy as np
+
+from skytally.camera_io import read_mosaic
+from skytally.cameras import Camera, CircleCamera, MosaicCamera
+from skytally.campaign_faults import Entry, key_path, parse_campaign
+from skytally.campaign_model import (
+    CameraTable,
+    CircleCameraTable,
+    DepthTable,
+    ImagesTable,
+    LogFileTable,
+    MapTable,
+    RectangleCameraTable,
+    ReportTable,
+    SettingsTable,
+    SiteTable,
+    TelescopeTable,
+    is_region_text,
+)
+from skytally.errors import CampaignError, InputError, SkytallyError
+from skytally.log_io import ImageOptions, LogOptions, read_images, read_log
+from skytally.log_regions import resolve_regions
+from skytally.magnitudes import vega_to_ab
+from skytally.moc import read_moc
+from skytally.observations import LogTable
+from skytally.region_text import parse_region
+from skytally.shapes import Shape
+from skytally.skymap import SkyMap
+from skytally.skymap_io import circle_skymap, read_skymap
+from skytally.spans import Spans
+
+__all__ = [
+    "CampaignSettings",
+    "LoadedCampaign",
+    "ReportText",
+    "Site",
+    "Telescope",
+    "load_campaign",
+]
+
+Result = TypeVar("Result")
+
+_MJD_ZERO = datetime(1858, 11, 17, tzinfo=UTC)
+
+
+@dataclass(frozen=True)
+class Site:
+    """Where a telescope stands: degrees east, degrees north, metres above sea level."""
+
+    longitude_deg: float
+    latitude_deg: float
+    height_m: float
+
+
+@dataclass(frozen=True)
+class CampaignSettings:
+    """The choices of a campaign that move a number.
+
+    Attributes
+    ----------
+    magnitude_system : str
+        System in which limits are reported, "AB" or "Vega".
+    significance : float
+        Significance (σ) to which limits are brought.
+    revisit_visits, revisit_gap_minutes : int, float
+        A place counts as revisited from so many visits on, the first and the
+        last at least so long apart.
+    bracket : float
+        Width in probability that brackets are tightened to.
+    """
+
+    magnitude_system: str = "AB"
+    significance: float = 5.0
+    revisit_visits: int = 2
+    revisit_gap_minutes: float = 30.0
+    bracket: float = 0.005
+
+
+@dataclass(frozen=True)
+class ReportText:
+    """Who signs the report: authors, their affiliations, acknowledgements."""
+
+    authors: tuple[str, ...] = ()
+    affiliations: tuple[str, ...] = ()
+    thanks: str = ""
+
+
+@dataclass(frozen=True, eq=False)
+class Telescope:
+    """One telescope with its log.
+
+    Attributes
+    ----------
+    name : str
+        As the campaign calls it.
+    site : Site or None
+        None for a spacecraft.
+    camera : CircleCamera, MosaicCamera or None
+        None where every exposure brings its own region.
+    camera_text : str
+        The camera in words.
+    log : LogTable
+        Accepted rows, and the others with their reasons.
+    depth_system, depth_significance : str, float
+        How the log's limits are to be read: "AB" or "Vega", and their σ.
+    vega_offsets : mapping of str to float
+        m_AB − m_Vega per band as the user states it.
+    mask : tuple of shapes
+        Subtracted from every footprint.
+    searchable : Spans or None
+        Every footprint is cut to it; None for no cut.
+    regions : mapping of str to Shape
+        The shape of every distinct region cell of the log.
+    """
+
+    name: str
+    site: Site | None
+    camera: Camera | None
+    camera_text: str
+    log: LogTable
+    depth_system: str = "AB"
+    depth_significance: float = 5.0
+    vega_offsets: Mapping[str, float] = field(default_factory=dict)
+    mask: tuple[Shape, ...] = ()
+    searchable: Spans | None = None
+    regions: Mapping[str, Shape] = field(default_factory=dict)
+
+
+@dataclass(frozen=True, eq=False)
+class LoadedCampaign:
+    """A campaign file and everything that it names, in memory.
+
+    Attributes
+    ----------
+    path : Path
+        The campaign file.
+    event_name, event_mjd : str, float
+        The event and its time (UTC, MJD).
+    maps : tuple of SkyMap
+        In order of issue; in the file's order where a version states no time.
+    telescopes : tuple of Telescope
+        In the file's order.
+    settings : CampaignSettings
+        Choices that move a number.
+    inputs : tuple of (role, path, sha256)
+        Every file read, its path as the campaign names it. Roles: campaign,
+        map, log, region, camera, mask, searchable.
+    notes : tuple of str
+        What was assumed or noticed.
+    report : ReportText
+        Authors and thanks.
+    """
+
+    path: Path
+    event_name: str
+    event_mjd: float
+    maps: tuple[SkyMap, ...]
+    telescopes: tuple[Telescope, ...]
+    settings: CampaignSettings
+    inputs: tuple[tuple[str, str, str], ...]
+    notes: tuple[str, ...]
+    report: ReportText = ReportText()
+
+
+def load_campaign(path: str | Path) -> LoadedCampaign:
+    """Read a campaign file and every map, log, camera and region that it names.
+
+    All faults are gathered before any is reported.
+
+    Raises
+    ------
+    CampaignError
+        If the campaign file has a fault, or several files have: all are listed.
+    MapError, LogError, RegionError, InputError
+        If a single file has a fault and all else is well.
+    """
+    path = Path(path)
+    parsed = parse_campaign(path)
+    event_mjd = None if parsed.event is None else _mjd(parsed.event.time)
+    loader = _Loader(path.parent, event_mjd, parsed.settings)
+    loader.problems.extend(parsed.problems)
+    loader.inputs.append(("campaign", path.name, parsed.sha256))
+    maps = [loader.map_version(entry) for entry in parsed.maps]
+    telescopes = [loader.telescope(entry) for entry in parsed.telescopes]
+    loader.raise_faults(path)
+    if parsed.event is None or event_mjd is None or parsed.settings is None:
+        raise AssertionError("a table is missing and no fault was listed")
+    found = tuple(m for m in maps if m is not None)
+    loader.notes.extend(_issue_notes(found, event_mjd))
+    return LoadedCampaign(
+        path=path,
+        event_name=parsed.event.name,
+        event_mjd=event_mjd,
+        maps=_in_order(found),
+        telescopes=tuple(t for t in telescopes if t is not None),
+        settings=_settings(parsed.settings),
+        inputs=tuple(dict.fromkeys(loader.inputs)),
+        notes=tuple(loader.notes),
+        report=_report(parsed.report or ReportTable()),
+    )
+
+
+class _Loader:
+    """Loads what a campaign names and gathers faults, notes and input files."""
+
+    def __init__(self, base: Path, event_mjd: float | None, settings: SettingsTable | None) -> None:
+        self.base = base
+        self.event_mjd = event_mjd
+        self.settings = settings
+        self.problems: list[str] = []
+        self.errors: list[SkytallyError] = []
+        self.inputs: list[tuple[str, str, str]] = []
+        self.notes: list[str] = []
+
+    def raise_faults(self, path: Path) -> None:
+        """Raise a lone fault of a file as it is, otherwise one error that lists all."""
+        if len(self.errors) == 1 and not self.problems:
+            raise self.errors[0]
+        if self.problems or self.errors:
+            raise CampaignError([*self.problems, *map(str, self.errors)], file=path)
+
+    def attempt(self, read: Callable[[], Result], file: str) -> Result | None:
+        """Return what a reader returns; None, with the fault kept, where it fails."""
+        try:
+            return read()
+        except SkytallyError as fault:
+            self.errors.append(fault)
+        except OSError as fault:
+            self.errors.append(
+                InputError(
+                    f"cannot be read: {fault.strerror or fault}",
+                    file=self.base / file,
+                    remedy="Check that the file is there and that you may read it.",
+                )
+            )
+        return None
+
+    def file(self, role: str, name: str, read: Callable[[Path], Result]) -> Result | None:
+        """Read one file and note it among the inputs."""
+
+        def read_and_note() -> Result:
+            path = self.base / name
+            result = read(path)
+            with path.open("rb") as stream:
+                digest = hashlib.file_digest(stream, "sha256").hexdigest()
+            self.inputs.append((role, name, digest))
+            return result
+
+        return self.attempt(read_and_note, name)
+
+    def map_version(self, entry: Entry[MapTable]) -> SkyMap | None:
+        """Load one map version."""
+        table = entry.table
+        issued = None if table.issued is None else _mjd(table.issued)
+        if table.file is not None:
+            name = table.file
+            skymap = self.attempt(
+                lambda: read_skymap(self.base / name, label=table.version, issued_mjd=issued), name
+            )
+            if skymap is None:
+                return None
+            self.inputs.append(("map", name, skymap.sha256 or ""))
+            return replace(skymap, path=name)
+        circle = table.circle
+        if circle is None:
+            return None
+        try:
+            return circle_skymap(
+                circle.ra, circle.dec, circle.radius_90, label=table.version, issued_mjd=issued
+            )
+        except SkytallyError as fault:
+            place = key_path(
+                ("map", entry.number - 1), ("circle",), {"version": table.version, "circle": {}}
+            )
+            self.problems.append(f"{place}: {fault}")
+        return None
+
+    def telescope(self, entry: Entry[TelescopeTable]) -> Telescope | None:
+        """Load one telescope: log, camera, mask and searchable region."""
+        table = entry.table
+        log, regions = self._log(table)
+        camera = self._camera(table.camera)
+        mask = [self._region(text) for text in table.mask or ()]
+        searchable = None
+        if table.searchable is not None:
+            searchable = self.file("searchable", table.searchable, read_moc)
+        if log is None:
+            return None
+        if entry.whole:
+            self._need_regions(entry, log)
+            self._need_offsets(entry, log)
+        self._note_unused(table, log)
+        depth = table.depth
+        return Telescope(
+            name=table.name,
+            site=_site(table.site),
+            camera=camera,
+            camera_text=_camera_text(camera, table),
+            log=log,
+            depth_system="AB" if depth is None else depth.system,
+            depth_significance=5.0 if depth is None else depth.significance,
+            vega_offsets={} if depth is None else dict(depth.vega_offset),
+            mask=tuple(m for m in mask if m is not None),
+            searchable=searchable,
+            regions=regions,
+        )
+
+    def _log(self, table: TelescopeTable) -> tuple[LogTable | None, dict[str, Shape]]:
+        """Load a log or images, and the regions that the rows bring."""
+        if table.log is not None:
+            name = table.log.file
+            options = _log_options(table, table.log, self.event_mjd)
+            log = self.attempt(lambda: read_log(self.base / name, table.name, options), name)
+        elif table.images is not None:
+            name = table.images.files
+            images = _image_options(table, table.images, self.event_mjd)
+            log = self.attempt(lambda: read_images(name, table.name, images, self.base), name)
+        else:
+            return None, {}
+        if log is None:
+            return None, {}
+        folder = Path(name).parent
+        log, regions, files = resolve_regions(self._named(log), self.base / folder)
+        self.inputs.append(("log", name, log.sha256))
+        self.inputs.extend((role, str(folder / file), digest) for role, file, digest in files)
+        if len(log) == 0:
+            self.notes.append(
+                f"{table.name}: no row of {name} counts ({log.read} read, all set aside)."
+            )
+        return log, regions
+
+    def _named(self, log: LogTable) -> LogTable:
+        """Name the log and its rows' files as the campaign does, not as this machine does."""
+
+        def name(file: str) -> str:
+            path = Path(file)
+            return str(path.relative_to(self.base)) if path.is_relative_to(self.base) else file
+
+        aside = tuple(replace(row, file=name(row.file)) for row in log.set_aside)
+        return replace(log, file=name(log.file), set_aside=aside)
+
+    def _camera(self, table: CameraTable | None) -> Camera | None:
+        match table:
+            case None:
+                return None
+            case RectangleCameraTable():
+                return MosaicCamera.rectangle(table.width, table.height)
+            case CircleCameraTable():
+                return CircleCamera(table.radius)
+            case _:
+                return self.file("camera", table.file, read_mosaic)
+
+    def _region(self, text: str) -> Shape | None:
+        """Load one entry of a mask."""
+        return parse_region(text) if is_region_text(text) else self.file("mask", text, read_moc)
+
+    def _need_regions(self, entry: Entry[TelescopeTable], log: LogTable) -> None:
+        """Without a camera, every accepted row must bring a region."""
+        without = np.flatnonzero(log.region == "")
+        if entry.table.camera is None and without.size:
+            first = int(without[0])
+            self.problems.append(
+                f"{_place(entry)}: no camera, and {without.size} of {len(log)} rows of {log.file} "
+                f"give no region (the first is row {log.row[first]}, {log.exposure[first]}). Give "
+                'a camera, such as camera = { shape = "circle", radius = 0.5 }, or fill the '
+                "region column."
+            )
+
+    def _need_offsets(self, entry: Entry[TelescopeTable], log: LogTable) -> None:
+        """Limits that change the magnitude system need an offset in each band."""
+        depth = entry.table.depth or DepthTable()
+        if self.settings is None or depth.system == self.settings.magnitude_system:
+            return
+        for band in sorted(set(log.band[np.isfinite(log.depth)])):
+            try:
+                vega_to_ab(band, depth.vega_offset)
+            except SkytallyError as fault:
+                self.problems.append(f"{_place(entry, 'depth')}: {fault}")
+
+    def _note_unused(self, table: TelescopeTable, log: LogTable) -> None:
+        """Note what was assumed about a telescope, and what of it had no use."""
+        if table.depth is None and np.isfinite(log.depth).any():
+            self.notes.append(
+                f"{table.name}: the campaign states no depth system; its limits are taken as AB "
+                "magnitudes at 5 sigma."
+            )
+        if table.images is not None and table.camera is not None:
+            self.notes.append(
+                f"{table.name}: the image headers give the footprints; the camera is not used."
+            )
+        if table.images is not None and table.defaults.angle is not None:
+            self.notes.append(
+                f"{table.name}: the image headers give the orientation; the default angle is not "
+                "used."
+            )
+
+
+def _place(entry: Entry[TelescopeTable], *keys: str) -> str:
+    names = {"name": entry.table.name, **dict.fromkeys(keys)}
+    return key_path(("telescope", entry.number - 1), keys, names)
+
+
+def _log_options(table: TelescopeTable, log: LogFileTable, event_mjd: float | None) -> LogOptions:
+    defaults = table.defaults
+    return LogOptions(
+        columns=log.columns.model_dump(exclude_none=True),
+        time_scale=log.time_scale,
+        accept=None if log.accept is None else tuple(log.accept),
+        ra_unit=log.ra_unit,
+        delimiter=log.delimiter,
+        decimal=log.decimal,
+        band=defaults.band,
+        duration=defaults.duration,
+        angle=defaults.angle,
+        depth=defaults.depth,
+        not_before_mjd=event_mjd,
+        use_fov=table.camera is None,
+    )
+
+
+def _image_options(
+    table: TelescopeTable, images: ImagesTable, event_mjd: float | None
+) -> ImageOptions:
+    return ImageOptions(
+        start=images.start,
+        duration=images.duration,
+        band=images.band,
+        depth=images.depth,
+        exposure=images.exposure,
+        not_before_mjd=event_mjd,
+        default_band=table.defaults.band,
+        default_duration=table.defaults.duration,
+        default_depth=table.defaults.depth,
+    )
+
+
+def _camera_text(camera: Camera | None, table: TelescopeTable) -> str:
+    if table.images is not None:
+        return "footprints from the images"
+    match table.camera:
+        case RectangleCameraTable(width=width, height=height):
+            return f"rectangle {width:g} x {height:g} deg"
+        case CircleCameraTable(radius=radius):
+            return f"circle of radius {radius:g} deg"
+        case None:
+            return "regions from the log"
+    count = len(camera.corners) if isinstance(camera, MosaicCamera) else 0
+    return f"mosaic of {count} detector{'' if count == 1 else 's'}"
+
+
+def _mjd(moment: datetime) -> float:
+    return (moment - _MJD_ZERO) / timedelta(days=1)
+
+
+def _in_order(maps: tuple[SkyMap, ...]) -> tuple[SkyMap, ...]:
+    """Sort by issue time where every version has one; versions of one time keep their order."""
+    times = [m.issued_mjd for m in maps]
+    known = [t for t in times if t is not None]
+    if len(known) < len(times):
+        return maps
+    return tuple(maps[i] for i in np.argsort(known, kind="stable"))
+
+
+def _issue_notes(maps: tuple[SkyMap, ...], event_mjd: float) -> list[str]:
+    notes = [
+        f"Map version {m.label!r} was issued before the event; check both times."
+        for m in maps
+        if m.issued_mjd is not None and m.issued_mjd < event_mjd
+    ]
+    without = [m.label for m in maps if m.issued_mjd is None]
+    if len(maps) > 1 and without:
+        notes.append(
+            f"Map version {without[0]!r} has no issue time, so the versions are taken in the "
+            f"order of the campaign file; {maps[-1].label!r} counts as the newest."
+        )
+    return notes
+
+
+def _site(table: SiteTable | None) -> Site | None:
+    return None if table is None else Site(table.longitude, table.latitude, table.height)
+
+
+def _settings(table: SettingsTable) -> CampaignSettings:
+    return CampaignSettings(
+        table.magnitude_system,
+        table.significance,
+        table.revisit.visits,
+        table.revisit.gap_minutes,
+        table.bracket,
+    )
+
+
+def _report(table: ReportTable) -> ReportText:
+    return ReportText(tuple(table.authors), tuple(table.affiliations), table.thanks)
