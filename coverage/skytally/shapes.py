@@ -6,7 +6,7 @@ from dataclasses import dataclass
 from typing import TypeAlias
 
 import numpy as np
-from numpy.typing import NDArray
+from numpy.typing import ArrayLike, NDArray
 
 from skytally.errors import RegionError
 from skytally.spans import Spans
@@ -14,7 +14,7 @@ from skytally.spans import Spans
 __all__ = ["AllOf", "AnyOf", "Circle", "NotIn", "Polygon", "Shape", "lonlat_to_vector"]
 
 
-def lonlat_to_vector(lon_deg: object, lat_deg: object) -> NDArray[np.float64]:
+def lonlat_to_vector(lon_deg: ArrayLike, lat_deg: ArrayLike) -> NDArray[np.float64]:
     """Unit vectors, shape (..., 3), of directions in degrees."""
     lon, lat = np.radians(np.asarray(lon_deg, float)), np.radians(np.asarray(lat_deg, float))
     return np.stack((np.cos(lat) * np.cos(lon), np.cos(lat) * np.sin(lon), np.sin(lat)), axis=-1)
@@ -42,7 +42,7 @@ class Circle:
             )
         if not 0 < self.radius_deg <= 180:
             raise RegionError(
-                f"a circle's radius is {self.radius_deg:g}, expected above 0 and at most 180 degrees",
+                f"a circle's radius is {self.radius_deg:g}, expected above 0 and up to 180 degrees",
                 remedy="Give the radius, not the diameter, in degrees.",
             )
 
@@ -119,18 +119,17 @@ def _crosses_itself(vector: NDArray[np.float64]) -> bool:
     plane = np.stack((vector @ east / depth, vector @ north / depth), axis=1)
     a, b = plane, np.roll(plane, -1, axis=0)
 
-    def side(p: NDArray[np.float64], q: NDArray[np.float64], r: NDArray[np.float64]) -> object:
+    def side(
+        p: NDArray[np.float64], q: NDArray[np.float64], r: NDArray[np.float64]
+    ) -> NDArray[np.float64]:
         """Twice the signed area of p, q, r for all pairs, (m, m)."""
-        return (q[..., 0] - p[..., 0]) * (r[..., 1] - p[..., 1]) - (q[..., 1] - p[..., 1]) * (
-            r[..., 0] - p[..., 0]
-        )
+        along, across = q - p, r - p
+        twice = along[..., 0] * across[..., 1] - along[..., 1] * across[..., 0]
+        return np.asarray(twice, dtype=np.float64)
 
-    first = slice(None), None
-    second = None, slice(None)
-    s1 = np.sign(side(a[first], b[first], a[second]))
-    s2 = np.sign(side(a[first], b[first], b[second]))
-    s3 = np.sign(side(a[second], b[second], a[first]))
-    s4 = np.sign(side(a[second], b[second], b[first]))
+    a1, b1, a2, b2 = a[:, None], b[:, None], a[None], b[None]
+    s1, s2 = np.sign(side(a1, b1, a2)), np.sign(side(a1, b1, b2))
+    s3, s4 = np.sign(side(a2, b2, a1)), np.sign(side(a2, b2, b1))
     meets = (s1 * s2 <= 0) & (s3 * s4 <= 0) & ~((s1 == 0) & (s2 == 0))
     row, column = np.indices((count, count))
     apart = (row - column) % count

@@ -14,6 +14,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from skytally.grouping import expand_ranges
+
 __all__ = [
     "DEG2_PER_SR",
     "FULL_SKY_SR",
@@ -318,6 +320,24 @@ class SpanTable:
             np.concatenate(([0], np.cumsum(counts))).astype(np.int64),
         )
 
+    @classmethod
+    def from_unsorted(cls, starts: Ints, stops: Ints, owner: Ints, owners: int) -> SpanTable:
+        """Gather spans in any order, disjoint within each owner; touching ones are joined."""
+        rank = np.lexsort((starts, owner))
+        starts, stops, owner = starts[rank], stops[rank], owner[rank]
+        joined = (starts[1:] == stops[:-1]) & (owner[1:] == owner[:-1])
+        opens = np.concatenate((np.ones(min(1, starts.size), dtype=bool), ~joined))
+        closes = np.concatenate((opens[1:], np.ones(min(1, starts.size), dtype=bool)))
+        offsets = np.searchsorted(owner[opens], np.arange(owners + 1))
+        return cls(starts[opens], stops[closes], offsets.astype(np.int64))
+
+    def take(self, owners: Ints) -> SpanTable:
+        """Return the table whose owner i is this table's owner ``owners[i]``."""
+        count = np.diff(self.offsets)[owners]
+        offsets = np.concatenate(([0], np.cumsum(count)))
+        _, rows = expand_ranges(self.offsets[:-1][owners], count)
+        return SpanTable(self.starts[rows], self.stops[rows], offsets.astype(np.int64))
+
     @property
     def owners(self) -> int:
         """Number of regions in the table."""
@@ -349,9 +369,7 @@ class SpanTable:
         first = np.searchsorted(region.stops, self.starts, side="right")
         last = np.searchsorted(region.starts, self.stops, side="left")
         count = np.maximum(last - first, 0)
-        row = np.repeat(np.arange(count.size), count)
-        within = np.arange(row.size) - np.repeat(np.cumsum(count) - count, count)
-        pick = first[row] + within
+        row, pick = expand_ranges(first, count)
         starts = np.maximum(self.starts[row], region.starts[pick])
         stops = np.minimum(self.stops[row], region.stops[pick])
         totals = np.concatenate(([0], np.cumsum(count)))

@@ -1,0 +1,213 @@
+"""From a loaded campaign to its results: the whole accounting in one call."""
+
+from __future__ import annotations
+
+from collections import Counter
+
+import numpy as np
+
+from skytally import __version__
+from skytally.campaign import LoadedCampaign, Site, Telescope
+from skytally.footprints import Footprints, Progress, lay_footprints
+from skytally.refinement import refine_footprints
+from skytally.results import (
+    Event,
+    ExposureInfo,
+    InputFile,
+    LogCount,
+    MapInfo,
+    Results,
+    SetAsideInfo,
+    Settings,
+    SkyData,
+    TelescopeInfo,
+)
+from skytally.skymap import SkyMap
+from skytally.spans import DEG2_PER_SR, Spans
+from skytally.tally import (
+    Coverage,
+    TallySettings,
+    maps_in_force,
+    tally_as_pointed,
+    tally_map,
+)
+from skytally.times import hours_since, mjd_to_iso
+
+__all__ = ["account"]
+
+
+def account(campaign: LoadedCampaign, progress: Progress | None = None) -> Results:
+    """Tally a campaign on every map version.
+
+    Parameters
+    ----------
+    campaign : LoadedCampaign
+        As `load_campaign` returns it.
+    progress : callable, optional
+        Called with a stage in words and the fraction of the whole that is done.
+    """
+
+    def part(low: float, high: float) -> Progress | None:
+        if progress is None:
+            return None
+        return lambda stage, done: progress(stage, low + (high - low) * done)
+
+    settings = campaign.settings
+    footprints = lay_footprints(campaign, part(0.0, 0.5))
+    footprints = refine_footprints(footprints, campaign.maps, settings.bracket, part(0.5, 0.7))
+    coverage = Coverage.build(footprints)
+    tally_settings = TallySettings(
+        campaign.event_mjd, settings.revisit_visits, settings.revisit_gap_minutes
+    )
+    rows, timelines = [], []
+    for index, skymap in enumerate(campaign.maps):
+        if progress is not None:
+            progress(f"Tallying map {skymap.label}", 0.7 + 0.25 * index / len(campaign.maps))
+        map_rows, map_timelines = tally_map(coverage, skymap, tally_settings)
+        rows.extend(map_rows)
+        timelines.extend(map_timelines)
+    if progress is not None:
+        progress("Tallying as pointed", 0.95)
+    return Results(
+        software=f"skytally {__version__}",
+        event=Event(campaign.event_name, mjd_to_iso(campaign.event_mjd), campaign.event_mjd),
+        settings=Settings(
+            settings.magnitude_system,
+            settings.significance,
+            settings.revisit_visits,
+            settings.revisit_gap_minutes,
+            settings.bracket,
+            "not corrected for Galactic extinction",
+        ),
+        inputs=tuple(InputFile(*item) for item in campaign.inputs),
+        maps=tuple(_map_info(skymap, campaign.event_mjd) for skymap in campaign.maps),
+        telescopes=tuple(
+            _telescope_info(telescope, index, footprints)
+            for index, telescope in enumerate(campaign.telescopes)
+        ),
+        logs=tuple(_log_count(telescope) for telescope in campaign.telescopes),
+        rows=tuple(rows),
+        timelines=tuple(timelines),
+        as_pointed=tuple(tally_as_pointed(coverage, campaign.maps)),
+        exposures=_exposures(coverage, campaign),
+        set_aside=tuple(
+            SetAsideInfo(a.telescope, a.file, a.row, a.exposure, a.reason, a.detail)
+            for telescope in campaign.telescopes
+            for a in telescope.log.set_aside
+        ),
+        notes=_notes(campaign),
+        sky=SkyData(campaign.maps, _covered(footprints), footprints.outlines),
+    )
+
+
+def _map_info(skymap: SkyMap, event_mjd: float) -> MapInfo:
+    issued = skymap.issued_mjd
+    return MapInfo(
+        version=skymap.label,
+        issued=None if issued is None else mjd_to_iso(issued),
+        hours=None if issued is None else hours_since(issued, event_mjd),
+        cells=int(skymap.starts.size),
+        order_max=skymap.order_max,
+        area_50_deg2=skymap.credible_region(0.5).area_deg2,
+        area_90_deg2=skymap.credible_region(0.9).area_deg2,
+        distance_mean_mpc=None,
+        distance_sd_mpc=None,
+        volume_50_mpc3=None,
+        volume_90_mpc3=None,
+        probability_without_distance=None,
+        path=skymap.path,
+        sha256=skymap.sha256,
+        notes=skymap.notes,
+    )
+
+
+def _telescope_info(telescope: Telescope, index: int, footprints: Footprints) -> TelescopeInfo:
+    mine = footprints.telescope == index
+    order = footprints.raster.order[mine]
+    order = order[order >= 0]
+    bands = footprints.observations.bands
+    used = np.unique(footprints.observations.band[footprints.observations.telescope == index])
+    site = telescope.site
+    return TelescopeInfo(
+        name=telescope.name,
+        camera=telescope.camera_text,
+        camera_area_deg2=None if telescope.camera is None else telescope.camera.area_deg2,
+        site=None
+        if site is None
+        else _site_text(site),
+        bands=tuple(bands[band] for band in used),
+        exposures=len(telescope.log),
+        footprints=int(mine.sum()),
+        order_min=int(order.min()) if order.size else None,
+        order_max=int(order.max()) if order.size else None,
+        depth_system=telescope.depth_system,
+        depth_significance=telescope.depth_significance,
+    )
+
+
+def _site_text(site: Site) -> str:
+    """Longitude east, latitude and height in words."""
+    east, north = f"{site.longitude_deg:+.4f} deg east", f"{site.latitude_deg:+.4f} deg north"
+    return f"{east}, {north}, {site.height_m:.0f} m"
+
+
+def _log_count(telescope: Telescope) -> LogCount:
+    log = telescope.log
+    return LogCount(
+        log.telescope,
+        log.file,
+        log.read,
+        len(log),
+        len(log.set_aside),
+        tuple(sorted(Counter(a.reason for a in log.set_aside).items())),
+    )
+
+
+def _exposures(coverage: Coverage, campaign: LoadedCampaign) -> tuple[ExposureInfo, ...]:
+    """Every accepted exposure, with its own probability then and now."""
+    o = coverage.observations
+    table = coverage.footprints.raster.centre
+    area = table.area_sr() * DEG2_PER_SR
+    worth = [skymap.probability.of_table(table) for skymap in campaign.maps]
+    force = maps_in_force(o.start_mjd, campaign.maps)
+
+    def number(value: float) -> float | None:
+        return float(value) if np.isfinite(value) else None
+
+    return tuple(
+        ExposureInfo(
+            telescope=o.telescopes[o.telescope[i]],
+            exposure=o.exposure[i],
+            row=int(o.row[i]),
+            start=mjd_to_iso(o.start_mjd[i]),
+            end=mjd_to_iso(o.end_mjd[i]),
+            hours=hours_since(o.start_mjd[i], campaign.event_mjd),
+            band=o.bands[o.band[i]],
+            ra_deg=number(o.ra_deg[i]),
+            dec_deg=number(o.dec_deg[i]),
+            area_deg2=float(area[o.footprint[i]]),
+            depth=number(o.depth[i]),
+            map_in_force=None if force[i] < 0 else campaign.maps[force[i]].label,
+            probability_in_force=None if force[i] < 0 else float(worth[force[i]][o.footprint[i]]),
+            probability_newest=float(worth[-1][o.footprint[i]]),
+        )
+        for i in range(len(o))
+    )
+
+
+def _notes(campaign: LoadedCampaign) -> tuple[str, ...]:
+    """Everything that a reader noticed, with whose it is."""
+    notes = list(campaign.notes)
+    notes += [f"Map {m.label}: {note}" for m in campaign.maps for note in m.notes]
+    notes += [f"{t.name}: {note}" for t in campaign.telescopes for note in t.log.notes]
+    return tuple(notes)
+
+
+def _covered(footprints: Footprints) -> tuple[Spans, ...]:
+    """Union of each telescope's footprints."""
+    table = footprints.raster.centre
+    owner = footprints.telescope[table.owner]
+    return tuple(
+        Spans.from_intervals(table.starts[owner == index], table.stops[owner == index])
+        for index in range(len(footprints.observations.telescopes))
+    )

@@ -1,0 +1,93 @@
+"""The regions that a log gives outright, read and checked before anything counts them."""
+
+from __future__ import annotations
+
+import hashlib
+from dataclasses import replace
+from pathlib import Path
+
+import numpy as np
+
+from skytally.errors import SkytallyError
+from skytally.moc import read_moc
+from skytally.observations import LogTable, SetAside
+from skytally.region_text import parse_region
+from skytally.shapes import Shape
+
+__all__ = ["is_moc_path", "resolve_regions"]
+
+_MOC_ENDINGS = (".fits", ".fits.gz", ".fit", ".json", ".txt", ".ascii", ".moc")
+
+
+def is_moc_path(text: str) -> bool:
+    """Tell whether a region cell names a MOC file rather than being region text."""
+    return text.strip().lower().endswith(_MOC_ENDINGS)
+
+
+def resolve_regions(
+    log: LogTable, base: Path
+) -> tuple[LogTable, dict[str, Shape], list[tuple[str, str, str]]]:
+    """Turn a log's region cells into shapes; rows whose region fails are set aside.
+
+    Parameters
+    ----------
+    log : LogTable
+        As read.
+    base : Path
+        Folder that relative MOC paths start from: that of the log.
+
+    Returns
+    -------
+    log : LogTable
+        Without the rows whose region cannot be used.
+    shapes : dict
+        The shape of every distinct region cell in use.
+    inputs : list of (role, path, sha256)
+        The MOC files read.
+    """
+    shapes: dict[str, Shape] = {}
+    faults: dict[str, SkytallyError] = {}
+    inputs: list[tuple[str, str, str]] = []
+    for text in sorted(set(log.region) - {""}):
+        try:
+            if is_moc_path(text):
+                path = base / text
+                shapes[text] = read_moc(path)
+                digest = hashlib.sha256(path.read_bytes()).hexdigest()
+                inputs.append(("region", text, digest))
+            else:
+                shapes[text] = parse_region(text)
+        except SkytallyError as error:
+            faults[text] = error
+    if not faults:
+        return log, shapes, inputs
+    bad = np.array([text in faults for text in log.region])
+    aside = tuple(
+        SetAside(
+            log.telescope,
+            log.file,
+            int(log.row[place]),
+            log.exposure[place],
+            "unreadable",
+            str(faults[log.region[place]]),
+            "region",
+        )
+        for place in np.flatnonzero(bad)
+    )
+    columns = {
+        name: getattr(log, name)[~bad]
+        for name in (
+            "row",
+            "exposure",
+            "ra_deg",
+            "dec_deg",
+            "angle_deg",
+            "start_mjd",
+            "duration_s",
+            "band",
+            "depth",
+            "extinction",
+            "region",
+        )
+    }
+    return replace(log, **columns, set_aside=log.set_aside + aside), shapes, inputs
