@@ -1,0 +1,309 @@
+"""The command line: parse, call, print, and turn every exception into an exit code.
+
+Data goes to standard output; messages and progress go to standard error.
+Heavy modules are imported by the commands that need them, so that help and
+usage errors answer at once.
+"""
+
+from __future__ import annotations
+
+import os
+import signal
+import sys
+import time
+import traceback
+import warnings
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
+from pathlib import Path
+from types import FrameType
+from typing import TYPE_CHECKING, Annotated, Any, NoReturn
+
+import typer
+from typer.core import TyperGroup
+
+from skytally import __version__
+from skytally.errors import OutputError, SkytallyError, UsageError
+
+if TYPE_CHECKING:
+    from skytally.footprints import Progress
+    from skytally.results import Results
+
+__all__ = ["app", "main"]
+
+EXIT_INPUT = 2
+EXIT_UNEXPECTED = 70  # EX_SOFTWARE of sysexits.h
+EXIT_INTERRUPTED = 130
+EXIT_TERMINATED = 143
+
+LISTED_FAULTS = 10
+SECONDS_BEFORE_BAR = 1.0
+
+_HELP = "Account for completed observations of an event with an uncertain position."
+_EPILOG = (
+    "Exit codes: 0 done; 2 bad input or usage; 3 an output could not be made; "
+    "70 a fault of skytally itself; 130 stopped by Ctrl-C."
+)
+
+
+class _Commands(TyperGroup):
+    """The one place where exceptions become messages and exit codes."""
+
+    def invoke(self, ctx: Any) -> Any:
+        try:
+            with warnings.catch_warnings():
+                if not _debugging():
+                    warnings.simplefilter("ignore")
+                return super().invoke(ctx)
+        except (SkytallyError, OSError, MemoryError, KeyboardInterrupt) as error:
+            _show_traceback()
+            code, message = _explain(error)
+        except Exception as error:
+            if isinstance(error, typer.Exit) or _is_usage_error(error):
+                raise
+            _show_traceback()
+            code, message = EXIT_UNEXPECTED, _ask_to_report(error)
+        _say(message)
+        raise typer.Exit(code)
+
+
+app = typer.Typer(
+    cls=_Commands,
+    help=_HELP,
+    epilog=_EPILOG,
+    no_args_is_help=True,
+    add_completion=False,
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+)
+
+CampaignPath = Annotated[
+    str, typer.Argument(metavar="CAMPAIGN", help="Campaign file (TOML).", show_default=False)
+]
+OutDir = Annotated[
+    Path, typer.Option("--out", "-o", metavar="DIR", help="Folder to write to.", show_default=False)
+]
+
+
+def main() -> NoReturn:
+    """Run the command line and leave the process with its exit code."""
+    for stream in (sys.stdout, sys.stderr):
+        if hasattr(stream, "reconfigure"):
+            stream.reconfigure(errors="backslashreplace")
+    signal.signal(signal.SIGTERM, _leave)
+    try:
+        app(prog_name="skytally")
+    except KeyboardInterrupt:
+        _say("Stopped.")
+        sys.exit(EXIT_INTERRUPTED)
+    sys.exit(0)
+
+
+def _leave(number: int, frame: FrameType | None) -> NoReturn:
+    # An exception, unlike the default, lets half-made outputs be cleared away.
+    raise SystemExit(EXIT_TERMINATED)
+
+
+def _version(wanted: bool) -> None:
+    if wanted:
+        _print(f"skytally {__version__}\n")
+        raise typer.Exit
+
+
+@app.callback()
+def _common(
+    version: Annotated[
+        bool,
+        typer.Option("--version", callback=_version, is_eager=True, help="Show the version."),
+    ] = False,
+) -> None:
+    pass
+
+
+@app.command("new")
+def new(
+    directory: Annotated[
+        Path, typer.Argument(metavar="DIR", help="Folder to make.", show_default=False)
+    ],
+) -> None:
+    """Write a commented sample campaign to start from."""
+    from skytally.scaffold import write_campaign
+
+    written = write_campaign(directory)
+    _say(f"Wrote {len(written)} files to {directory}; change {written[0]} into your own night.")
+    _say(f"It runs as it stands: skytally report {written[0]} --out {directory / 'report'}")
+
+
+@app.command("report")
+def report(
+    campaign: CampaignPath,
+    out: OutDir,
+    json: Annotated[bool, typer.Option("--json", help="Print tally.json as well.")] = False,
+) -> None:
+    """Write the report and its data files (the main job)."""
+    from skytally.outputs import write_outputs
+    from skytally.serialise import to_json
+    from skytally.wording import headline, to_ascii
+
+    results = _tally(campaign, "report.html lists them all")
+    written = write_outputs(results, out)
+    answer = headline(results)
+    if not (sys.stdout.encoding or "").lower().startswith("utf"):
+        answer = to_ascii(answer)
+    _print(to_json(results) if json else answer + "\n")
+    _say(f"Wrote {len(written)} files to {out}")
+
+
+@app.command("tally")
+def tally(
+    campaign: CampaignPath,
+    map: Annotated[
+        str | None,
+        typer.Option("--map", metavar="VERSION", help="Map version; the newest if not given."),
+    ] = None,
+    json: Annotated[bool, typer.Option("--json", help="Print JSON instead of tables.")] = False,
+) -> None:
+    """Show the numbers on the terminal."""
+    from skytally.serialise import select_map, to_json
+    from skytally.terminal import render_tally
+
+    results = _tally(campaign, "tally --json lists them all")
+    if map is not None:
+        results = select_map(results, map)
+    _print(to_json(results) if json else render_tally(results, sys.stdout))
+
+
+@app.command("regions")
+def regions(campaign: CampaignPath, out: OutDir) -> None:
+    """Write what each telescope covered as MOC files."""
+    from skytally.outputs import write_regions
+
+    results = _tally(campaign, "tally --json lists them all")
+    written = write_regions(results, out)
+    _say(f"Wrote {len(written)} files to {out}")
+
+
+def _tally(campaign: str, rest: str) -> Results:
+    """Load a campaign and account for it, with progress and with the faults of its rows."""
+    from skytally.account import account
+    from skytally.campaign import load_campaign
+    from skytally.local_files import is_url
+
+    if is_url(campaign):
+        raise UsageError(
+            f"{campaign!r} is a URL, expected the path of a file on this machine",
+            remedy="Download the campaign and what it names first; nothing is fetched.",
+        )
+    loaded = load_campaign(campaign)
+    with _progress() as progress:
+        results = account(loaded, progress)
+    faults = [
+        f"{item.file}, row {item.row}: {item.detail}"
+        for telescope in loaded.telescopes
+        for item in telescope.log.set_aside
+        if item.is_fault
+    ]
+    _list(faults, "row set aside", "rows set aside", rest)
+    _list([f"Note: {note}" for note in results.notes], "note", "notes", rest)
+    return results
+
+
+def _list(lines: Sequence[str], one: str, many: str, rest: str) -> None:
+    for line in lines[:LISTED_FAULTS]:
+        _say(line)
+    more = len(lines) - LISTED_FAULTS
+    if more > 0:
+        _say(f"and {more} more {one if more == 1 else many}; {rest}")
+
+
+@contextmanager
+def _progress() -> Iterator[Progress | None]:
+    """Offer a progress callback that draws a bar once the work has lasted a second."""
+    if not sys.stderr.isatty():
+        yield None
+        return
+    from rich.console import Console
+    from rich.progress import BarColumn, Progress, TaskProgressColumn, TextColumn
+
+    bar = Progress(
+        TextColumn("{task.description}", markup=False),
+        BarColumn(),
+        TaskProgressColumn(),
+        console=Console(stderr=True),
+        transient=True,
+    )
+    task = bar.add_task("", total=1.0)
+    began = time.monotonic()
+
+    def advance(stage: str, fraction: float) -> None:
+        bar.update(task, description=_clean(stage), completed=fraction)
+        if not bar.live.is_started and time.monotonic() - began > SECONDS_BEFORE_BAR:
+            bar.start()
+
+    try:
+        yield advance
+    finally:
+        if bar.live.is_started:
+            bar.stop()
+
+
+def _print(text: str) -> None:
+    """Write data to standard output, all of it."""
+    try:
+        sys.stdout.write(text)
+        sys.stdout.flush()
+    except OSError as error:
+        # What is still buffered would fail again, loudly, when Python exits.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        if isinstance(error, BrokenPipeError):
+            raise typer.Exit(0) from None
+        raise OutputError(
+            f"standard output could not be written ({_reason(error)})",
+            remedy="Send it somewhere with room.",
+        ) from error
+
+
+def _say(message: str) -> None:
+    typer.echo(_clean(message), err=True)
+
+
+def _clean(text: str) -> str:
+    """Strip control characters: names from a log must not steer the terminal."""
+    return "".join(c for c in text if c == "\n" or c.isprintable())
+
+
+def _explain(error: BaseException) -> tuple[int, str]:
+    if isinstance(error, SkytallyError):
+        return error.exit_code, f"Error: {error}"
+    if isinstance(error, KeyboardInterrupt):
+        return EXIT_INTERRUPTED, "Stopped."
+    if isinstance(error, OSError):
+        place = f"{error.filename}: " if error.filename is not None else ""
+        return EXIT_INPUT, f"Error: {place}it could not be read ({_reason(error)})."
+    return EXIT_INPUT, "Error: memory ran out. Split the campaign, or use a larger machine."
+
+
+def _ask_to_report(error: Exception) -> str:
+    return (
+        f"skytally met a fault of its own ({type(error).__name__}: {error}). "
+        "Nothing is wrong with what you asked. Please report it to the developers with the "
+        "command and, if you can, the campaign; SKYTALLY_DEBUG=1 shows where it happened."
+    )
+
+
+def _reason(error: OSError) -> str:
+    return (error.strerror or str(error)).lower()
+
+
+def _debugging() -> bool:
+    return os.environ.get("SKYTALLY_DEBUG", "") not in {"", "0"}
+
+
+def _show_traceback() -> None:
+    if _debugging():
+        traceback.print_exc()
+
+
+def _is_usage_error(error: Exception) -> bool:
+    """Tell whether the parser raised it; the parser words these and ends with 2 itself."""
+    return any(base.__name__ == "ClickException" for base in type(error).__mro__)

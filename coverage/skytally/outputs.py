@@ -1,0 +1,360 @@
+"""The output folder: every file whole or none, and nobody else's file touched.
+
+Everything is rendered into a staging folder on the same file system first. A
+new folder then appears with one rename. In an existing folder each file is
+replaced with one rename, and what was there comes back if any of them fails.
+The manifest says which files are ours.
+"""
+
+from __future__ import annotations
+
+import errno
+import hashlib
+import io
+import json
+import os
+import platform
+import re
+import secrets
+import shutil
+import unicodedata
+from collections.abc import Callable, Iterable, Iterator
+from contextlib import contextmanager, suppress
+from dataclasses import asdict
+from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
+
+from skytally import __version__
+from skytally.circular import render_circular
+from skytally.errors import OutputError
+from skytally.moc import write_moc
+from skytally.report import render_html, render_pdf
+from skytally.results import Results
+from skytally.serialise import to_json, to_table
+from skytally.spans import Spans
+
+__all__ = ["MANIFEST_FORMAT", "file_stems", "write_outputs", "write_regions"]
+
+MANIFEST_FORMAT = "skytally/manifest"
+MANIFEST = "manifest.json"
+MANIFEST_LIMIT_BYTES = 16 * 1024 * 1024
+
+_LIBRARIES = (
+    "numpy",
+    "scipy",
+    "astropy",
+    "astropy-healpix",
+    "mocpy",
+    "jinja2",
+    "weasyprint",
+    "matplotlib",
+    "pydantic",
+)
+_REPORT_FILES = frozenset(
+    {"report.html", "report.pdf", "circular.txt", "tally.json", "tally.ecsv", MANIFEST}
+)
+_REGION_FILE = re.compile(r"(regions/)?[a-z0-9][a-z0-9-]{0,79}\.fits")
+# Names that a file cannot have on every system, and "all", which is the union.
+_RESERVED = frozenset(
+    {"all", "con", "prn", "aux", "nul"}
+    | {f"{port}{digit}" for port in ("com", "lpt") for digit in range(10)}
+)
+_NO_ROOM = {errno.ENOSPC, errno.EDQUOT, errno.EFBIG}
+_NO_RIGHT = {errno.EACCES, errno.EPERM, errno.EROFS}
+
+
+def write_outputs(results: Results, out_dir: str | Path) -> tuple[Path, ...]:
+    """Write the report in all its forms, the regions and the manifest.
+
+    Parameters
+    ----------
+    results : Results
+        What to write.
+    out_dir : path
+        A folder: new, empty, or one that an earlier report was written to.
+
+    Returns
+    -------
+    tuple of Path
+        The files written, manifest last.
+
+    Raises
+    ------
+    OutputError
+        If a file cannot be written or would replace one that is not ours; then
+        nothing has changed. If only the PDF cannot be made, everything else
+        is written first.
+    """
+    failures: list[OutputError] = []
+
+    def render(folder: Path) -> None:
+        _put(folder / "report.html", render_html(results))
+        _put(folder / "circular.txt", render_circular(results))
+        _put(folder / "tally.json", to_json(results))
+        text = io.StringIO()
+        to_table(results).write(text, format="ascii.ecsv")
+        _put(folder / "tally.ecsv", text.getvalue())
+        (folder / "regions").mkdir()
+        _render_regions(results, folder / "regions")
+        try:
+            _put(folder / "report.pdf", render_pdf(results))
+        except OutputError as error:
+            failures.append(error)
+
+    written = _publish(Path(out_dir), "report", results, render)
+    if failures:
+        raise failures[0]
+    return written
+
+
+def write_regions(results: Results, out_dir: str | Path) -> tuple[Path, ...]:
+    """Write a MOC per telescope, one of all together, and the manifest.
+
+    Arguments, result and errors as in `write_outputs`.
+    """
+    return _publish(
+        Path(out_dir), "regions", results, lambda folder: _render_regions(results, folder)
+    )
+
+
+def file_stems(names: Iterable[str]) -> tuple[str, ...]:
+    """Return a file name without suffix for each name, in order.
+
+    Lower-case letters, digits and hyphens only, so no name leaves its folder,
+    and no two are the same on a system that ignores case.
+    """
+    used = set(_RESERVED)
+    stems = []
+    for name in names:
+        plain = unicodedata.normalize("NFKD", name).encode("ascii", "ignore").decode()
+        base = re.sub(r"[^a-z0-9]+", "-", plain.lower())[:60].strip("-") or "telescope"
+        stem, count = base, 1
+        while stem in used:
+            count += 1
+            stem = f"{base}-{count}"
+        used.add(stem)
+        stems.append(stem)
+    return tuple(stems)
+
+
+def _render_regions(results: Results, folder: Path) -> None:
+    covered = results.sky.covered
+    for stem, spans in zip(file_stems(t.name for t in results.telescopes), covered, strict=True):
+        write_moc(spans, folder / f"{stem}.fits")
+    write_moc(Spans.empty().union(*covered), folder / "all.fits")
+
+
+def _put(path: Path, content: str | bytes) -> None:
+    # A file name that is no valid text reaches us with lone surrogates.
+    data = content.encode("utf-8", "backslashreplace") if isinstance(content, str) else content
+    path.write_bytes(data)
+
+
+def _publish(
+    out_dir: Path, command: str, results: Results, render: Callable[[Path], None]
+) -> tuple[Path, ...]:
+    """Render into a staging folder, then move everything into place."""
+    with _plain_errors(out_dir):
+        out_dir = Path(os.path.abspath(out_dir))
+        if (out_dir.exists() or out_dir.is_symlink()) and not out_dir.is_dir():
+            raise OutputError(
+                "it exists and is not a folder",
+                file=out_dir,
+                remedy="Choose another folder with --out.",
+            )
+        with _staging(out_dir) as staging:
+            new = staging / "new"
+            new.mkdir()
+            render(new)
+            names = _files_in(new)
+            _put(new / MANIFEST, _manifest(new, names, command, results))
+            names.append(MANIFEST)
+            _sync(new)
+            if out_dir.exists():
+                _replace(out_dir, names, command, staging)
+            else:
+                new.rename(out_dir)
+            _sync_folder(out_dir.parent)
+    return tuple(out_dir / name for name in names)
+
+
+@contextmanager
+def _staging(out_dir: Path) -> Iterator[Path]:
+    """Make a folder on the same file system; leave no trace of it, whatever happens."""
+    made = [folder for folder in out_dir.parents if not folder.exists()]
+    place = out_dir if out_dir.exists() else out_dir.parent
+    place.mkdir(parents=True, exist_ok=True)
+    staging = place / f".skytally-{secrets.token_hex(6)}"
+    try:
+        staging.mkdir()
+        yield staging
+    finally:
+        shutil.rmtree(staging, ignore_errors=True)
+        for folder in made:
+            with suppress(OSError):
+                folder.rmdir()  # Fails, as it should, where the output now stands.
+
+
+def _replace(out_dir: Path, names: list[str], command: str, staging: Path) -> None:
+    """Move the staged files into an existing folder, or leave it as it was."""
+    ours = _our_files(out_dir, command)
+    for name in names:
+        _refuse_foreign(out_dir, name, ours)
+    old = staging / "old"
+    new = staging / "new"
+    # Stale files go first and the manifest comes next, so that even after a
+    # power cut the manifest in place lists every file of ours.
+    stale = sorted(name for name in ours - set(names) if (out_dir / name).is_file())
+    order = sorted(names, key=lambda name: name != MANIFEST)
+    done: list[str] = []
+    try:
+        for name in stale:
+            (old / name).parent.mkdir(parents=True, exist_ok=True)
+            done.append(name)
+            os.replace(out_dir / name, old / name)
+        for name in order:
+            target = out_dir / name
+            (old / name).parent.mkdir(parents=True, exist_ok=True)
+            target.parent.mkdir(exist_ok=True)
+            if target.exists():
+                _keep(target, old / name)
+            done.append(name)
+            os.replace(new / name, target)
+    except BaseException:
+        for name in done:
+            with suppress(OSError):
+                if (old / name).exists():
+                    os.replace(old / name, out_dir / name)
+                elif name in names and not (new / name).exists():
+                    (out_dir / name).unlink()
+        raise
+    for folder in {(out_dir / name).parent for name in [*stale, *names]}:
+        with suppress(OSError):
+            folder.rmdir()  # Succeeds only where the last stale file has gone.
+        _sync_folder(folder)
+
+
+def _keep(target: Path, backup: Path) -> None:
+    """Give the old file a second name; copy it where the file system has no links."""
+    try:
+        os.link(target, backup)
+    except OSError:
+        shutil.copy2(target, backup)
+
+
+def _refuse_foreign(out_dir: Path, name: str, ours: frozenset[str]) -> None:
+    """Raise if writing this file would touch something that is not ours."""
+    target = out_dir / name
+    parent = target.parent
+    if parent != out_dir and os.path.lexists(parent):
+        if parent.is_symlink() or not parent.is_dir():
+            raise OutputError(
+                "it exists and is not a folder that skytally made",
+                file=parent,
+                remedy="Move it away, or choose another folder with --out.",
+            )
+        if not os.access(parent, os.W_OK | os.X_OK):
+            raise PermissionError(errno.EACCES, os.strerror(errno.EACCES), str(parent))
+    if not os.path.lexists(target):
+        return
+    if name not in ours or target.is_symlink() or not target.is_file():
+        raise OutputError(
+            "a file of this name exists that skytally did not write, and it was left as it is",
+            file=target,
+            remedy="Move it away, or choose another folder with --out.",
+        )
+
+
+def _our_files(out_dir: Path, command: str) -> frozenset[str]:
+    """Return the names that an earlier manifest of ours lists; empty without one."""
+    path = out_dir / MANIFEST
+    try:
+        if path.is_symlink() or path.stat().st_size > MANIFEST_LIMIT_BYTES:
+            return frozenset()
+        found = json.loads(path.read_bytes())
+        if found["format"] != MANIFEST_FORMAT:
+            return frozenset()
+        names = {str(entry["path"]) for entry in found["outputs"]}
+        earlier = str(found["command"])
+    except (FileNotFoundError, NotADirectoryError):
+        return frozenset()
+    except (ValueError, KeyError, TypeError, RecursionError):
+        return frozenset()
+    if earlier != command:
+        raise OutputError(
+            f"the folder holds the output of 'skytally {earlier}'",
+            file=out_dir,
+            remedy="Choose another folder with --out.",
+        )
+    # A manifest is a file that anybody may have edited: believe only our own kind of names.
+    kept = {n for n in names if n in _REPORT_FILES or _REGION_FILE.fullmatch(n)}
+    return frozenset(kept | {MANIFEST})
+
+
+def _files_in(folder: Path) -> list[str]:
+    return sorted(p.relative_to(folder).as_posix() for p in folder.rglob("*") if p.is_file())
+
+
+def _manifest(folder: Path, names: list[str], command: str, results: Results) -> str:
+    """Return the manifest: what went in, what came out, and what made it."""
+    libraries = {"python": platform.python_version()}
+    for name in _LIBRARIES:
+        with suppress(PackageNotFoundError):
+            libraries[name] = version(name)
+    outputs = []
+    for name in names:
+        data = (folder / name).read_bytes()
+        digest = hashlib.sha256(data).hexdigest()
+        outputs.append({"path": name, "bytes": len(data), "sha256": digest})
+    content = {
+        "format": MANIFEST_FORMAT,
+        "format_version": 1,
+        "command": command,
+        "software": {"name": "skytally", "version": __version__},
+        "libraries": libraries,
+        "event": asdict(results.event),
+        "settings": asdict(results.settings),
+        "inputs": [asdict(item) for item in results.inputs],
+        "outputs": outputs,
+    }
+    return json.dumps(content, indent=1, allow_nan=False, ensure_ascii=False) + "\n"
+
+
+def _sync(folder: Path) -> None:
+    """Force every file below a folder, and the folders, on to the disk."""
+    for path in folder.rglob("*"):
+        if path.is_file():
+            with path.open("rb") as stream:
+                os.fsync(stream.fileno())
+        else:
+            _sync_folder(path)
+    _sync_folder(folder)
+
+
+def _sync_folder(folder: Path) -> None:
+    # Some systems cannot open or sync a folder; the files themselves are safe by then.
+    with suppress(OSError):
+        handle = os.open(folder, os.O_RDONLY)
+        try:
+            os.fsync(handle)
+        finally:
+            os.close(handle)
+
+
+@contextmanager
+def _plain_errors(out_dir: Path) -> Iterator[None]:
+    """Turn what the operating system says into an `OutputError` with a remedy."""
+    try:
+        yield
+    except OSError as error:
+        reason = (error.strerror or str(error)).lower()
+        remedy = "Choose another folder with --out."
+        if error.errno in _NO_ROOM:
+            remedy = "Free some space, or choose a folder on another disk with --out."
+        elif error.errno in _NO_RIGHT:
+            remedy = "Allow writing there, or choose another folder with --out."
+        raise OutputError(
+            f"the output could not be written ({reason}); nothing there was changed",
+            file=out_dir,
+            remedy=remedy,
+        ) from error

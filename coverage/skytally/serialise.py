@@ -1,0 +1,174 @@
+"""Results as data for other programs: a dictionary, JSON text, a table.
+
+The JSON format is ``skytally/tally``, version 1. Keys come in a fixed order,
+numbers with all their digits, and what is missing is null, so that equal
+results give equal bytes. ``rows`` is one tidy table; ``findings`` is where a
+check of the logs puts what it noticed and is empty where no check was run.
+"""
+
+from __future__ import annotations
+
+import json
+from dataclasses import fields, is_dataclass, replace
+from typing import Any, get_type_hints
+
+import numpy as np
+from astropy import units as u
+from astropy.table import MaskedColumn, Table
+
+from skytally.errors import UsageError
+from skytally.results import Results
+from skytally.tally import TallyRow
+
+__all__ = ["FORMAT", "FORMAT_VERSION", "select_map", "to_dict", "to_json", "to_table"]
+
+FORMAT = "skytally/tally"
+FORMAT_VERSION = 1
+
+# Column of the rows table: unit (None: a count, a fraction or text) and meaning.
+_COLUMNS: dict[str, tuple[u.UnitBase | None, str]] = {
+    "map": (None, "map version"),
+    "telescope": (None, "telescope; missing: all"),
+    "band": (None, "band; missing: all"),
+    "night": (None, "date of the evening; missing: all"),
+    "exposures": (None, "number of exposures"),
+    "area_deg2": (u.deg**2, "area of the union"),
+    "area_low_deg2": (u.deg**2, "area certainly inside"),
+    "area_high_deg2": (u.deg**2, "area possibly inside"),
+    "area_in_50_deg2": (u.deg**2, "area inside the 50 % region"),
+    "area_in_90_deg2": (u.deg**2, "area inside the 90 % region"),
+    "probability": (None, "probability of the union"),
+    "probability_low": (None, "probability certainly inside"),
+    "probability_high": (None, "probability possibly inside"),
+    "probability_error": (None, "estimated error of the centre rule"),
+    "probability_in_50": (None, "probability covered inside the 50 % region"),
+    "probability_in_90": (None, "probability covered inside the 90 % region"),
+    "probability_unique": (None, "probability that no other telescope covered"),
+    "probability_credit": (None, "probability shared equally among the telescopes that covered it"),
+    "probability_revisited": (None, "probability covered repeatedly, as the settings say"),
+    "depth_min": (u.mag, "shallowest limiting magnitude"),
+    "depth_median": (u.mag, "median limiting magnitude"),
+    "depth_max": (u.mag, "deepest limiting magnitude"),
+    "depth_over_50": (u.mag, "depth reached over 50 % of the covered probability"),
+    "depth_over_90": (u.mag, "depth reached over 90 % of the covered probability"),
+    "depth_stacked_over_50": (u.mag, "stacked depth over 50 % of the covered probability"),
+    "depth_stacked_over_90": (u.mag, "stacked depth over 90 % of the covered probability"),
+    "volume_90_covered_mpc3": (u.Mpc**3, "volume of the 90 % credible volume that was covered"),
+    "first_start": (None, "start of the first exposure, UTC"),
+    "last_end": (None, "end of the last exposure, UTC"),
+}
+
+
+def select_map(results: Results, version: str) -> Results:
+    """Return the results with the maps, rows and timelines of one map version only.
+
+    Raises
+    ------
+    UsageError
+        If there is no such version; the message lists those there are.
+    """
+    versions = [m.version for m in results.maps]
+    if version not in versions:
+        raise UsageError(
+            f"there is no map version {version!r}",
+            remedy=f"Choose one of: {', '.join(map(repr, versions))}.",
+        )
+    kept = versions.index(version)
+    return replace(
+        results,
+        maps=(results.maps[kept],),
+        rows=tuple(row for row in results.rows if row.map == version),
+        timelines=tuple(line for line in results.timelines if line.map == version),
+        sky=replace(results.sky, maps=(results.sky.maps[kept],)),
+    )
+
+
+def _plain(value: Any) -> Any:
+    """Reduce to what JSON knows; dataclasses become dictionaries in field order."""
+    if is_dataclass(value):
+        return {f.name: _plain(getattr(value, f.name)) for f in fields(value)}
+    if isinstance(value, tuple | list):
+        return [_plain(item) for item in value]
+    if isinstance(value, np.generic):
+        return value.item()
+    return value
+
+
+def to_dict(results: Results) -> dict[str, Any]:
+    """Return the results as plain dictionaries, lists, numbers and text.
+
+    The geometry (``Results.sky``) is left out: the regions have files of
+    their own.
+    """
+    logs = [{**_plain(log), "reasons": dict(log.reasons)} for log in results.logs]
+    return {
+        "format": FORMAT,
+        "format_version": FORMAT_VERSION,
+        "software": results.software,
+        "inputs": _plain(results.inputs),
+        "event": _plain(results.event),
+        "settings": _plain(results.settings),
+        "maps": _plain(results.maps),
+        "telescopes": _plain(results.telescopes),
+        "logs": logs,
+        "rows": _plain(results.rows),
+        "timelines": _plain(results.timelines),
+        "as_pointed": _plain(results.as_pointed),
+        "exposures": _plain(results.exposures),
+        "set_aside": _plain(results.set_aside),
+        "findings": [],
+        "notes": list(results.notes),
+    }
+
+
+def to_json(results: Results) -> str:
+    """Return the results as JSON text, one table row per line.
+
+    Raises
+    ------
+    ValueError
+        If a number is not finite: results say None for what is missing.
+    """
+    parts = []
+    for key, value in to_dict(results).items():
+        if isinstance(value, list) and value:
+            text = "[\n  " + ",\n  ".join(_dump(item) for item in value) + "\n ]"
+        else:
+            text = _dump(value)
+        parts.append(f' "{key}": {text}')
+    return "{\n" + ",\n".join(parts) + "\n}\n"
+
+
+def _dump(value: Any) -> str:
+    return json.dumps(value, allow_nan=False, ensure_ascii=False)
+
+
+def to_table(results: Results) -> Table:
+    """Return the tidy rows as an astropy table with units; missing values are masked.
+
+    The magnitude system and significance, the event and the software stand in
+    the table's metadata.
+    """
+    hints = get_type_hints(TallyRow)
+    table = Table()
+    for name, (unit, description) in _COLUMNS.items():
+        values = [getattr(row, name) for row in results.rows]
+        kind = next(k for k in (str, int, float) if hints[name] in (k, k | None))
+        table[name] = MaskedColumn(
+            [kind() if value is None else value for value in values],
+            mask=[value is None for value in values],
+            dtype=kind,
+            unit=unit,
+            description=description,
+        )
+    table.meta = {
+        "format": FORMAT,
+        "format_version": FORMAT_VERSION,
+        "software": results.software,
+        "event": results.event.name,
+        "event_time": results.event.time,
+        "magnitude_system": results.settings.magnitude_system,
+        "significance": results.settings.significance,
+        "extinction": results.settings.extinction,
+    }
+    return table

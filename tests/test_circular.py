@@ -1,0 +1,171 @@
+"""The circular: 7 bits, 72 columns, sentences, and the numbers of the results."""
+
+from __future__ import annotations
+
+import re
+from dataclasses import replace
+
+import pytest
+from skytally.circular import render_circular
+from skytally.results import LogCount, Results
+from skytally.tally import TallyRow
+from small_results import small_results, small_row
+
+# Nouns after "1 " that end in s, a percentage that rounds to nothing, and words of Python.
+BAD = re.compile(r"\b1 [a-z]+s\b|(?<![\d.])0\.0+ %|\bNone\b|\bnan\b|\binf\b|[ \t]+$", re.M)
+
+
+def many(count: int) -> Results:
+    first = small_results().exposures[0]
+    exposures = tuple(replace(first, row=i, exposure=f"h{i}") for i in range(count))
+    return small_results(exposures=exposures)
+
+
+def nothing() -> Results:
+    rows = tuple(
+        small_row(
+            **{
+                **dict.fromkeys(
+                    (
+                        "depth_min",
+                        "depth_median",
+                        "depth_max",
+                        "depth_over_50",
+                        "depth_over_90",
+                        "first_start",
+                        "last_end",
+                    )
+                ),
+                **{
+                    name: 0
+                    for name in TallyRow.__dataclass_fields__
+                    if name.startswith(("area", "probability", "exposures"))
+                },
+                "map": version,
+            }
+        )
+        for version in ("1 first", "2 update")
+    )
+    base = small_results()
+    return small_results(
+        rows=rows,
+        exposures=(),
+        timelines=(),
+        as_pointed=(),
+        telescopes=tuple(replace(t, exposures=0, bands=()) for t in base.telescopes),
+        logs=(LogCount("Heron", "logs/heron.csv", 1, 0, 1, (("before the event", 1),)),),
+    )
+
+
+def off_the_map() -> Results:
+    none = {n: 0.0 for n in TallyRow.__dataclass_fields__ if n.startswith("probability")}
+    rows = [replace(r, **none, area_in_50_deg2=0.0, area_in_90_deg2=0.0) for r in nothing().rows]
+    return small_results(
+        rows=tuple(replace(small_row(), **none, area_in_90_deg2=0.0, map=r.map) for r in rows)
+    )
+
+
+def small_probability() -> Results:
+    tiny = {"probability": 4e-6, "probability_low": 0.0, "probability_high": 0.05}
+    return small_results(rows=tuple(replace(r, **tiny) for r in small_results().rows))
+
+
+def odd_names() -> Results:
+    base = small_results()
+    long = "Heron " + "q" * 200
+    heron = replace(base.telescopes[0], name=long, bands=("Ångström–wide " * 3,))
+    plover = replace(base.telescopes[1], name="Plöver\x1b[31m\n\tβ", camera="field of 1° ± 2″ ≥ σ²")
+    rename = {"Heron": long, "Plover": plover.name}
+    return small_results(
+        event=replace(base.event, name="Łantærn ﬁve 七"),
+        telescopes=(heron, plover),
+        rows=tuple(replace(r, telescope=rename.get(r.telescope or "")) for r in base.rows),
+        exposures=tuple(
+            replace(e, telescope=rename[e.telescope], band="Ångström–wide") for e in base.exposures
+        ),
+    )
+
+
+def one_of_each() -> Results:
+    base = small_results()
+    return small_results(
+        maps=base.maps[-1:],
+        telescopes=base.telescopes[1:],
+        exposures=base.exposures[2:],
+        rows=tuple(
+            replace(r, exposures=1)
+            for r in base.rows
+            if r.map == "2 update" and r.telescope in (None, "Plover") and r.band in (None, "r")
+        ),
+        logs=(LogCount("Plover", "logs/plover.csv", 1, 1, 0, ()),),
+    )
+
+
+CASES = {
+    "plain": small_results,
+    "30 exposures": lambda: many(30),
+    "31 exposures": lambda: many(31),
+    "no exposure": nothing,
+    "off the map": off_the_map,
+    "small probability": small_probability,
+    "odd names": odd_names,
+    "one of each": one_of_each,
+}
+
+
+@pytest.mark.parametrize("case", CASES)
+def test_seven_bits_seventy_two_columns_and_clean_words(case: str) -> None:
+    text = render_circular(CASES[case]())
+    assert text.isascii()
+    assert all(c == "\n" or c.isprintable() for c in text)
+    assert max(map(len, text.splitlines())) <= 72
+    assert text.endswith(".\n")
+    assert BAD.search(text) is None, BAD.search(text)
+
+
+def test_names_are_transliterated_not_lost() -> None:
+    text = render_circular(odd_names())
+    assert "Lantaern five ?" in text
+    assert "Plover[31m?" in text
+    assert "Angstrom-wide" in text
+    assert "field of 1 deg +/- 2" in text
+
+
+def test_the_numbers_are_those_of_the_results() -> None:
+    text = " ".join(render_circular(small_results()).split())
+    for wanted in (
+        "33.33 % (33.25-33.41 %) of the probability",  # 1/3 in [0.3325, 0.3341]
+        "16.67 % (16.62-16.71 %) of the probability",  # half of it, bounds rounded outwards
+        "5.75 deg^2 (5.74-5.76 deg^2)",
+        "4.25 deg^2 in the 90 % region, which is 5.3 % of its area",  # 4.25 / 80
+        "14.4 h after the event",
+        "Heron, g: 20.90-21.40 mag, median 21.25 mag (2 exposures)",
+        "Plover, r: no limits in the log (1 exposure)",
+        "AB, 5 sigma, not corrected for Galactic extinction",
+        "The logs hold 5 rows: 3 used, 2 set aside (1 not accepted and 1 unreadable).",
+    ):
+        assert wanted in text
+    assert text.index("33.33 %") < text.index("16.67 %"), "the newest version comes first"
+
+
+def test_few_exposures_are_listed_and_many_summed_by_night() -> None:
+    few, many_of_them = render_circular(many(30)), render_circular(many(31))
+    assert few.count("2031-03-14 19:43:12    14.4  g") == 30
+    assert "Night" not in few
+    assert "19:43:12" not in many_of_them.replace("began at", "")
+    night = next(line for line in many_of_them.splitlines() if line.startswith("2031-03-14  "))
+    assert " ".join(night.split()) == "2031-03-14 3 5.75 deg^2 33.33 % (33.25-33.41 %)"
+
+
+def test_nothing_covered_is_said_in_words() -> None:
+    assert "none of the probability" in render_circular(off_the_map())
+    text = " ".join(render_circular(nothing()).split())
+    assert "No exposure of Lantern 7 could be used" in text
+    assert "The logs hold 1 row: 0 used, 1 set aside (1 before the event)." in text
+
+
+def test_one_version_is_not_called_the_newest() -> None:
+    text = render_circular(one_of_each())
+    assert "The only map version" in text
+    assert "earlier" not in text
+    assert "one telescope has" in " ".join(text.split())
