@@ -8,6 +8,7 @@ so that any region sees the map's own pixels; where little lies they are not.
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import replace
 from functools import cache
 
@@ -16,16 +17,17 @@ from astropy.coordinates import CartesianRepresentation, SkyCoord
 from astropy_healpix import healpix_to_xyz, neighbours, xyz_to_healpix
 from numpy.typing import NDArray
 
+from skytally.grouping import expand_ranges
 from skytally.skymap import DistanceLayer, Floats
 from skytally.skymap_table import MapCells
 from skytally.spans import LINE_ORDER, UNIT_SR, Ints, Spans, cell_to_span, spans_to_cells
 
 __all__ = ["galactic_to_line"]
 
-# A cell that holds less probability than this is not refined further: thousands
-# of them along a region's edge, each off by a tenth, stay far below 0.0005.
-_REFINE_ABOVE = 2e-6
-_REFINE_ORDERS = 2
+# A source cell is matched by cells one order finer for each of these amounts of
+# probability that it exceeds: the cells along a region's edge, each off by a
+# tenth, then stay far below 0.0005 together, and their number below a few million.
+_FINER_ABOVE = (2e-6, 2e-5, 2e-4, 2e-3, 2e-2)
 # Sub-cells are two orders deeper than the cells, which must fit on the line.
 _DEEPEST = LINE_ORDER - 2
 _CHUNK = 1 << 18
@@ -53,20 +55,13 @@ def galactic_to_line(cells: MapCells) -> tuple[MapCells, float]:
     residual : float
         Sum of the probability after resampling, relative to before, minus one.
     """
-    before = float(np.sum((cells.stops - cells.starts) * UNIT_SR * cells.density_per_sr))
-    order, cell = _covering_cells(cells)
-    limit = np.minimum(order + _REFINE_ORDERS, _DEEPEST)
+    amount = (cells.stops - cells.starts) * UNIT_SR * cells.density_per_sr
+    before = float(np.sum(amount))
     done: list[tuple[Ints, Ints, Floats, Ints]] = []
-    depth = 1
-    while cell.size:
+    for order, cell, depth in _covering_cells(cells, amount / before):
         density, row = _sample(cells, order, cell, depth)
-        amount = density * (4.0 ** (LINE_ORDER - order) * UNIT_SR / before)
-        split = (amount > _REFINE_ABOVE) & (order < limit)
-        keep = ~split & (density > 0)
-        done.append((order[keep], cell[keep], density[keep], row[keep]))
-        order, cell, limit = np.repeat(order[split] + 1, 4), cell[split], np.repeat(limit[split], 4)
-        cell = ((cell << 2)[:, np.newaxis] + np.arange(4)).reshape(-1)
-        depth = 2
+        held = density > 0
+        done.append((order[held], cell[held], density[held], row[held]))
     order, cell, density, row = (np.concatenate(part) for part in zip(*done))
     starts, stops = cell_to_span(order, cell)
     rank = np.argsort(starts)
@@ -103,37 +98,46 @@ def _cells_at(order: int, vector: Floats) -> Ints:
     return np.asarray(xyz_to_healpix(*vector, 1 << order, order="nested"), dtype=np.int64)
 
 
-def _covering_cells(cells: MapCells) -> tuple[Ints, Ints]:
-    """Cells of the line that may hold probability, each as fine as the map is there."""
+def _covering_cells(cells: MapCells, share: Floats) -> Iterator[tuple[Ints, Ints, int]]:
+    """Yield order, cells of the line that may hold probability, and how deep to sample them.
+
+    Each is at least as fine as the map is there, finer where a source cell's
+    share of the probability is large; no two overlap.
+    """
     sizes = np.left_shift(np.int64(1), 2 * np.arange(LINE_ORDER + 1, dtype=np.int64))
-    source_order = LINE_ORDER - np.searchsorted(sizes, cells.stops - cells.starts)
+    own_order = LINE_ORDER - np.searchsorted(sizes, cells.stops - cells.starts)
+    finer = np.searchsorted(_FINER_ABOVE, share)
+    level = np.minimum(own_order + finer, _DEEPEST)
     claimed = Spans.empty()
-    orders: list[Ints] = []
-    numbers: list[Ints] = []
-    for level in np.unique(source_order)[::-1]:
-        own = np.right_shift(cells.starts[source_order == level], 2 * (LINE_ORDER - level))
-        # A cell lies within the one a level coarser that holds its centre, and its neighbours.
-        coarse = max(int(level) - 1, 0)
-        hit = np.unique(_cells_at(coarse, _galactic_axes() @ _centres(int(level), own)))
-        with np.errstate(invalid="ignore"):  # where a neighbour is missing it is −1
-            around = np.asarray(neighbours(hit, 1 << coarse, order="nested")).reshape(-1)
-        near = np.union1d(hit, around[around >= 0])
-        region = Spans.from_cells(coarse, near)
-        order, cell = spans_to_cells(region - claimed)
-        claimed = claimed | region
-        order, cell = _split_to(order, cell, min(int(level), _DEEPEST))
-        orders.append(order)
-        numbers.append(cell)
-    return np.concatenate(orders), np.concatenate(numbers)
+    for deepest in np.unique(level)[::-1]:
+        for depth, kind in ((2, finer > 0), (1, finer == 0)):
+            ours = (level == deepest) & kind
+            own = np.right_shift(cells.starts[ours], 2 * (LINE_ORDER - own_order[ours]))
+            region = _surroundings(*_split_to(own_order[ours], own, int(deepest)), int(deepest))
+            order, cell = spans_to_cells(region - claimed)
+            claimed = claimed | region
+            yield *_split_to(order, cell, int(deepest)), depth
+
+
+def _surroundings(order: Ints, cell: Ints, level: int) -> Spans:
+    """Region of the line that holds Galactic cells, all at one level or all deeper."""
+    # A cell lies within the one a level coarser that holds its centre, and its neighbours.
+    coarse = max(level - 1, 0)
+    hits = [
+        np.unique(_cells_at(coarse, _galactic_axes() @ _centres(int(k), cell[order == k])))
+        for k in np.unique(order)
+    ]
+    hit = np.unique(np.concatenate([*hits, np.empty(0, dtype=np.int64)]))
+    with np.errstate(invalid="ignore"):  # where a neighbour is missing it is −1
+        around = np.asarray(neighbours(hit, 1 << coarse, order="nested")).reshape(-1)
+    return Spans.from_cells(coarse, np.union1d(hit, around[around >= 0]))
 
 
 def _split_to(order: Ints, cell: Ints, level: int) -> tuple[Ints, Ints]:
     """Split the cells that are coarser than a level."""
     down = 2 * np.maximum(level - order, 0)
-    count = np.left_shift(np.int64(1), down)
-    first = np.repeat(np.left_shift(cell, down), count)
-    within = np.arange(first.size) - np.repeat(np.cumsum(count) - count, count)
-    return np.repeat(np.maximum(order, level), count), first + within
+    row, children = expand_ranges(np.left_shift(cell, down), np.left_shift(np.int64(1), down))
+    return np.maximum(order, level)[row], children
 
 
 def _sample(cells: MapCells, order: Ints, cell: Ints, depth: int) -> tuple[Floats, Ints]:
