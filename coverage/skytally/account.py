@@ -8,6 +8,7 @@ import numpy as np
 
 from skytally import __version__
 from skytally.campaign import LoadedCampaign, Site, Telescope
+from skytally.covered import Coverage, TallySettings
 from skytally.footprints import Footprints, Progress, lay_footprints
 from skytally.refinement import refine_footprints
 from skytally.results import (
@@ -24,13 +25,7 @@ from skytally.results import (
 )
 from skytally.skymap import SkyMap
 from skytally.spans import DEG2_PER_SR, Spans
-from skytally.tally import (
-    Coverage,
-    TallySettings,
-    maps_in_force,
-    tally_as_pointed,
-    tally_map,
-)
+from skytally.tally import maps_in_force, tally_as_pointed, tally_maps
 from skytally.times import hours_since, mjd_to_iso
 
 __all__ = ["account"]
@@ -59,13 +54,9 @@ def account(campaign: LoadedCampaign, progress: Progress | None = None) -> Resul
     tally_settings = TallySettings(
         campaign.event_mjd, settings.revisit_visits, settings.revisit_gap_minutes
     )
-    rows, timelines = [], []
-    for index, skymap in enumerate(campaign.maps):
-        if progress is not None:
-            progress(f"Tallying map {skymap.label}", 0.7 + 0.25 * index / len(campaign.maps))
-        map_rows, map_timelines = tally_map(coverage, skymap, tally_settings)
-        rows.extend(map_rows)
-        timelines.extend(map_timelines)
+    if progress is not None:
+        progress("Tallying", 0.75)
+    rows, timelines = tally_maps(coverage, campaign.maps, tally_settings)
     if progress is not None:
         progress("Tallying as pointed", 0.95)
     return Results(
@@ -132,9 +123,7 @@ def _telescope_info(telescope: Telescope, index: int, footprints: Footprints) ->
         name=telescope.name,
         camera=telescope.camera_text,
         camera_area_deg2=None if telescope.camera is None else telescope.camera.area_deg2,
-        site=None
-        if site is None
-        else _site_text(site),
+        site=None if site is None else _site_text(site),
         bands=tuple(bands[band] for band in used),
         exposures=len(telescope.log),
         footprints=int(mine.sum()),

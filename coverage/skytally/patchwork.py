@@ -11,6 +11,7 @@ remains per patch is its measure (probability, area), which is summed per set.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -79,11 +80,12 @@ class Patchwork:
         """Number of distinct sets."""
         return self.offsets.size - 1
 
-    @property
+    @cached_property
     def set_of_member(self) -> Ints:
         """The set that each entry of ``members`` belongs to, shape (m,)."""
         return np.repeat(np.arange(self.sets), np.diff(self.offsets))
 
+    @cached_property
     def area_sr(self) -> Floats:
         """Solid angle of each set's patches, shape (sets,)."""
         length = (self.stops - self.starts).astype(np.float64)

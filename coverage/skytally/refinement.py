@@ -18,17 +18,17 @@ from numpy.typing import NDArray
 from skytally.footprints import Footprints, Progress, clip_raster
 from skytally.patchwork import Patchwork
 from skytally.raster import Raster, cell_width_rad, rasterise, stack_rasters
+from skytally.selection import selections
 from skytally.skymap import SkyMap
 from skytally.spans import UNIT_SR, Ints, Spans, SpanTable
-from skytally.tally import selections
 
 __all__ = ["BUDGET_CELLS", "refine_footprints"]
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
 
-# Pairs of piece and cell that refining may look at, a second or two of work.
-BUDGET_CELLS = 8_000_000
+# Pairs of piece and cell that refining may look at, about a second of work.
+BUDGET_CELLS = 4_000_000
 _ORDERS_A_ROUND = 2
 _ROUNDS = 2
 _ORDER_LIMIT = 22

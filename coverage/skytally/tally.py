@@ -4,31 +4,25 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
-from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
 
-from skytally.footprints import Footprints
-from skytally.grouping import expand_ranges, sum_by
-from skytally.magnitudes import stack_groups
-from skytally.observations import Observations
-from skytally.patchwork import Patchwork
+from skytally.covered import Chosen, Coverage, TallySettings
+from skytally.depth import depth_numbers
+from skytally.grouping import sum_by
+from skytally.selection import selections
 from skytally.skymap import Measure, SkyMap
 from skytally.spans import DEG2_PER_SR, Ints
 from skytally.times import hours_since, mjd_to_iso
 
 __all__ = [
     "AsPointed",
-    "Coverage",
-    "Selection",
     "TallyRow",
-    "TallySettings",
     "Timeline",
     "maps_in_force",
-    "selections",
     "tally_as_pointed",
-    "tally_map",
+    "tally_maps",
 ]
 
 Floats = NDArray[np.float64]
@@ -116,242 +110,102 @@ class AsPointed:
     probability_newest: float
 
 
-@dataclass(frozen=True)
-class TallySettings:
-    """What counts as a revisit, and when the event was."""
-
-    event_mjd: float
-    revisit_visits: int
-    revisit_gap_minutes: float
-
-
-@dataclass(frozen=True, eq=False)
-class Selection:
-    """A choice of exposures: all, or those of a telescope, a band, both, or a night.
-
-    Attributes
-    ----------
-    telescope, band, night : str or None
-        None means all.
-    chosen : bool array, shape (exposures,)
-        The exposures selected.
-    peers : int64 array, shape (exposures,)
-        Number of the selection of the same kind that each exposure belongs to:
-        telescopes among telescopes, bands among bands, …; uniqueness and
-        credit are counted among these.
-    peer : int
-        This selection's own number among its peers.
-    """
-
-    telescope: str | None
-    band: str | None
-    night: str | None
-    chosen: Bools
-    peers: Ints
-    peer: int
-
-
-def selections(observations: Observations) -> list[Selection]:
-    """List the selections of DESIGN section 6 in the order of the rows."""
-    o = observations
-    both = o.telescope * max(len(o.bands), 1) + o.band
-    found = [
-        Selection(None, None, None, np.ones(len(o), dtype=bool), np.zeros(len(o), dtype=int), 0)
-    ]
-    for index, name in enumerate(o.telescopes):
-        found.append(Selection(name, None, None, o.telescope == index, o.telescope, index))
-    for index, name in enumerate(o.bands):
-        found.append(Selection(None, name, None, o.band == index, o.band, index))
-    for peer in np.unique(both):
-        telescope, band = divmod(int(peer), len(o.bands))
-        found.append(
-            Selection(o.telescopes[telescope], o.bands[band], None, both == peer, both, int(peer))
-        )
-    for index, name in enumerate(o.nights):
-        found.append(Selection(None, None, name, o.night == index, o.night, index))
-    return found
-
-
-@dataclass(frozen=True, eq=False)
-class Coverage:
-    """What was covered by what, before any map is looked at.
-
-    Attributes
-    ----------
-    footprints : Footprints
-        Exposures and their rasterised footprints.
-    centre, inner, outer : Patchwork
-        The patchwork by the centre rule, and those of the two brackets.
-    """
-
-    footprints: Footprints
-    centre: Patchwork
-    inner: Patchwork
-    outer: Patchwork
-
-    @classmethod
-    def build(cls, footprints: Footprints) -> Coverage:
-        """Cut the line once for each of the three regions."""
-        raster = footprints.raster
-        return cls(
-            footprints,
-            Patchwork.build(raster.centre),
-            Patchwork.build(raster.inner),
-            Patchwork.build(raster.outer),
-        )
-
-    @property
-    def observations(self) -> Observations:
-        """The exposures."""
-        return self.footprints.observations
-
-    @cached_property
-    def visits(self) -> tuple[Ints, Ints]:
-        """Pairs of set and exposure, sets rising and exposures in time order within each."""
-        by_footprint = np.argsort(self.observations.footprint, kind="stable")
-        count = np.bincount(
-            self.observations.footprint, minlength=self.footprints.raster.order.size
-        )
-        before = np.cumsum(count) - count
-        members = self.centre.members
-        row, place = expand_ranges(before[members], count[members])
-        exposure, group = by_footprint[place], self.centre.set_of_member[row]
-        order = np.argsort(group * max(len(self.observations), 1) + exposure)
-        return group[order], exposure[order]
-
-
 @dataclass(frozen=True, eq=False)
 class _Sets:
-    """What each set of the patchwork is worth on one map, arrays of shape (sets,)."""
+    """What each set of the patchworks is worth on one map.
+
+    Attributes
+    ----------
+    probability, probability_50, probability_90, area_50_sr, area_90_sr
+        Of each set of the centre rule's patchwork, shape (sets,).
+    inner, outer : float64 arrays
+        Probability of each set of the two brackets' patchworks.
+    strip : float64 array, shape (footprints,)
+        Probability in each footprint's undecided cells.
+    """
 
     probability: Floats
     probability_50: Floats
     probability_90: Floats
-    area_sr: Floats
     area_50_sr: Floats
     area_90_sr: Floats
+    inner: Floats
+    outer: Floats
+    strip: Floats
 
     @classmethod
-    def of(cls, patchwork: Patchwork, skymap: SkyMap) -> _Sets:
-        region_50, region_90 = skymap.credible_region(0.5), skymap.credible_region(0.9)
+    def of(cls, coverage: Coverage, skymap: SkyMap) -> _Sets:
+        raster, whole = coverage.footprints.raster, skymap.probability
+        strip = whole.of_table(raster.outer) - whole.of_table(raster.inner)
         return cls(
-            patchwork.measure(skymap.probability),
-            patchwork.measure(skymap.restricted(0.5)),
-            patchwork.measure(skymap.restricted(0.9)),
-            patchwork.area_sr(),
-            patchwork.measure(Measure.area(region_50)),
-            patchwork.measure(Measure.area(region_90)),
+            coverage.centre.measure(whole),
+            coverage.centre.measure(skymap.restricted(0.5)),
+            coverage.centre.measure(skymap.restricted(0.9)),
+            coverage.centre.measure(Measure.area(skymap.credible_region(0.5))),
+            coverage.centre.measure(Measure.area(skymap.credible_region(0.9))),
+            coverage.inner.measure(whole),
+            coverage.outer.measure(whole),
+            np.maximum(strip, 0.0),
         )
 
 
-@dataclass(frozen=True, eq=False)
-class _Chosen:
-    """The part of a coverage that one selection sees, whatever the map."""
-
-    selection: Selection
-    covered: Bools
-    covered_inner: Bools
-    covered_outer: Bools
-    footprints: Bools
-    revisited: Bools
-    visit_set: Ints
-    visit_exposure: Ints
-    first_end: Floats  # per set; inf where not covered
-
-
-def _choose(coverage: Coverage, selection: Selection, settings: TallySettings) -> _Chosen:
-    footprints = coverage.footprints.of(selection.chosen)
-    group, exposure = coverage.visits
-    mine = selection.chosen[exposure]
-    group, exposure = group[mine], exposure[mine]
-    sets = coverage.centre.sets
-    count = np.bincount(group, minlength=sets)
-    start, end = coverage.observations.start_mjd, coverage.observations.end_mjd
-    first_start, last_start = np.full(sets, np.inf), np.full(sets, -np.inf)
-    first_end = np.full(sets, np.inf)
-    np.minimum.at(first_start, group, start[exposure])
-    np.maximum.at(last_start, group, start[exposure])
-    np.minimum.at(first_end, group, end[exposure])
-    gap = settings.revisit_gap_minutes / 1440.0
-    # A nanosecond of slack: MJD in double precision resolves no better than a microsecond.
-    apart = np.where(count > 0, last_start, 0.0) - np.where(count > 0, first_start, 0.0)
-    return _Chosen(
-        selection,
-        count > 0,
-        coverage.inner.covered_by(footprints),
-        coverage.outer.covered_by(footprints),
-        footprints,
-        (count >= settings.revisit_visits) & (apart >= gap - 1e-11),
-        group,
-        exposure,
-        first_end,
-    )
-
-
-def tally_map(
-    coverage: Coverage,
-    skymap: SkyMap,
-    settings: TallySettings,
-    chosen: Sequence[Selection] | None = None,
+def tally_maps(
+    coverage: Coverage, maps: Sequence[SkyMap], settings: TallySettings
 ) -> tuple[list[TallyRow], list[Timeline]]:
-    """Tally every selection on one map version."""
-    wanted = selections(coverage.observations) if chosen is None else list(chosen)
-    sets = _Sets.of(coverage.centre, skymap)
-    inner = coverage.inner.measure(skymap.probability), coverage.inner.area_sr()
-    outer = coverage.outer.measure(skymap.probability), coverage.outer.area_sr()
-    strip = _boundary_probability(coverage, skymap)
-    shares: dict[int, _Shares] = {}
+    """Tally every selection on every map version, map by map."""
+    chosen = [Chosen.of(coverage, s, settings) for s in selections(coverage.observations)]
     rows, timelines = [], []
-    for selection in wanted:
-        part = _choose(coverage, selection, settings)
-        if id(selection.peers) not in shares:
-            shares[id(selection.peers)] = _Shares.of(coverage, selection.peers, sets.probability)
-        low, high = (
-            float(m[0][c].sum())
-            for m, c in ((inner, part.covered_inner), (outer, part.covered_outer))
-        )
-        area_low, area_high = (
-            float(m[1][c].sum() * DEG2_PER_SR)
-            for m, c in ((inner, part.covered_inner), (outer, part.covered_outer))
-        )
-        share = shares[id(selection.peers)]
-        c = part.covered
-        error = _centre_rule_error(coverage, strip, part.footprints, high - low)
-        depth = _depths(coverage, part, sets.probability)
-        o = coverage.observations
-        rows.append(
-            TallyRow(
-                map=skymap.label,
-                telescope=selection.telescope,
-                band=selection.band,
-                night=selection.night,
-                exposures=int(selection.chosen.sum()),
-                area_deg2=float(sets.area_sr[c].sum() * DEG2_PER_SR),
-                area_low_deg2=area_low,
-                area_high_deg2=area_high,
-                area_in_50_deg2=float(sets.area_50_sr[c].sum() * DEG2_PER_SR),
-                area_in_90_deg2=float(sets.area_90_sr[c].sum() * DEG2_PER_SR),
-                probability=float(sets.probability[c].sum()),
-                probability_low=low,
-                probability_high=high,
-                probability_error=error,
-                probability_in_50=float(sets.probability_50[c].sum()),
-                probability_in_90=float(sets.probability_90[c].sum()),
-                probability_unique=share.unique.get(selection.peer, 0.0),
-                probability_credit=share.credit.get(selection.peer, 0.0),
-                probability_revisited=float(sets.probability[part.revisited].sum()),
-                **depth,
-                volume_90_covered_mpc3=None,
-                first_start=_iso(o.start_mjd[selection.chosen], np.min),
-                last_end=_iso(o.end_mjd[selection.chosen], np.max),
-            )
-        )
-        timelines.append(_timeline(part, skymap.label, sets, settings.event_mjd))
+    for skymap in maps:
+        sets = _Sets.of(coverage, skymap)
+        shares: dict[int, _Shares] = {}
+        for part in chosen:
+            peers = part.selection.peers
+            if id(peers) not in shares:
+                shares[id(peers)] = _Shares.of(coverage, peers, sets.probability)
+            rows.append(_row(coverage, part, skymap.label, sets, shares[id(peers)]))
+            timelines.append(_timeline(coverage, part, skymap.label, sets, settings.event_mjd))
     return rows, timelines
 
 
-def _iso(mjd: Floats, pick: object) -> str | None:
-    return mjd_to_iso(float(pick(mjd))) if mjd.size else None  # type: ignore[operator]
+def _row(coverage: Coverage, part: Chosen, label: str, sets: _Sets, share: _Shares) -> TallyRow:
+    """Sum what a map gives each set over the sets that a selection covers."""
+    selection, o = part.selection, coverage.observations
+    covered = part.covered
+    low = float(sets.inner[part.covered_inner].sum())
+    high = float(sets.outer[part.covered_outer].sum())
+
+    def deg2(area_sr: Floats, where: Bools) -> float:
+        return float(area_sr[where].sum() * DEG2_PER_SR)
+
+    return TallyRow(
+        map=label,
+        telescope=selection.telescope,
+        band=selection.band,
+        night=selection.night,
+        exposures=int(selection.chosen.sum()),
+        area_deg2=deg2(coverage.centre.area_sr, covered),
+        area_low_deg2=deg2(coverage.inner.area_sr, part.covered_inner),
+        area_high_deg2=deg2(coverage.outer.area_sr, part.covered_outer),
+        area_in_50_deg2=deg2(sets.area_50_sr, covered),
+        area_in_90_deg2=deg2(sets.area_90_sr, covered),
+        probability=float(sets.probability[covered].sum()),
+        probability_low=low,
+        probability_high=high,
+        probability_error=_centre_rule_error(coverage, sets.strip, part.footprints, high - low),
+        probability_in_50=float(sets.probability_50[covered].sum()),
+        probability_in_90=float(sets.probability_90[covered].sum()),
+        probability_unique=share.unique.get(selection.peer, 0.0),
+        probability_credit=share.credit.get(selection.peer, 0.0),
+        probability_revisited=float(sets.probability[part.revisited].sum()),
+        **depth_numbers(coverage, part, sets.probability),
+        volume_90_covered_mpc3=None,
+        first_start=_iso(o.start_mjd[selection.chosen].min(initial=np.inf)),
+        last_end=_iso(o.end_mjd[selection.chosen].max(initial=-np.inf)),
+    )
+
+
+def _iso(mjd: float) -> str | None:
+    return mjd_to_iso(float(mjd)) if np.isfinite(mjd) else None
 
 
 @dataclass(frozen=True)
@@ -376,13 +230,6 @@ class _Shares:
         return cls({p: float(unique[p]) for p in numbers}, {p: float(credit[p]) for p in numbers})
 
 
-def _boundary_probability(coverage: Coverage, skymap: SkyMap) -> Floats:
-    """Probability in each footprint's undecided cells at its working order, (footprints,)."""
-    raster = coverage.footprints.raster
-    p = skymap.probability
-    return np.maximum(p.of_table(raster.outer) - p.of_table(raster.inner), 0.0)
-
-
 def _centre_rule_error(coverage: Coverage, strip: Floats, footprints: Bools, width: float) -> float:
     """Estimate twice the standard error of a union's probability by the centre rule.
 
@@ -400,71 +247,14 @@ def _centre_rule_error(coverage: Coverage, strip: Floats, footprints: Bools, wid
     return min(2 * spread * min(width / total, 1.0), width) if width > 0 else 0.0
 
 
-def _depths(coverage: Coverage, part: _Chosen, probability: Floats) -> dict[str, float | None]:
-    """Depth of a selection; magnitudes of different bands are never mixed."""
-    o = coverage.observations
-    names = (
-        "depth_min",
-        "depth_median",
-        "depth_max",
-        "depth_over_50",
-        "depth_over_90",
-        "depth_stacked_over_50",
-        "depth_stacked_over_90",
-    )
-    chosen = part.selection.chosen
-    depth = o.depth[chosen]
-    depth = depth[np.isfinite(depth)]
-    if depth.size == 0 or np.unique(o.band[chosen]).size != 1:
-        return dict.fromkeys(names)
-    weight = probability[part.covered]
-    single = np.full(coverage.centre.sets, -np.inf)
-    value = o.depth[part.visit_exposure]
-    known = np.isfinite(value)
-    np.maximum.at(single, part.visit_set[known], value[known])
-    stacked = _stacked(o, part, coverage.centre.sets)
-    numbers = [
-        float(depth.min()),
-        float(np.median(depth)),
-        float(depth.max()),
-        *(_reached(single[part.covered], weight, share) for share in (0.5, 0.9)),
-        *(_reached(stacked[part.covered], weight, share) for share in (0.5, 0.9)),
-    ]
-    return dict(zip(names, numbers))
-
-
-def _stacked(o: Observations, part: _Chosen, sets: int) -> Floats:
-    """Deepest stack of each set: exposures of one telescope, band and night; −inf without."""
-    known = np.isfinite(o.depth[part.visit_exposure])
-    group, exposure = part.visit_set[known], part.visit_exposure[known]
-    kind = (o.telescope * max(len(o.bands), 1) + o.band) * max(len(o.nights), 1) + o.night
-    key = group * (int(kind.max(initial=0)) + 1) + kind[exposure]
-    order = np.argsort(key, kind="stable")
-    first = np.flatnonzero(np.diff(key[order], prepend=-1))
-    best = np.full(sets, -np.inf)
-    if first.size:
-        np.maximum.at(best, group[order][first], stack_groups(o.depth[exposure[order]], first))
-    return best
-
-
-def _reached(depth: Floats, weight: Floats, share: float) -> float | None:
-    """Depth that at least a share of the weight reaches; None if so much has no limit."""
-    total = float(weight.sum())
-    if total <= 0:
-        return None
-    order = np.argsort(-depth)
-    held = np.cumsum(weight[order])
-    place = min(int(np.searchsorted(held, share * total * (1 - 1e-12))), depth.size - 1)
-    value = float(depth[order[place]])
-    return value if np.isfinite(value) else None
-
-
-def _timeline(part: _Chosen, label: str, sets: _Sets, event_mjd: float) -> Timeline:
+def _timeline(
+    coverage: Coverage, part: Chosen, label: str, sets: _Sets, event_mjd: float
+) -> Timeline:
     """Cumulate what was first completed at each exposure end."""
     covered = np.flatnonzero(part.covered)
-    ends, step = np.unique(part.first_end[covered], return_inverse=True)
+    ends, step = np.unique(part.first_end_mjd[covered], return_inverse=True)
     probability = np.cumsum(sum_by(step, sets.probability[covered], ends.size))
-    area = np.cumsum(sum_by(step, sets.area_sr[covered], ends.size)) * DEG2_PER_SR
+    area = np.cumsum(sum_by(step, coverage.centre.area_sr[covered], ends.size)) * DEG2_PER_SR
     return Timeline(
         label,
         part.selection.telescope,
