@@ -91,7 +91,8 @@ def read_local_file(
                 remedy="Check that it is the right file.",
             )
         with open(path, "rb") as stream:
-            data = stream.read(size_limit_bytes + 1)
+            # Reading by the limit would ask for that much memory.
+            data = stream.read(status.st_size)
     except (OSError, ValueError) as cause:
         reason = (getattr(cause, "strerror", None) or str(cause)).lower()
         raise error(

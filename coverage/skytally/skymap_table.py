@@ -309,6 +309,9 @@ def _read_flat(table: _Table, name: str) -> tuple[Ints, Ints, Floats, Ints, int]
     cell = rows if pixels is None else pixels[rows]
     if not _ORDERINGS[ordering]:
         cell = _ring_to_nested(cell, order)
+    if not _is_sorted(cell):
+        rank = np.argsort(cell)
+        cell, rows = cell[rank], rows[rank]
     density = _density(table, name, values[rows].astype(np.float64), float(_cell_area_sr(order)))
     return *cell_to_span(order, cell), density, rows, order
 
@@ -411,7 +414,8 @@ def _distance(table: _Table, rows: Ints) -> DistanceLayer | None:
             raise table.fault(f"the unit is {unit}, expected {wanted}", "Correct TUNIT.", name)
         column = values[rows].astype(np.float64)
         column[column < _MISSING_BELOW] = np.nan
-        columns[name] = column * float(unit.to(wanted))
+        column *= float(unit.to(wanted))
+        columns[name] = column
     return DistanceLayer(
         columns["distmu"],
         columns["distsigma"],
