@@ -207,3 +207,14 @@ def small_results(**changes: Any) -> Results:
         sky=SkyData((whole_sky, whole_sky), (heron, plover), ((), ())),
     )
     return replace(base, **changes)
+
+
+def renamed(results: Results, *names: str) -> Results:
+    """Call the telescopes something else, wherever they are named."""
+    new = dict(zip((t.name for t in results.telescopes), names, strict=True))
+    return replace(
+        results,
+        telescopes=tuple(replace(t, name=new[t.name]) for t in results.telescopes),
+        rows=tuple(replace(r, telescope=new.get(r.telescope or "")) for r in results.rows),
+        exposures=tuple(replace(e, telescope=new[e.telescope]) for e in results.exposures),
+    )

@@ -9,7 +9,7 @@ import pytest
 from skytally.circular import render_circular
 from skytally.results import LogCount, Results
 from skytally.tally import TallyRow
-from small_results import small_results, small_row
+from small_results import renamed, small_results, small_row
 
 # Nouns after "1 " that end in s, a percentage that rounds to nothing, and words of Python.
 BAD = re.compile(r"\b1 [a-z]+s\b|(?<![\d.])0\.0+ %|\bNone\b|\bnan\b|\binf\b|[ \t]+$", re.M)
@@ -59,10 +59,8 @@ def nothing() -> Results:
 
 def off_the_map() -> Results:
     none = {n: 0.0 for n in TallyRow.__dataclass_fields__ if n.startswith("probability")}
-    rows = [replace(r, **none, area_in_50_deg2=0.0, area_in_90_deg2=0.0) for r in nothing().rows]
-    return small_results(
-        rows=tuple(replace(small_row(), **none, area_in_90_deg2=0.0, map=r.map) for r in rows)
-    )
+    none |= {"area_in_50_deg2": 0.0, "area_in_90_deg2": 0.0}
+    return small_results(rows=tuple(replace(r, **none) for r in small_results().rows))
 
 
 def small_probability() -> Results:
@@ -71,18 +69,15 @@ def small_probability() -> Results:
 
 
 def odd_names() -> Results:
-    base = small_results()
-    long = "Heron " + "q" * 200
-    heron = replace(base.telescopes[0], name=long, bands=("Ångström–wide " * 3,))
-    plover = replace(base.telescopes[1], name="Plöver\x1b[31m\n\tβ", camera="field of 1° ± 2″ ≥ σ²")
-    rename = {"Heron": long, "Plover": plover.name}
-    return small_results(
+    names = ("Heron " + "q" * 200, "Plöver\x1b[31m\n\tβ")
+    base = renamed(small_results(), *names)
+    heron = replace(base.telescopes[0], bands=("Ångström–wide " * 3,))
+    plover = replace(base.telescopes[1], camera="field of 1° ± 2″ ≥ σ²")
+    return replace(
+        base,
         event=replace(base.event, name="Łantærn ﬁve 七"),
         telescopes=(heron, plover),
-        rows=tuple(replace(r, telescope=rename.get(r.telescope or "")) for r in base.rows),
-        exposures=tuple(
-            replace(e, telescope=rename[e.telescope], band="Ångström–wide") for e in base.exposures
-        ),
+        exposures=tuple(replace(e, band="Ångström–wide") for e in base.exposures),
     )
 
 
@@ -131,20 +126,26 @@ def test_names_are_transliterated_not_lost() -> None:
     assert "field of 1 deg +/- 2" in text
 
 
+# How many digits are shown is the wording's affair, tested there: zeros may follow.
+def shown(text: str) -> str:
+    return re.sub(r"(\d+\.\d*?)0+\b", r"\1", " ".join(text.split()))
+
+
 def test_the_numbers_are_those_of_the_results() -> None:
-    text = " ".join(render_circular(small_results()).split())
+    text = render_circular(small_results())
     for wanted in (
         "33.33 % (33.25-33.41 %) of the probability",  # 1/3 in [0.3325, 0.3341]
         "16.67 % (16.62-16.71 %) of the probability",  # half of it, bounds rounded outwards
         "5.75 deg^2 (5.74-5.76 deg^2)",
         "4.25 deg^2 in the 90 % region, which is 5.3 % of its area",  # 4.25 / 80
+        "Heron (rectangle 1.6 x 1.2 deg): 2 exposures in g, 33.33 % (33.25-33.41 %)",
         "14.4 h after the event",
         "Heron, g: 20.90-21.40 mag, median 21.25 mag (2 exposures)",
         "Plover, r: no limits in the log (1 exposure)",
         "AB, 5 sigma, not corrected for Galactic extinction",
         "The logs hold 5 rows: 3 used, 2 set aside (1 not accepted and 1 unreadable).",
     ):
-        assert wanted in text
+        assert shown(wanted) in shown(text)
     assert text.index("33.33 %") < text.index("16.67 %"), "the newest version comes first"
 
 
@@ -154,7 +155,7 @@ def test_few_exposures_are_listed_and_many_summed_by_night() -> None:
     assert "Night" not in few
     assert "19:43:12" not in many_of_them.replace("began at", "")
     night = next(line for line in many_of_them.splitlines() if line.startswith("2031-03-14  "))
-    assert " ".join(night.split()) == "2031-03-14 3 5.75 deg^2 33.33 % (33.25-33.41 %)"
+    assert shown(night) == "2031-03-14 3 5.75 deg^2 33.33 % (33.25-33.41 %)"
 
 
 def test_nothing_covered_is_said_in_words() -> None:

@@ -6,18 +6,20 @@ import io
 import json
 import subprocess
 import sys
+import time
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
 import pytest
 import skytally
-from skytally import outputs
+from skytally import cli, outputs
 from skytally.cli import app
 from skytally.errors import CampaignError, LogError, OutputError
+from skytally.results import Results
 from skytally.scaffold import write_campaign
 from skytally.terminal import render_tally
-from small_results import small_results
+from small_results import renamed, small_results
 from typer.testing import CliRunner, Result
 
 HEAVY = {
@@ -249,20 +251,13 @@ class Stream(io.StringIO):
         return self._terminal
 
 
-def long_names() -> Any:
-    from dataclasses import replace
-
-    base = small_results()
-    long = "Heron\x1b[2J\n" + "q" * 60
-    return small_results(
-        telescopes=(replace(base.telescopes[0], name=long), base.telescopes[1]),
-        rows=tuple(replace(r, telescope=long) if r.telescope == "Heron" else r for r in base.rows),
-    )
+def long_names() -> Results:
+    return renamed(small_results(), "Heron\x1b[2J\n" + "q" * 60, "Plover")
 
 
 @pytest.mark.parametrize("make", [small_results, long_names])
 @pytest.mark.parametrize("encoding", ["utf-8", "ascii"])
-def test_the_terminal_tables_fit_eighty_columns(make: Callable[[], Any], encoding: str) -> None:
+def test_the_terminal_tables_fit_eighty_columns(make: Callable[[], Results], encoding: str) -> None:
     text = render_tally(make(), Stream(encoding, terminal=False))
     assert max(map(len, text.splitlines())) <= 80
     assert all(c == "\n" or c.isprintable() or c == "\u00a0" for c in text)
@@ -277,3 +272,18 @@ def test_the_terminal_tables_fit_eighty_columns(make: Callable[[], Any], encodin
 
 def test_only_a_terminal_gets_bold() -> None:
     assert "\x1b[1m" in render_tally(small_results(), Stream("utf-8", terminal=True))
+
+
+@pytest.mark.parametrize("terminal", [True, False])
+def test_a_bar_appears_on_a_terminal_only(monkeypatch: pytest.MonkeyPatch, terminal: bool) -> None:
+    stream = Stream("utf-8", terminal)
+    monkeypatch.setattr(sys, "stderr", stream)
+    monkeypatch.setattr(cli, "SECONDS_BEFORE_BAR", 0.0)
+    with cli._progress("Reading\x1b[2J") as advance:
+        assert (advance is not None) == terminal
+        if advance is not None:
+            advance("Laying \x1b[2JHeron", 0.25)
+            time.sleep(0.5)  # The bar starts by itself, and draws ten times a second.
+    assert ("Laying [2JHeron" in stream.getvalue()) == terminal
+    assert "\x1b[2J" not in stream.getvalue()
+    assert stream.getvalue().count("25%") >= terminal

@@ -13,15 +13,15 @@ SOURCE = Path(skytally.__file__).parent
 
 # Bottom to top. A module may import modules of its own layer or below, no two one another.
 TABLE = (
-    "errors local_files spans moc distance magnitudes times grouping",
-    "shapes raster skymap cameras observations",
+    "errors local_files spans moc distance_integrals distance magnitudes times grouping",
+    "shapes raster working_order skymap cameras observations volume",
     "skymap_circle skymap_frames skymap_table skymap_io table_io log_cells log_columns log_regions "
     "log_io image_io region_text camera_io campaign_faults campaign_model campaign",
-    "footprints patchwork",
-    "refinement tally audit",
+    "selection footprints patchwork covered",
+    "refinement depth tally audit",
     "results account serialise",
-    "scaffold wording figure_style figures",
-    "report circular outputs terminal api",
+    "scaffold wording figure_style projection plots sky_chart figures",
+    "report_tables report circular outputs terminal api",
     "cli __main__",
 )
 LAYERS = {"": 0} | {name: layer for layer, names in enumerate(TABLE) for name in names.split()}

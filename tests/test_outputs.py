@@ -17,7 +17,7 @@ from skytally.moc import read_moc
 from skytally.outputs import file_stems, write_outputs, write_regions
 from skytally.results import Results
 from skytally.serialise import to_json
-from small_results import small_results
+from small_results import renamed, small_results
 
 EVERYTHING = {
     "report.html",
@@ -43,11 +43,6 @@ def tree(folder: Path) -> dict[str, bytes]:
     return {
         p.relative_to(folder).as_posix(): p.read_bytes() for p in folder.rglob("*") if p.is_file()
     }
-
-
-def renamed(results: Results, *names: str) -> Results:
-    telescopes = tuple(replace(t, name=n) for t, n in zip(results.telescopes, names, strict=True))
-    return replace(results, telescopes=telescopes)
 
 
 def test_all_files_appear_and_hold_what_the_results_say(tmp_path: Path) -> None:
@@ -273,3 +268,13 @@ def test_file_names_are_safe_and_differ_whatever_the_telescopes_are_called() -> 
     for stem in stems:
         assert stem not in {"all", "con", "lpt1"}
         assert outputs._REGION_FILE.fullmatch(f"regions/{stem}.fits")
+
+
+def test_progress_names_each_file_in_turn(tmp_path: Path) -> None:
+    seen: list[tuple[str, float]] = []
+    write_outputs(small_results(), tmp_path, lambda stage, done: seen.append((stage, done)))
+    files = {stage.removeprefix("Writing ") for stage, _ in seen}
+    assert files == {name.partition("/")[0] for name in EVERYTHING} - {"manifest.json"}
+    fractions = [done for _, done in seen]
+    assert fractions == sorted(fractions)
+    assert 0 <= fractions[0] < fractions[-1] < 1

@@ -96,14 +96,19 @@ def _observations(results: Results) -> Iterator[list[str]]:
             f" the last ended at {utc_text(results.row().last_end)}."
         )
     yield _paragraph(text)
-    lines = [_telescope(t) for t in results.telescopes if t.exposures]
+    lines = [_telescope(results, t) for t in results.telescopes if t.exposures]
     if lines:
-        yield _list("Instruments:", lines)
+        head = f"Instruments, and what each covers of {version_text(results.newest.version)}:"
+        yield _list(head, lines)
 
 
-def _telescope(telescope: TelescopeInfo) -> str:
+def _telescope(results: Results, telescope: TelescopeInfo) -> str:
     bands = f" in {join_words(telescope.bands)}" if telescope.bands else ""
-    return f"{telescope.name} ({telescope.camera}): {count('exposure', telescope.exposures)}{bands}"
+    covered = _of_probability(results, results.row(telescope=telescope.name))
+    return (
+        f"{telescope.name} ({telescope.camera}): "
+        f"{count('exposure', telescope.exposures)}{bands}, {covered}"
+    )
 
 
 def _probability(results: Results) -> Iterator[list[str]]:

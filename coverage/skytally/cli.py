@@ -10,7 +10,7 @@ from __future__ import annotations
 import os
 import signal
 import sys
-import time
+import threading
 import traceback
 import warnings
 from collections.abc import Iterator, Sequence
@@ -146,7 +146,8 @@ def report(
     from skytally.wording import headline, to_ascii
 
     results = _tally(campaign, "report.html lists them all")
-    written = write_outputs(results, out)
+    with _progress("Writing") as progress:
+        written = write_outputs(results, out, progress)
     answer = headline(results)
     if not (sys.stdout.encoding or "").lower().startswith("utf"):
         answer = to_ascii(answer)
@@ -194,8 +195,8 @@ def _tally(campaign: str, rest: str) -> Results:
             f"{campaign!r} is a URL, expected the path of a file on this machine",
             remedy="Download the campaign and what it names first; nothing is fetched.",
         )
-    loaded = load_campaign(campaign)
-    with _progress() as progress:
+    with _progress("Reading") as progress:
+        loaded = load_campaign(campaign)
         results = account(loaded, progress)
     faults = [
         f"{item.file}, row {item.row}: {item.detail}"
@@ -217,8 +218,8 @@ def _list(lines: Sequence[str], one: str, many: str, rest: str) -> None:
 
 
 @contextmanager
-def _progress() -> Iterator[Progress | None]:
-    """Offer a progress callback that draws a bar once the work has lasted a second."""
+def _progress(stage: str) -> Iterator[Progress | None]:
+    """Offer a callback whose bar appears on a terminal once the work has lasted a second."""
     if not sys.stderr.isatty():
         yield None
         return
@@ -232,19 +233,21 @@ def _progress() -> Iterator[Progress | None]:
         console=Console(stderr=True),
         transient=True,
     )
-    task = bar.add_task("", total=1.0)
-    began = time.monotonic()
+    task = bar.add_task(_clean(stage), total=1.0)
 
     def advance(stage: str, fraction: float) -> None:
         bar.update(task, description=_clean(stage), completed=fraction)
-        if not bar.live.is_started and time.monotonic() - began > SECONDS_BEFORE_BAR:
-            bar.start()
 
+    # A timer, since a long stage may report nothing before it ends.
+    timer = threading.Timer(SECONDS_BEFORE_BAR, bar.start)
+    timer.daemon = True
+    timer.start()
     try:
         yield advance
     finally:
-        if bar.live.is_started:
-            bar.stop()
+        timer.cancel()
+        timer.join()
+        bar.stop()
 
 
 def _print(text: str) -> None:

@@ -27,6 +27,7 @@ from pathlib import Path
 from skytally import __version__
 from skytally.circular import render_circular
 from skytally.errors import OutputError
+from skytally.footprints import Progress
 from skytally.moc import write_moc
 from skytally.report import render_html, render_pdf
 from skytally.results import Results
@@ -63,7 +64,9 @@ _NO_ROOM = {errno.ENOSPC, errno.EDQUOT, errno.EFBIG}
 _NO_RIGHT = {errno.EACCES, errno.EPERM, errno.EROFS}
 
 
-def write_outputs(results: Results, out_dir: str | Path) -> tuple[Path, ...]:
+def write_outputs(
+    results: Results, out_dir: str | Path, progress: Progress | None = None
+) -> tuple[Path, ...]:
     """Write the report in all its forms, the regions and the manifest.
 
     Parameters
@@ -72,6 +75,8 @@ def write_outputs(results: Results, out_dir: str | Path) -> tuple[Path, ...]:
         What to write.
     out_dir : path
         A folder: new, empty, or one that an earlier report was written to.
+    progress : callable, optional
+        Called with what is being written and the fraction done.
 
     Returns
     -------
@@ -87,19 +92,27 @@ def write_outputs(results: Results, out_dir: str | Path) -> tuple[Path, ...]:
     """
     failures: list[OutputError] = []
 
-    def render(folder: Path) -> None:
-        _put(folder / "report.html", render_html(results))
-        _put(folder / "circular.txt", render_circular(results))
-        _put(folder / "tally.json", to_json(results))
-        text = io.StringIO()
-        to_table(results).write(text, format="ascii.ecsv")
-        _put(folder / "tally.ecsv", text.getvalue())
-        (folder / "regions").mkdir()
-        _render_regions(results, folder / "regions")
+    def pdf(path: Path) -> None:
         try:
-            _put(folder / "report.pdf", render_pdf(results))
+            _put(path, render_pdf(results))
         except OutputError as error:
             failures.append(error)
+
+    # Beside each, the fraction of the time that the earlier ones have taken.
+    writers: dict[str, tuple[float, Callable[[Path], None]]] = {
+        "tally.json": (0.0, lambda path: _put(path, to_json(results))),
+        "tally.ecsv": (0.02, lambda path: _put(path, _ecsv(results))),
+        "circular.txt": (0.04, lambda path: _put(path, render_circular(results))),
+        "regions": (0.05, lambda path: _render_regions(results, path)),
+        "report.html": (0.15, lambda path: _put(path, render_html(results))),
+        "report.pdf": (0.5, pdf),
+    }
+
+    def render(folder: Path) -> None:
+        for name, (done, write) in writers.items():
+            if progress is not None:
+                progress(f"Writing {name}", done)
+            write(folder / name)
 
     written = _publish(Path(out_dir), "report", results, render)
     if failures:
@@ -137,7 +150,14 @@ def file_stems(names: Iterable[str]) -> tuple[str, ...]:
     return tuple(stems)
 
 
+def _ecsv(results: Results) -> str:
+    text = io.StringIO()
+    to_table(results).write(text, format="ascii.ecsv")
+    return text.getvalue().rstrip("\n") + "\n"
+
+
 def _render_regions(results: Results, folder: Path) -> None:
+    folder.mkdir(exist_ok=True)
     covered = results.sky.covered
     for stem, spans in zip(file_stems(t.name for t in results.telescopes), covered, strict=True):
         write_moc(spans, folder / f"{stem}.fits")
