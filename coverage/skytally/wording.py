@@ -194,8 +194,11 @@ def area_text(value: float, low: float, high: float, *, bracket: bool = False) -
     """
     if value <= 0:
         return f"0{NBSP}deg²"
-    uncertainty = min((high - low) / 2, AREA_ACCURACY * value)
-    decimals = decimals_for(uncertainty, most=2 if value >= 0.1 else 4)
+    half_width = (high - low) / 2
+    uncertainty = (
+        min(half_width, AREA_ACCURACY * value) if half_width > 0 else AREA_ACCURACY * value
+    )
+    decimals = max(0, min(6, -math.floor(math.log10(uncertainty))))
     text = f"{number_text(value, decimals)}{NBSP}deg²"
     if bracket and high > low:
         text += f" ({_bracket(low, high, decimals)}{NBSP}deg²)"

@@ -1,0 +1,207 @@
+"""Every figure of the report, with the sentences that go with it, from the results alone."""
+
+from __future__ import annotations
+
+from skytally.figure_style import Drawing, draw
+from skytally.plots import (
+    MOST_BANDS,
+    MOST_LABELS,
+    credit_figure,
+    depth_bands,
+    depth_figure,
+    telescope_timelines,
+    timeline_figure,
+)
+from skytally.results import Results
+from skytally.sky_chart import (
+    LEAST_PART,
+    Part,
+    credible_parts,
+    versions_figure,
+    whole_sky_figure,
+    zoom_figure,
+)
+from skytally.tally import TallyRow
+from skytally.wording import (
+    NBSP,
+    area_text,
+    count,
+    hours_text,
+    join_words,
+    limit_terms,
+    magnitude_text,
+    percent,
+    row_probability,
+    version_text,
+)
+
+__all__ = ["draw_figures"]
+
+
+def draw_figures(results: Results) -> dict[str, Drawing]:
+    """Draw what the results have to show.
+
+    Parameters
+    ----------
+    results : Results
+        With at least one map version.
+
+    Returns
+    -------
+    dict of str to Drawing
+        Always ``whole-sky`` and ``zoom``; ``versions`` with several map
+        versions; ``timeline`` and ``credit`` where any probability is
+        covered; ``depth`` where any exposure has a limit.
+    """
+    drawings = [_whole_sky(results), _zoom(results)]
+    if len(results.maps) > 1:
+        drawings.append(_versions(results))
+    if results.row().probability > 0:
+        drawings += [_timeline(results), _credit(results)]
+    if depth_bands(results):
+        drawings.append(_depth(results))
+    return {drawing.name: drawing for drawing in drawings}
+
+
+def _whole_sky(results: Results) -> Drawing:
+    total = results.row()
+    version = version_text(results.newest.version)
+    used = sum(bool(region) for region in results.sky.covered)
+    if total.probability > 0:
+        finding = (
+            f"The footprints of {count('telescope', used, words=True)} hold "
+            f"{row_probability(total, results.settings)} of the probability of {version}"
+        )
+        outside = total.area_deg2 - total.area_in_90_deg2
+        finding += (
+            f"; {percent(outside / total.area_deg2, 0)} of the area observed lies outside its "
+            f"90{NBSP}% region."
+            if outside > 0
+            else f"; all of the area observed lies inside its 90{NBSP}% region."
+        )
+    else:
+        finding = f"No footprint holds any of the probability of {version}."
+    return draw(
+        "whole-sky",
+        "The whole sky",
+        f"{finding} Mollweide projection, equal area; right ascension increases to the left.",
+        f"Whole-sky chart of {version} with the footprints of each telescope. {finding}",
+        lambda: whole_sky_figure(results),
+    )
+
+
+def _zoom(results: Results) -> Drawing:
+    parts = _zoomed(credible_parts(results.sky.maps[-1]))
+    total = results.row()
+    area = results.newest.area_90_deg2
+    region = f"90{NBSP}% region"
+    finding = (
+        f"Of the {area_text(area, area, area)} of the {region}, "
+        f"{percent(total.area_in_90_deg2 / area)} is covered; "
+        f"what is covered there holds {percent(total.probability_in_90)} of all probability."
+    )
+    if len(parts) > 1:
+        finding += (
+            f" The region has separate parts; the two shown hold "
+            f"{percent(parts[0].probability, 0)} and {percent(parts[1].probability, 0)}."
+        )
+    return draw(
+        "zoom",
+        f"The {region}",
+        f"{finding} Lambert equal-area projection; the bar is true to scale.",
+        f"Chart of the {region} with its contours and the footprints of each telescope. {finding}",
+        lambda: zoom_figure(results, parts),
+    )
+
+
+def _zoomed(parts: list[Part]) -> list[Part]:
+    """Keep the two most probable parts, the second only if it matters."""
+    return [p for p in parts[:2] if p is parts[0] or p.probability >= LEAST_PART]
+
+
+def _versions(results: Results) -> Drawing:
+    shares = [
+        f"{percent(results.row(map=m.version).probability)} of “{m.version}”" for m in results.maps
+    ]
+    finding = f"The same exposures cover {join_words(shares)}."
+    return draw(
+        "versions",
+        "The same footprints on every map version",
+        f"{finding} Full line: 50{NBSP}% region; dashed: 90{NBSP}% region; "
+        "filled: everything observed.",
+        f"A small whole-sky chart for each map version. {finding}",
+        lambda: versions_figure(results),
+    )
+
+
+def _timeline(results: Results) -> Drawing:
+    total = next(
+        line
+        for line in results.timelines
+        if line.map == results.newest.version
+        and (line.telescope, line.band, line.night) == (None, None, None)
+    )
+    final = total.probability[-1]
+    half = next(h for h, p in zip(total.hours, total.probability) if p >= final / 2)
+    finding = (
+        f"Half of the {percent(final)} finally covered was reached {hours_text(half)} after the "
+        f"event, the last new sky at {hours_text(total.hours[-1])}."
+    )
+    lines = telescope_timelines(results)
+    note = (
+        f" Of {count('telescope', len(lines))}, the most productive are labelled."
+        if len(lines) + 1 > MOST_LABELS
+        else ""
+    )
+    return draw(
+        "timeline",
+        "Probability against time",
+        f"{finding} Each telescope counts all it covered, shared or not; dotted uprights: "
+        f"map versions issued. Probabilities are those of "
+        f"{version_text(results.newest.version)}.{note}",
+        f"Step plot of the probability covered against hours since the event. {finding}",
+        lambda: timeline_figure(results),
+    )
+
+
+def _credit(results: Results) -> Drawing:
+    rows = [results.row(telescope=t.name) for t in results.telescopes]
+    best = max(rows, key=lambda row: row.probability_credit)
+    total = results.row().probability
+    alone = sum(row.probability_unique for row in rows)
+    finding = (
+        f"{best.telescope} has the largest share, {percent(best.probability_credit / total, 0)} of "
+        f"what is covered; {percent(min(alone / total, 1.0), 0)} was seen by one telescope only."
+        if len(rows) > 1
+        else f"{best.telescope} covered all of it."
+    )
+    return draw(
+        "credit",
+        "Who covered it",
+        f"{finding} Probability that several telescopes covered is shared equally among them, "
+        f"so that the shares add up to the total.",
+        f"A bar of the covered probability divided among the telescopes. {finding}",
+        lambda: credit_figure(results),
+    )
+
+
+def _depth(results: Results) -> Drawing:
+    rows = depth_bands(results)
+
+    def best(row: TallyRow) -> float:
+        return row.depth_max if row.depth_max is not None else float("-inf")
+
+    deepest = max(rows, key=best)
+    without = sum(e.depth is None for e in results.exposures)
+    finding = (
+        f"The deepest exposure reached {magnitude_text(deepest.depth_max)} in {deepest.band}; "
+        f"{count('exposure', without)} of {len(results.exposures)} came without a limit."
+    )
+    note = f" The {MOST_BANDS} most used bands are shown." if len(rows) > MOST_BANDS else ""
+    return draw(
+        "depth",
+        "Limits against time",
+        f"{finding} One mark per exposure: {limit_terms(results.settings)}.{note}",
+        f"Plots of limiting magnitude against hours since the event, one per band. {finding}",
+        lambda: depth_figure(results),
+    )

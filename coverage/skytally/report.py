@@ -1,0 +1,134 @@
+"""The report as one HTML page and as a PDF, from the results alone."""
+
+from __future__ import annotations
+
+import base64
+import hashlib
+from functools import cache
+from importlib.resources import files
+from pathlib import Path
+from typing import Any
+
+import matplotlib
+from jinja2 import Environment, PackageLoader, StrictUndefined
+from markupsafe import Markup
+
+from skytally.errors import OutputError
+from skytally.figure_style import swatch_svg
+from skytally.figures import draw_figures
+from skytally.report_tables import key_figures, tables
+from skytally.results import Results
+from skytally.wording import (
+    count,
+    headline,
+    limit_terms,
+    percent,
+    utc_text,
+    version_text,
+)
+
+__all__ = ["render_html", "render_pdf"]
+
+_FONT_SCHEME = "skytally-font:"
+_FONTS = frozenset(
+    f"{name}.ttf"
+    for name in (
+        *("DejaVuSans", "DejaVuSans-Bold", "DejaVuSans-Oblique", "DejaVuSansMono"),
+        *("STIXGeneral", "STIXGeneralBol", "STIXGeneralItalic", "STIXGeneralBolIta"),
+    )
+)
+
+
+def render_html(results: Results) -> str:
+    """Return the report as one HTML page that needs nothing else, not even a network.
+
+    Parameters
+    ----------
+    results : Results
+        With at least one map version.
+    """
+    return _render(results, "screen.css", paper=False)
+
+
+def render_pdf(results: Results) -> bytes:
+    """Return the report as a PDF document with its own fonts.
+
+    The bytes depend on the results alone if ``SOURCE_DATE_EPOCH`` is set.
+
+    Raises
+    ------
+    OutputError
+        If the text layout library that WeasyPrint needs is not installed.
+    """
+    page = _render(results, "print.css", paper=True)
+    # Imported here: without Pango the import itself fails, and then everything
+    # but the PDF must still work.
+    try:
+        from weasyprint import HTML
+        from weasyprint.text.fonts import FontConfiguration
+    except OSError as error:
+        raise OutputError(
+            f"the PDF cannot be made because the Pango text library is missing ({error})",
+            remedy="On Debian or Ubuntu install it with: apt-get install "
+            "libpango-1.0-0 libpangoft2-1.0-0 libharfbuzz-subset0",
+        ) from error
+    document = HTML(string=page, url_fetcher=_fetcher(), base_url=None)
+    return bytes(
+        document.write_pdf(
+            font_config=FontConfiguration(),
+            pdf_tags=True,
+            pdf_identifier=hashlib.sha256(page.encode("utf-8", "replace")).digest()[:16],
+        )
+    )
+
+
+def _fetcher() -> Any:
+    """Return a fetcher that hands out our fonts and data URIs, and refuses everything else."""
+    from weasyprint.urls import URLFetcher, URLFetcherResponse
+
+    folder = Path(matplotlib.get_data_path()) / "fonts" / "ttf"
+
+    class OwnFilesOnly(URLFetcher):  # type: ignore[misc]
+        def fetch(self, url: str, headers: dict[str, str] | None = None) -> Any:
+            if url.startswith(_FONT_SCHEME):
+                name = url.removeprefix(_FONT_SCHEME)
+                if name not in _FONTS:
+                    raise ValueError(f"there is no font {name!r}")
+                body = (folder / name).read_bytes()
+                return URLFetcherResponse(url, body, {"Content-Type": "font/ttf"})
+            return super().fetch(url, headers)
+
+    return OwnFilesOnly(allowed_protocols=("data",))
+
+
+@cache
+def _environment() -> Environment:
+    """Return the template environment: everything escaped, nothing undefined."""
+    environment = Environment(
+        loader=PackageLoader("skytally", "templates"),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
+    )
+    environment.filters.update(utc=utc_text, percent=percent)
+    environment.globals.update(count=count, swatch=lambda index: Markup(swatch_svg(index)))
+    return environment
+
+
+def _render(results: Results, sheet: str, *, paper: bool) -> str:
+    figures = draw_figures(results)
+    style = (files("skytally.templates") / sheet).read_text(encoding="utf-8")
+    template = _environment().get_template("report.html.j2")
+    return template.render(
+        results=results,
+        paper=paper,
+        style=Markup(f"\n{style}"),
+        style_hash=base64.b64encode(hashlib.sha256(f"\n{style}".encode()).digest()).decode(),
+        headline=headline(results),
+        key_figures=key_figures(results),
+        figures={name: (d, Markup(d.svg)) for name, d in figures.items()},
+        tables=tables(results),
+        terms=limit_terms(results.settings),
+        newest=version_text(results.newest.version),
+    )
