@@ -143,15 +143,12 @@ def report(
     """Write the report and its data files (the main job)."""
     from skytally.outputs import write_outputs
     from skytally.serialise import to_json
-    from skytally.wording import headline, to_ascii
+    from skytally.terminal import render_answer
 
     results = _tally(campaign, "report.html lists them all")
     with _progress("Writing") as progress:
         written = write_outputs(results, out, progress)
-    answer = headline(results)
-    if not (sys.stdout.encoding or "").lower().startswith("utf"):
-        answer = to_ascii(answer)
-    _print(to_json(results) if json else answer + "\n")
+    _print(to_json(results) if json else render_answer(results, sys.stdout))
     _say(f"Wrote {len(written)} files to {out}")
 
 

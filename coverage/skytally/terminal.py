@@ -29,10 +29,17 @@ from skytally.wording import (
     version_text,
 )
 
-__all__ = ["WIDTH", "render_tally"]
+__all__ = ["WIDTH", "render_answer", "render_tally"]
 
 WIDTH = 80
 _NAME_WIDTH = 16
+
+
+def render_answer(results: Results, stream: TextIO) -> str:
+    """Return the headline alone as text for a stream."""
+    page = _Page(stream)
+    page.write_line(headline(results), style="bold")
+    return page.text()
 
 
 def render_tally(results: Results, stream: TextIO) -> str:
