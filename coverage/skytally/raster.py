@@ -40,7 +40,7 @@ Bools = NDArray[np.bool_]
 # Rounding of a dot product of unit vectors, far below any cell's radius.
 _SLACK = 1e-14
 # Pairs of piece and cell looked at together: bounds memory, feeds the cache.
-_PAIRS_AT_ONCE = 400_000
+_PAIRS_AT_ONCE = 200_000
 
 
 def cell_width_rad(order: int) -> float:
@@ -69,9 +69,10 @@ class Pieces:
     Attributes
     ----------
     normal : float64 array, shape (p, k, 3)
-        Unit vectors to the caps' centres; zero where a piece has fewer caps.
-    radius_rad : float64 array, shape (p, k)
-        Radii of the caps, π where there is none.
+        Unit vectors to the caps' centres; the first is repeated where a piece
+        has fewer caps than others.
+    radius_rad : float64 array, shape (p,)
+        Radius of a piece's caps: π/2 for great-circle edges, else the circle's.
     middle : float64 array, shape (p, 3)
         Centre of a circle around the piece.
     bound_rad : float64 array, shape (p,)
@@ -110,15 +111,14 @@ class Pieces:
     def stack(cls, parts: list[Pieces]) -> Pieces:
         """Put pieces one after the other; owners are kept, caps padded to one number."""
         caps = max((p.normal.shape[1] for p in parts), default=1)
-        normal = [np.pad(p.normal, ((0, 0), (0, caps - p.normal.shape[1]), (0, 0))) for p in parts]
-        radius = [
-            np.pad(p.radius_rad, ((0, 0), (0, caps - p.radius_rad.shape[1])), constant_values=np.pi)
+        normal = [
+            np.concatenate((p.normal, *[p.normal[:, :1]] * (caps - p.normal.shape[1])), axis=1)
             for p in parts
         ]
         none = np.empty(0)
         return cls(
             np.concatenate([np.empty((0, caps, 3)), *normal]),
-            np.concatenate([np.empty((0, caps)), *radius]),
+            np.concatenate([none, *(p.radius_rad for p in parts)]),
             np.concatenate([np.empty((0, 3)), *(p.middle for p in parts)]),
             np.concatenate([none, *(p.bound_rad for p in parts)]),
             np.concatenate([np.empty(0, dtype=np.int64), *(p.owner for p in parts)]),
@@ -132,7 +132,7 @@ def pieces_of_circles(centre: Floats, radius_rad: Floats, owner: Ints) -> Pieces
     perimeter = 2 * np.pi * np.sin(np.minimum(radius_rad, np.pi / 2))
     return Pieces(
         centre[:, None, :],
-        radius_rad[:, None],
+        radius_rad,
         centre,
         radius_rad,
         owner,
@@ -160,7 +160,7 @@ def pieces_of_rings(vertex: Floats, owner: Ints) -> Pieces:
     chord = np.linalg.norm(vertex - middle[:, None, :], axis=2)
     return Pieces(
         normal * inward[:, None, None],
-        np.full(normal.shape[:2], np.pi / 2),
+        np.full(normal.shape[0], np.pi / 2),
         middle,
         2 * np.arcsin(np.minimum(chord.max(axis=1) / 2, 1.0)),
         owner,
@@ -326,20 +326,16 @@ def _centres(order: int, cell: Ints) -> Floats:
 def _classify(pieces: Pieces, piece: Ints, order: int, cell: Ints) -> tuple[Bools, Bools, Bools]:
     """Tell for pairs of piece and cell: wholly inside, not outside, centre inside."""
     rho = cell_radius_rad(order)
-    xyz = _centres(order, cell)
     radius = pieces.radius_rad
     within = np.where(radius > rho, np.cos(radius - rho), 2.0) + _SLACK
     beyond = np.where(radius + rho < np.pi, np.cos(radius + rho), -2.0) - _SLACK
-    middle = np.cos(radius)
-    inside = np.ones(piece.size, dtype=bool)
-    touched = np.ones(piece.size, dtype=bool)
-    centred = np.ones(piece.size, dtype=bool)
-    for cap in range(radius.shape[1]):
-        dot = np.einsum("nc,nc->n", pieces.normal[piece, cap], xyz)
-        inside &= dot >= within[piece, cap]
-        touched &= dot >= beyond[piece, cap]
-        centred &= dot >= middle[piece, cap]
-    return inside, touched, centred
+    xyz = _centres(order, cell)
+    # The caps of a piece have one radius, so the farthest cap decides.
+    nearest = np.full(piece.size, 2.0)
+    for cap in range(pieces.normal.shape[1]):
+        normal = np.take(pieces.normal[:, cap], piece, axis=0)
+        np.minimum(nearest, np.einsum("nc,nc->n", normal, xyz), out=nearest)
+    return nearest >= within[piece], nearest >= beyond[piece], nearest >= np.cos(radius)[piece]
 
 
 def _near(pieces: Pieces, piece: Ints, order: int, cell: Ints) -> Bools:
