@@ -15,6 +15,7 @@ import warnings
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from functools import cache
+from typing import Any
 from xml.etree import ElementTree
 
 import matplotlib
@@ -74,7 +75,7 @@ _HATCHES: tuple[Callable[[NDArray[np.int64], NDArray[np.int64]], NDArray[np.bool
     lambda x, y: (x % (_HATCH_PERIOD // 2) < 2) & (y % (_HATCH_PERIOD // 2) < 2),
 )
 
-_RC = {
+_RC: dict[str, Any] = {
     "font.family": "sans-serif",
     "font.sans-serif": ["DejaVu Sans"],
     "font.size": 7.5,
@@ -112,8 +113,11 @@ class TelescopeStyle:
 
 
 def style_of(index: int) -> TelescopeStyle:
-    """Return the style of the telescope with this index; 42 differ, then they repeat."""
-    turn = (index + index // len(_COLOURS)) % len(_HATCHES)
+    """Return the style of the telescope with this index.
+
+    Seven colours and six hatches have no common factor: 42 styles differ.
+    """
+    turn = index % len(_HATCHES)
     return TelescopeStyle(
         _COLOURS[index % len(_COLOURS)],
         _LINES[turn],
@@ -162,7 +166,8 @@ def new_figure(height_in: float, width_in: float = WIDTH_IN) -> Figure:
 
 def draw(name: str, title: str, caption: str, alt: str, make: Callable[[], Figure]) -> Drawing:
     """Make a figure in our style and turn it into a `Drawing`."""
-    with matplotlib.rc_context({**_RC, "svg.hashsalt": name}), warnings.catch_warnings():
+    settings: Any = {**_RC, "svg.hashsalt": name}
+    with matplotlib.rc_context(settings), warnings.catch_warnings():
         # A name in a script that DejaVu lacks: the page's own fonts draw the text.
         warnings.filterwarnings("ignore", message="Glyph .* missing from font")
         warnings.filterwarnings("ignore", message="Matplotlib currently does not support")
@@ -267,7 +272,7 @@ def swatch_svg(index: int) -> str:
     """Return the same key as an ``<svg>`` element to stand beside a name."""
     rows = np.rint(255 * swatch(index)).astype(np.uint8)
     stream = io.BytesIO()
-    image.imsave(stream, rows, format="png", metadata={"Software": None})
+    image.imsave(stream, rows, format="png", metadata={"Software": "skytally"})
     data = base64.b64encode(stream.getvalue()).decode()
     return (
         f'<svg class="swatch" viewBox="0 0 {rows.shape[1]} {rows.shape[0]}" aria-hidden="true">'

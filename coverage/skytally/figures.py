@@ -50,20 +50,26 @@ def draw_figures(results: Results) -> dict[str, Drawing]:
     -------
     dict of str to Drawing
         Always ``whole-sky`` and ``zoom``; ``versions`` with several map
-        versions; ``timeline`` and ``credit`` where any probability is
-        covered; ``depth`` where any exposure has a limit.
+        versions; ``timeline`` where any probability is covered, ``credit``
+        where several telescopes did; ``depth`` where any exposure has a limit.
     """
-    drawings = [_whole_sky(results), _zoom(results)]
+    parts = _zoomed(credible_parts(results.sky.maps[-1]))
+    drawings = [_whole_sky(results, parts), _zoom(results, parts)]
     if len(results.maps) > 1:
         drawings.append(_versions(results))
     if results.row().probability > 0:
-        drawings += [_timeline(results), _credit(results)]
+        drawings.append(_timeline(results))
+    sharing = [
+        t for t in results.telescopes if results.row(telescope=t.name).probability_credit > 0
+    ]
+    if len(sharing) > 1:
+        drawings.append(_credit(results))
     if depth_bands(results):
         drawings.append(_depth(results))
     return {drawing.name: drawing for drawing in drawings}
 
 
-def _whole_sky(results: Results) -> Drawing:
+def _whole_sky(results: Results, parts: list[Part]) -> Drawing:
     total = results.row()
     version = version_text(results.newest.version)
     used = sum(bool(region) for region in results.sky.covered)
@@ -86,12 +92,11 @@ def _whole_sky(results: Results) -> Drawing:
         "The whole sky",
         f"{finding} Mollweide projection, equal area; right ascension increases to the left.",
         f"Whole-sky chart of {version} with the footprints of each telescope. {finding}",
-        lambda: whole_sky_figure(results),
+        lambda: whole_sky_figure(results, parts),
     )
 
 
-def _zoom(results: Results) -> Drawing:
-    parts = _zoomed(credible_parts(results.sky.maps[-1]))
+def _zoom(results: Results, parts: list[Part]) -> Drawing:
     total = results.row()
     area = results.newest.area_90_deg2
     region = f"90{NBSP}% region"
@@ -171,9 +176,7 @@ def _credit(results: Results) -> Drawing:
     alone = sum(row.probability_unique for row in rows)
     finding = (
         f"{best.telescope} has the largest share, {percent(best.probability_credit / total, 0)} of "
-        f"what is covered; {percent(min(alone / total, 1.0), 0)} was seen by one telescope only."
-        if len(rows) > 1
-        else f"{best.telescope} covered all of it."
+        f"what is covered; {percent(min(alone / total, 1.0), 0)} of it was seen by one alone."
     )
     return draw(
         "credit",

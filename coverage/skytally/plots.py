@@ -25,6 +25,7 @@ from skytally.figure_style import (
 )
 from skytally.results import Results
 from skytally.tally import TallyRow, Timeline
+from skytally.wording import percent
 
 __all__ = [
     "MOST_BANDS",
@@ -41,6 +42,8 @@ MOST_LABELS = 9
 MOST_BANDS = 8
 _SAMPLES_PER_INCH = 192
 _VECTOR_POINTS = 2000
+# Height of a band's panel with its axis and title, inches, and of the panel alone.
+_PANEL_STEP, _PANEL = 1.6, 1.22
 
 
 def telescope_timelines(results: Results) -> list[tuple[int, Timeline]]:
@@ -123,7 +126,7 @@ def _end_labels(axes: Axes, ends: Sequence[tuple[float, str, str]], top: float) 
         places[number] = min(places[number], limit)
         limit = places[number] - least
     for (value, name, colour), y in zip(kept, places):
-        text = f"{name} {100 * value:.1f} %"
+        text = f"{name} {percent(value)}"
         axes.annotate(
             text,
             (1.0, 100 * value),
@@ -133,7 +136,14 @@ def _end_labels(axes: Axes, ends: Sequence[tuple[float, str, str]], top: float) 
             fontsize=7,
             va="center",
             fontweight="bold" if colour == INK and name == "all together" else "normal",
-            arrowprops={"arrowstyle": "-", "color": colour, "lw": 0.9, "shrinkA": 1, "shrinkB": 0},
+            arrowprops={
+                "arrowstyle": "-",
+                "color": colour,
+                "lw": 0.9,
+                "shrinkA": 2,
+                "shrinkB": 0,
+                "relpos": (0.0, 0.5),
+            },
         )
 
 
@@ -183,7 +193,7 @@ def credit_figure(results: Results) -> Figure:
         width = value / total
         picture = swatch(index, max(2, round(width * WIDTH_IN * _SAMPLES_PER_INCH)), 60)
         _bar(axes, left, left + width, (0.42, 0.62), picture)
-        name, amount = short_label(results.telescopes[index].name, 16), f"{100 * value:.1f} %"
+        name, amount = short_label(results.telescopes[index].name, 16), percent(value)
         # About 0.065 inches a letter at this size.
         if width * WIDTH_IN > 0.065 * max(len(name), len(amount)) + 0.05:
             middle = left + width / 2
@@ -198,7 +208,7 @@ def credit_figure(results: Results) -> Figure:
     return figure
 
 
-def _listed(names: Sequence[str], most: int = 6) -> str:
+def _listed(names: Sequence[str], most: int = 4) -> str:
     """Name the segments too narrow for a label, in the order of the bar."""
     if not names:
         return ""
@@ -208,7 +218,7 @@ def _listed(names: Sequence[str], most: int = 6) -> str:
 
 def _sided_text(axes: Axes, total: float) -> None:
     """Write what the upper bar shows, each on its own side where there is room."""
-    covered, rest = f"covered {100 * total:.1f} %", f"not covered {100 * (1 - total):.1f} %"
+    covered, rest = f"covered {percent(total)}", f"not covered {percent(1 - total)}"
     axes.text(0.0, 0.89, covered, fontsize=7, va="bottom", ha="left")
     axes.text(1.0, 0.89, rest, fontsize=7, va="bottom", ha="right")
 
@@ -255,12 +265,12 @@ def depth_bands(results: Results) -> list[TallyRow]:
 def depth_figure(results: Results) -> Figure:
     """Draw each exposure's limit against hours since the event, a panel per band."""
     bands = [row.band for row in depth_bands(results)[:MOST_BANDS]]
-    columns = min(len(bands), 4)
-    rows = -(-len(bands) // columns)
+    rows = -(-len(bands) // 4)
+    columns = -(-len(bands) // rows)
     used = {e.telescope for e in results.exposures if e.depth is not None}
     shown = [i for i, t in enumerate(results.telescopes) if t.name in used]
     key = 0.1 + 0.18 * -(-len(shown) // 5)
-    height = 0.25 + 1.75 * rows + 0.3 + key
+    height = 0.1 + _PANEL_STEP * rows + 0.2 + key
     figure = new_figure(height)
     depths = [e.depth for e in results.exposures if e.depth is not None and e.band in bands]
     hours = [e.hours for e in results.exposures if e.depth is not None and e.band in bands]
@@ -269,9 +279,9 @@ def depth_figure(results: Results) -> Figure:
     width = (1 - left - 0.01 - 0.025 * (columns - 1)) / columns
     for place, band in enumerate(bands):
         row, column = divmod(place, columns)
-        bottom = height - 0.2 - (row + 1) * 1.75 + 0.25
+        bottom = height - 0.2 - row * _PANEL_STEP - _PANEL
         axes = figure.add_axes(
-            (left + column * (width + 0.025), bottom / height, width, 1.42 / height)
+            (left + column * (width + 0.025), bottom / height, width, _PANEL / height)
         )
         plain_axes(axes)
         _time_axis(axes, hours)

@@ -79,6 +79,12 @@ class Window:
         """Height over width."""
         return (self.top - self.bottom) / (self.right - self.left)
 
+    @property
+    def corners(self) -> Floats:
+        """The rectangle's corners in the plane, shape (4, 2), in order around it."""
+        x, y = (self.left, self.right), (self.bottom, self.top)
+        return np.array([[x[0], y[0]], [x[1], y[0]], [x[1], y[1]], [x[0], y[1]]])
+
     def project(self, lonlat_deg: Floats) -> Floats:
         """Plane coordinates, shape (n, 2), of directions (n, 2) in degrees."""
         if len(lonlat_deg) == 0:
@@ -91,12 +97,12 @@ class Window:
 
     def grid(self, columns: int) -> tuple[Floats, Floats]:
         """Centres of square samples: x of shape (columns,), y of shape (rows,), rising."""
-        step = (self.right - self.left) / columns
-        rows = max(1, round((self.top - self.bottom) / step))
-        return (
-            self.left + step * (np.arange(columns) + 0.5),
-            self.bottom + (self.top - self.bottom) / rows * (np.arange(rows) + 0.5),
-        )
+        rows = max(1, round(columns * self.aspect))
+        across = (np.arange(columns, dtype=np.float64) + 0.5) / columns
+        up = (np.arange(rows, dtype=np.float64) + 0.5) / rows
+        x: Floats = self.left + (self.right - self.left) * across
+        y: Floats = self.bottom + (self.top - self.bottom) * up
+        return x, y
 
     def sample(self, columns: int) -> Ints:
         """Positions on the line of the grid's samples, shape (rows, columns); −1 off the sky."""
@@ -307,8 +313,8 @@ def _graticule(
     )
     for number in range(int(first), int(last) + 1):
         value = number * dec_step
-        lon = (turn + window.lon_deg) % 360
-        plane = window.trace(np.stack((lon, np.full(lon.size, value)), axis=1))
+        line = np.stack(((turn + window.lon_deg) % 360, np.full(turn.size, value)), axis=1)
+        plane = window.trace(line)
         if len(plane):
             found.append(GraticuleLine(plane, dec_label(value, dec_step), False, value))
     return found

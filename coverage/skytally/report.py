@@ -10,7 +10,7 @@ from pathlib import Path
 from typing import Any
 
 import matplotlib
-from jinja2 import Environment, PackageLoader, StrictUndefined
+from jinja2 import Environment, FunctionLoader, StrictUndefined
 from markupsafe import Markup
 
 from skytally.errors import OutputError
@@ -101,11 +101,16 @@ def _fetcher() -> Any:
     return OwnFilesOnly(allowed_protocols=("data",))
 
 
+def _template(name: str) -> str:
+    """Return the text of one of our templates or style sheets, wherever it is installed."""
+    return (files("skytally.templates") / name).read_text(encoding="utf-8")
+
+
 @cache
 def _environment() -> Environment:
     """Return the template environment: everything escaped, nothing undefined."""
     environment = Environment(
-        loader=PackageLoader("skytally", "templates"),
+        loader=FunctionLoader(_template),
         autoescape=True,
         undefined=StrictUndefined,
         trim_blocks=True,
@@ -118,7 +123,7 @@ def _environment() -> Environment:
 
 def _render(results: Results, sheet: str, *, paper: bool) -> str:
     figures = draw_figures(results)
-    style = (files("skytally.templates") / sheet).read_text(encoding="utf-8")
+    style = _template(sheet)
     template = _environment().get_template("report.html.j2")
     return template.render(
         results=results,

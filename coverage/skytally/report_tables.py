@@ -173,8 +173,8 @@ def _maps(results: Results) -> Table:
         "distance",
         "exposures begun under it",
         "covered",
-        f"of it in 50{NBSP}% region",
-        f"of it in 90{NBSP}% region",
+        f"covered in 50{NBSP}% region",
+        f"covered in 90{NBSP}% region",
         f"90{NBSP}% region’s area covered",
     ]
     if not with_distance:
@@ -509,12 +509,12 @@ def key_figures(results: Results) -> Sequence[tuple[str, str, str]]:
         ("probability covered", probability, bracket.rstrip(")") or f"of “{newest.version}”"),
         ("area observed", _area(total).text, f"by {count('exposure', total.exposures)}"),
         (
-            f"of the 90{NBSP}% region’s area",
+            f"of the 90{NBSP}% region",
             percent(total.area_in_90_deg2 / newest.area_90_deg2),
             f"{_deg2(total.area_in_90_deg2)} of {_deg2(newest.area_90_deg2)}",
         ),
         (
-            "of the probability revisited",
+            "revisited",
             percent(total.probability_revisited),
             f"≥{NBSP}{results.settings.revisit_visits} visits, "
             f"≥{NBSP}{results.settings.revisit_gap_minutes:g}{NBSP}min",
@@ -523,14 +523,8 @@ def key_figures(results: Results) -> Sequence[tuple[str, str, str]]:
     limits = [r for r in _rows(results, "band") if r.depth_median is not None]
     if limits:
         most = max(limits, key=lambda row: (row.exposures, row.band))
-        terms = f"{results.settings.magnitude_system}, {results.settings.significance:g}{NBSP}σ"
-        found.append(
-            (
-                f"median limit in {most.band}",
-                magnitude_text(most.depth_median),
-                f"{terms}, no extinction",
-            )
-        )
+        limit = magnitude_text(most.depth_median)
+        found.append((f"median limit in {most.band}", limit, limit_terms(results.settings)))
     return found
 
 

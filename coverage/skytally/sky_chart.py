@@ -46,6 +46,7 @@ from skytally.projection import (
 from skytally.results import Results
 from skytally.skymap import SkyMap
 from skytally.spans import LINE_ORDER, Ints, Spans
+from skytally.wording import percent
 
 __all__ = [
     "LEAST_PART",
@@ -62,11 +63,15 @@ Floats = NDArray[np.float64]
 _SAMPLES_PER_INCH = 192
 # More outlines than this are left to the sampled mask.
 _MOST_RINGS = 3000
+# The frame of a zoom narrower than this is drawn on the whole sky.
+_SMALL_ZOOM_DEG = 40.0
 _PART_ORDER = 5
 # A part of the credible region that holds less than this is no chart of its own.
 LEAST_PART = 0.15
 _RAMP_LIGHT, _RAMP_DARK = np.array(to_rgb("#f1f3f5")), np.array(to_rgb("#8894a0"))
 _RAMP_STEPS = 20
+# The last part of the probability stays white: it often fills the whole sky.
+_TAIL = 0.02
 _KEY_ROW_IN = 0.19
 _KEY_COLUMNS = 5
 
@@ -114,7 +119,9 @@ def credible_parts(skymap: SkyMap, level: float = 0.9) -> list[Part]:
 
 def _components(cells: Ints) -> NDArray[np.int64]:
     """Number the connected groups of cells of the part order, corners included."""
-    beside = np.asarray(neighbours(cells, 1 << _PART_ORDER, order="nested"))
+    # Where a cell has no neighbour at a corner, the library says −1 with a warning.
+    with np.errstate(invalid="ignore"):
+        beside = np.asarray(neighbours(cells, 1 << _PART_ORDER, order="nested"))
     place = np.searchsorted(cells, beside).clip(max=cells.size - 1)
     row, column = np.nonzero((cells[place] == beside).T)
     graph = coo_array(
@@ -138,8 +145,11 @@ def _directions(starts: Ints, stops: Ints, cells: Ints) -> Floats:
     return np.stack((lon.to_value(u.deg), lat.to_value(u.deg)), axis=1)
 
 
-def whole_sky_figure(results: Results) -> Figure:
-    """Draw the newest map version and all footprints on the whole sky."""
+def whole_sky_figure(results: Results, parts: Sequence[Part]) -> Figure:
+    """Draw the newest map version and all footprints on the whole sky.
+
+    Where the zooms on the parts are small, their frames are drawn in.
+    """
     skymap = results.sky.maps[-1]
     window = whole_sky_window(_middle_ra(skymap))
     shown = _shown(results)
@@ -151,6 +161,10 @@ def whole_sky_figure(results: Results) -> Figure:
     _whole_sky_frame(axes, window, labels=True)
     _outlines(axes, window, results, 0.3)
     _contours(axes, window, skymap, WIDTH_IN, labels=True)
+    for zoom in _zoom_windows(parts):
+        if zoom.right - zoom.left < _SMALL_ZOOM_DEG:
+            frame = window.lines([zoom.unproject(zoom.corners)])
+            axes.plot(*frame.T, color=INK, lw=0.5, zorder=6)
     _draw_key(figure, results, shown, key)
     return figure
 
@@ -159,8 +173,7 @@ def zoom_figure(results: Results, parts: Sequence[Part]) -> Figure:
     """Draw one or two parts of the newest version's 90 % region, side by side."""
     skymap = results.sky.maps[-1]
     number = len(parts)
-    aspects = (0.45, 0.78) if number == 1 else (0.7, 1.25)
-    windows = [zoom_window(part.lonlat_deg, aspects=aspects) for part in parts]
+    windows = _zoom_windows(parts)
     shown = _shown(results)
     key = _key_height(len(shown))
     left, gap, foot, head = 0.42, 0.5, 0.36, 0.06
@@ -187,6 +200,11 @@ def zoom_figure(results: Results, parts: Sequence[Part]) -> Figure:
     return figure
 
 
+def _zoom_windows(parts: Sequence[Part]) -> list[Window]:
+    aspects = (0.45, 0.7) if len(parts) == 1 else (0.7, 1.25)
+    return [zoom_window(part.lonlat_deg, aspects=aspects) for part in parts]
+
+
 def versions_figure(results: Results) -> Figure:
     """Draw one small sky per map version, with the same footprints on each."""
     number = len(results.maps)
@@ -209,7 +227,7 @@ def versions_figure(results: Results) -> Figure:
         _contours(axes, window, skymap, width, labels=False)
         probability = results.row(map=info.version).probability
         axes.set_title(
-            f"{short_label(info.version)}: {100 * probability:.1f} % covered", fontsize=7, pad=4
+            f"{short_label(info.version)}: {percent(probability)} covered", fontsize=7, pad=4
         )
     return figure
 
@@ -278,7 +296,7 @@ def _ramp(level: Floats, density: Floats) -> Floats:
     share = np.where(density > 0, 1 - level, 0.0)
     step = np.ceil(share * _RAMP_STEPS - 1e-9) / _RAMP_STEPS
     colour = _RAMP_LIGHT + (_RAMP_DARK - _RAMP_LIGHT) * step[..., None]
-    return np.where((share > 0.005)[..., None], colour, 1.0)
+    return np.where((share > _TAIL)[..., None], colour, 1.0)
 
 
 def _contours(axes: Axes, window: Window, skymap: SkyMap, width_in: float, *, labels: bool) -> None:
@@ -295,17 +313,22 @@ def _contours(axes: Axes, window: Window, skymap: SkyMap, width_in: float, *, la
         if dashes is not None:
             drawn.set_linestyle((0, dashes))
         if labels:
-            _label_contour(axes, window, drawn.get_paths()[0].to_polygons(closed_only=False), edge)
+            pieces = drawn.get_paths()[0].to_polygons(closed_only=False)
+            _label_contour(axes, window, [np.asarray(piece) for piece in pieces], edge)
 
 
 def _label_contour(
     axes: Axes, window: Window, pieces: Sequence[NDArray[np.float64]], level: float
 ) -> None:
-    """Write the level on the longest pieces of its contour, the 90 % one at another place."""
+    """Write the level on the longest pieces of its contour, the 90 % one at another place.
+
+    A contour too small to carry its label goes without.
+    """
     longest = sorted(pieces, key=len, reverse=True)[:2]
+    least = 0.1 * (window.right - window.left)
     placed: list[NDArray[np.float64]] = []
     for piece in longest:
-        if len(piece) < 12:
+        if len(piece) < 12 or np.hypot(*np.ptp(piece, axis=0)) < least:
             continue
         place = piece[int(len(piece) * (0.3 if level > 0.6 else 0.65))]
         inset = 0.03 * (window.right - window.left)
@@ -318,7 +341,8 @@ def _label_contour(
             continue
         placed.append(place)
         axes.text(
-            *place,
+            float(place[0]),
+            float(place[1]),
             f"{100 * level:.0f} %",
             fontsize=6,
             ha="center",
@@ -495,7 +519,13 @@ def _draw_ramp_key(axes: Axes, y: float) -> None:
         picture, extent=(0.05, 0.95, y + 0.055, y - 0.055), interpolation="none", aspect="auto"
     )
     axes.add_patch(Rectangle((0.05, y - 0.055), 0.9, 0.11, fill=False, ec=RULE, lw=0.5))
-    axes.text(1.01, y, "credible level, 0 % (densest) to 100 %", fontsize=6.5, va="center")
+    axes.text(
+        1.01,
+        y,
+        f"credible level, 0 % (densest) to {100 * (1 - _TAIL):.0f} %",
+        fontsize=6.5,
+        va="center",
+    )
     for x, text, style in (
         (3.35, "50 % region", {"lw": 0.9}),
         (4.4, "90 % region", {"lw": 0.7, "ls": (0, (3.5, 1.5))}),

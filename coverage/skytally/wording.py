@@ -164,12 +164,14 @@ def probability_text(
         are the value, the value alone.
     """
     width = high - low
+    # A hundredth of a percent is all that the method claims; a small value keeps its first digits.
+    most = 2 if value >= 0.01 else 4
     if width <= _EXACT:
-        return percent(value, 2)
+        return percent(value, most)
     if width <= target or not error > 0:
-        decimals = decimals_for(50 * width)
+        decimals = decimals_for(50 * width, most)
         return f"{percent(value, decimals)} ({_percent_bracket(low, high, decimals)})"
-    decimals = decimals_for(100 * error)
+    decimals = decimals_for(100 * error, most)
     text = percent(value, decimals, unit=False)
     shown = math.ceil(100 * error * 10**decimals - 1e-6) / 10**decimals
     return f"{text} ± {shown:.{decimals}f}{NBSP}%" if text[0].isdigit() else f"{text}{NBSP}%"
