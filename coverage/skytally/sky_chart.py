@@ -71,7 +71,7 @@ LEAST_PART = 0.15
 _RAMP_LIGHT, _RAMP_DARK = np.array(to_rgb("#f1f3f5")), np.array(to_rgb("#8894a0"))
 _RAMP_STEPS = 20
 # The last part of the probability stays white: it often fills the whole sky.
-_TAIL = 0.02
+_TAIL = 0.05
 _KEY_ROW_IN = 0.19
 _KEY_COLUMNS = 5
 
