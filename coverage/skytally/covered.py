@@ -116,7 +116,7 @@ class Chosen:
         mine = selection.chosen[exposure]
         group, exposure = group[mine], exposure[mine]
         first = np.flatnonzero(np.diff(group, prepend=-1))
-        last = np.append(first[1:], group.size) - 1
+        last = np.append(first, group.size)[1:] - 1
         here = group[first]
         start, end = coverage.observations.start_mjd, coverage.observations.end_mjd
         # A microsecond of slack: double precision resolves MJD no better.
