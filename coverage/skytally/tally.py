@@ -270,10 +270,13 @@ def _timeline(
 def maps_in_force(start_mjd: Floats, maps: Sequence[SkyMap]) -> Ints:
     """Index of the newest map issued before each start; −1 before the first.
 
-    A version without an issue time was in force from the beginning.
+    A version without an issue time was in force from the beginning. Where one
+    lacks it the maps need not be in order of issue: the last of them counts.
     """
-    issued = np.array([-np.inf if m.issued_mjd is None else m.issued_mjd for m in maps])
-    return np.searchsorted(issued, start_mjd, side="right") - 1
+    force = np.full(start_mjd.size, -1, dtype=np.int64)
+    for index, skymap in enumerate(maps):
+        force[start_mjd >= (-np.inf if skymap.issued_mjd is None else skymap.issued_mjd)] = index
+    return force
 
 
 def tally_as_pointed(coverage: Coverage, maps: Sequence[SkyMap]) -> Iterator[AsPointed]:
