@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -34,9 +35,9 @@ EBV_LIMIT = 50.0  # magnitudes; more is another quantity or unit
 _NAMES = ("ebv", "e(b-v)", "e_bv", "e_b_v", "ebmv", "reddening")
 _UNITS = ("", "mag", "mags", "magnitude", "none", "unknown")
 _NEED = "Give a HEALPix map of the whole sky with E(B-V) in magnitudes in a column EBV."
-# Dust maps do not resolve less than some arcminutes, so finer cells are averaged to
-# these of 3.4′, and a Galactic map of order 8 or less is sampled 16 times per cell.
-_DEEPEST = 10
+# Dust maps do not resolve much less than cells of order 9, 6.9′ wide: finer ones are
+# averaged to these, and a Galactic map is sampled 4 times per such cell, 16 per larger.
+_DEEPEST = 9
 _SAMPLED_ORDER = 10
 _SAMPLES_DEEPER = 2
 _CHUNK = 1 << 18
@@ -71,21 +72,21 @@ def read_dust(
         data, path, size_limit_bytes=size_limit_bytes, error=MapError, must_begin=b"SIMPLE"
     )
     hdus = open_fits(whole, path, error=MapError)
-    dust, galactic, order_max = _read_cells(hdus, path, allow_holes)
+    dust, galactic, order = _read_cells(hdus, path, allow_holes)
     if galactic:
-        dust = _to_line(dust, order_max)
-    notes = dust.notes
+        dust = _to_line(dust, order)
     missing = 1.0 - int(np.sum(dust.stops - dust.starts)) / LINE_END
-    if missing > 0:
-        notes += (
-            f"The dust map has no value over {100 * missing:.3g} % of the sky; limits there are "
-            "not corrected for extinction.",
-        )
-    return Dust(dust.starts, dust.stops, dust.ebv, notes)
+    if not missing:
+        return dust
+    note = (
+        f"The dust map has no value over {100 * missing:.3g} % of the sky; limits there are "
+        "not corrected for extinction."
+    )
+    return replace(dust, notes=(*dust.notes, note))
 
 
 def _read_cells(hdus: fits.HDUList, path: str | Path, allow_holes: bool) -> tuple[Dust, bool, int]:
-    """Read the cells in the map's own frame; whether that is Galactic; the deepest order."""
+    """Read the cells in the map's own frame; whether that is Galactic; the order it is kept at."""
     table, name = find_table(hdus, path, _value_column, "dust map", _NEED)
     galactic = is_galactic(table)
     _check_unit(table, name)
@@ -95,20 +96,18 @@ def _read_cells(hdus: fits.HDUList, path: str | Path, allow_holes: bool) -> tupl
     _check_values(table, name, values, hole, layout)
     if not allow_holes:
         _refuse_holes(table, name, hole, layout)
-    rows = np.flatnonzero(~hole)
-    order, cell = layout.cells(rows)
-    starts, stops = cell_to_span(order, cell)
-    rank = np.argsort(starts)
-    ebv = values[rows[rank]].astype(np.float64)
-    order_max = layout.order_max
-    dust = Dust(starts[rank], stops[rank], ebv)
-    if isinstance(layout, FlatLayout) and order_max > _DEEPEST:
-        dust = _averaged(dust)
+    if isinstance(layout, FlatLayout) and layout.order > _DEEPEST:
+        dust = _averaged(values, hole, layout)
         table.notes.append(
-            f"The dust map is of order {order_max}; it was averaged to cells of order {_DEEPEST}."
+            f"The dust map is of order {layout.order}; it was averaged to cells of order "
+            f"{_DEEPEST}."
         )
-        order_max = _DEEPEST
-    return Dust(dust.starts, dust.stops, dust.ebv, tuple(table.notes)), galactic, order_max
+    else:
+        rows = np.flatnonzero(~hole)
+        starts, stops = cell_to_span(*layout.cells(rows))
+        rank = np.argsort(starts)
+        dust = Dust(starts[rank], stops[rank], values[rows[rank]].astype(np.float64))
+    return replace(dust, notes=tuple(table.notes)), galactic, min(layout.order_max, _DEEPEST)
 
 
 def _value_column(table: HealpixTable) -> str | None:
@@ -176,24 +175,29 @@ def _refuse_holes(table: HealpixTable, name: str, hole: NDArray[np.bool_], layou
         )
 
 
-def _averaged(dust: Dust) -> Dust:
-    """Average cells, all finer than the deepest order wanted, to that order."""
-    size = int(cell_to_span(_DEEPEST, np.zeros(1, dtype=np.int64))[1][0])
-    cell, first = np.unique(dust.starts // size, return_index=True)
-    count = np.diff(first, append=dust.starts.size)
-    return Dust(*cell_to_span(_DEEPEST, cell), np.add.reduceat(dust.ebv, first) / count)
+def _averaged(values: NDArray[Any], hole: NDArray[np.bool_], layout: FlatLayout) -> Dust:
+    """Average the pixels of a flat map to the deepest order wanted, holes left out."""
+    total = np.zeros(12 << (2 * _DEEPEST))
+    count = np.zeros(total.size)
+    for low in range(0, values.size, _CHUNK):
+        rows = low + np.flatnonzero(~hole[low : low + _CHUNK])
+        _, cell = layout.cells(rows)
+        coarse = cell >> (2 * (layout.order - _DEEPEST))
+        np.add.at(total, coarse, values[rows])
+        np.add.at(count, coarse, 1.0)
+    known = np.flatnonzero(count)
+    return Dust(*cell_to_span(_DEEPEST, known), total[known] / count[known])
 
 
-def _to_line(dust: Dust, order_max: int) -> Dust:
-    """Sample a Galactic map at the sub-cells of ICRS cells and take the mean."""
-    order = min(order_max, _DEEPEST)
+def _to_line(dust: Dust, order: int) -> Dust:
+    """Sample a Galactic map at the sub-cells of ICRS cells of an order and take the mean."""
     depth = max(0, min(_SAMPLES_DEEPER, _SAMPLED_ORDER - order))
     mean = _mean_at(dust.at, order, depth)
     cell = np.flatnonzero(np.isfinite(mean))
     notes = (
         *dust.notes,
-        f"The dust map is in Galactic coordinates, order {order_max}; each ICRS cell of order "
-        f"{order} got the mean of {4**depth} points in it.",
+        f"The dust map is in Galactic coordinates; each ICRS cell of order {order} got the mean "
+        f"of {4**depth} points in it.",
     )
     return Dust(*cell_to_span(order, cell), mean[cell], notes)
 
