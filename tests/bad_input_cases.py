@@ -217,8 +217,8 @@ CAMPAIGNS = (
     Case("campaign binary", put(CAMPAIGN, b"\x1f\x8b\x08\0\0\0"), ("line 1",), "as UTF-8"),
     Case(
         "campaign in Latin-1",
-        recoded(toml("An institute", "Möwe"), CAMPAIGN),
-        ("campaign.toml", "line 73", "not UTF-8"),
+        recoded(toml('name = "Lantern 7"', 'name = "Möwe"'), CAMPAIGN),
+        ("campaign.toml", "line 10", "not UTF-8"),
         "Save the file as UTF-8",
     ),
     Case("campaign enormous", put(CAMPAIGN, "#" * 4_000_001), ("larger than 4 MB",), "Name the"),
