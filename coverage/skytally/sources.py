@@ -54,7 +54,7 @@ class Detection:
 
     @property
     def range_mag(self) -> tuple[float, float]:
-        """m − limit between which the efficiency falls from its plateau to nothing."""
+        """Range of m − limit over which the efficiency falls from its plateau to nothing."""
         # expit(25) differs from 1 by 1e-11; a step needs some room on either side.
         reach = max(25 * self.width, 0.05)
         return self.offset - reach, self.offset + reach
