@@ -1,0 +1,348 @@
+"""What could have been seen: reach, detectable probability and volume for each source."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from skytally.covered import Coverage
+from skytally.dust import Dust
+from skytally.grouping import expand_ranges, sum_by
+from skytally.overlay import Overlay
+from skytally.patchwork import Patchwork
+from skytally.reach import (
+    Visits,
+    absolute_magnitudes,
+    deciding_visits,
+    order_by_reach,
+    seen_share,
+    visit_reach,
+)
+from skytally.selection import Selection, selections
+from skytally.sources import Source
+from skytally.space import Space
+from skytally.spans import Ints
+
+__all__ = ["Scene", "SeenSource", "SourceRow", "tally_sources"]
+
+Floats = NDArray[np.float64]
+Bools = NDArray[np.bool_]
+
+# Steps of the integral over a detection curve, in magnitudes of distance modulus.
+_CURVE_STEP_MAG = 0.1
+_VISITS_AT_ONCE = 20_000
+
+
+@dataclass(frozen=True)
+class SourceRow:
+    """What one selection could have seen of one source on one map version.
+
+    Probabilities are fractions of all the map's probability. The covered
+    probability is the sum of what is detectable, what lies beyond reach or is
+    missed, and what is without distance. Distances are luminosity distances;
+    reaches are over places weighted by their probability, 0 where an exposure
+    states no limit.
+    """
+
+    map: str
+    telescope: str | None
+    band: str | None
+    night: str | None
+    source: str
+    reach_min_mpc: float | None
+    reach_median_mpc: float | None
+    reach_max_mpc: float | None
+    probability: float
+    probability_low: float
+    probability_high: float
+    probability_beyond: float
+    probability_without_distance: float
+    volume_mpc3: float
+    volume_comoving_mpc3: float
+    volume_90_covered_mpc3: float | None
+    volume_90_covered_comoving_mpc3: float | None
+    volume_90_within_reach_mpc3: float | None
+    volume_90_within_reach_comoving_mpc3: float | None
+
+
+@dataclass(frozen=True, eq=False)
+class Scene:
+    """One map's third dimension laid under one patchwork.
+
+    Attributes
+    ----------
+    space : Space
+        The map.
+    overlay : Overlay
+        Covered sky by place and cell.
+    visits : Visits
+        Which exposures looked at each place.
+    """
+
+    space: Space
+    overlay: Overlay
+    visits: Visits
+
+    @classmethod
+    def of(
+        cls,
+        space: Space,
+        patchwork: Patchwork,
+        coverage: Coverage,
+        dust: Dust | None,
+        coefficients: Mapping[str, float],
+    ) -> Scene:
+        """Lay a map and the dust under a patchwork."""
+        overlay = Overlay.build(patchwork, space.skymap, dust)
+        visits = Visits.of(patchwork, overlay, coverage.observations, coefficients)
+        return cls(space, overlay, visits)
+
+    def rows_of(self, place: Ints) -> tuple[Ints, Ints]:
+        """Overlay rows of each place given: (position in ``place``, row)."""
+        first = np.searchsorted(self.overlay.place, np.arange(self.overlay.places + 1))
+        return expand_ranges(first[place], np.diff(first)[place])
+
+    def detectable(self, place: Ints, reach_mpc: Floats) -> Floats:
+        """Probability within reach at each place given, shape (n,)."""
+        position, row = self.rows_of(place)
+        held = self.overlay.probability[row] * self.space.within(
+            self.overlay.cell[row], reach_mpc[position]
+        )
+        return sum_by(position, held, place.size)
+
+
+@dataclass(frozen=True, eq=False)
+class SeenSource:
+    """What a source is worth visit by visit, and in which order visits decide.
+
+    Attributes
+    ----------
+    source, scene
+        What is looked for, and where.
+    place, exposure : int64 arrays, shape (visits,)
+        Visits by place and falling reach.
+    start_mjd, reach_mpc : float64 arrays, shape (visits,)
+        Start, and luminosity distance at the limit; 0 where unseen.
+    worth : float64 array, shape (visits,)
+        Probability within this reach at the visit's place (zero for a
+        detection curve, which has no single reach).
+    """
+
+    source: Source
+    scene: Scene
+    place: Ints
+    exposure: Ints
+    start_mjd: Floats
+    reach_mpc: Floats
+    worth: Floats
+
+    @classmethod
+    def of(cls, source: Source, scene: Scene, coverage: Coverage, event_mjd: float) -> SeenSource:
+        """Reach of a source in every visit of a scene."""
+        magnitude = absolute_magnitudes(source, coverage.observations, event_mjd)
+        reach = visit_reach(scene.visits, magnitude, source.k_correction, scene.space.cosmology)
+        order = order_by_reach(scene.visits.place, reach)
+        place, exposure, reach = (
+            scene.visits.place[order],
+            scene.visits.exposure[order],
+            reach[order],
+        )
+        start = coverage.observations.start_mjd[exposure]
+        worth = scene.detectable(place, reach) if source.detection.is_step else np.zeros(reach.size)
+        return cls(source, scene, place, exposure, start, reach, worth)
+
+    def decide(self, chosen: Bools) -> tuple[Ints, Ints]:
+        """Places that a selection's exposures see often enough, and the visit that decides."""
+        mine = np.flatnonzero(chosen[self.exposure])
+        place, row = deciding_visits(
+            self.place[mine], self.start_mjd[mine], self.source.visits, self.source.gap_minutes
+        )
+        return place, mine[row]
+
+    def reach_by_place(self) -> Floats:
+        """How far all exposures together would have shown it, 0 where unseen; (places,)."""
+        reach = np.zeros(self.scene.overlay.places)
+        place, visit = self.decide(np.ones(int(self.exposure.max(initial=-1)) + 1, dtype=bool))
+        reach[place] = self.reach_mpc[visit]
+        return reach
+
+    def probability(self, chosen: Bools) -> float:
+        """Detectable probability of a selection."""
+        if self.source.detection.is_step:
+            return float(self.worth[self.decide(chosen)[1]].sum())
+        total = 0.0
+        for place, nodes, share in self._curve_shares(chosen):
+            total += self._integrate(place, nodes[0], share)
+        return total
+
+    def shares(self, chosen: Bools) -> Iterator[tuple[Ints, Floats, Floats]]:
+        """Yield places, distances (m, nodes), and the share seen up to each from the one before."""
+        if self.source.detection.is_step:
+            place, visit = self.decide(chosen)
+            yield place, self.reach_mpc[visit][:, None], np.ones((place.size, 1))
+        else:
+            yield from self._curve_shares(chosen)
+
+    def _curve_shares(self, chosen: Bools) -> Iterator[tuple[Ints, Floats, Floats]]:
+        """Sample the detection curves at nodes of equal steps in distance modulus."""
+        mine = np.flatnonzero(chosen[self.exposure] & (self.reach_mpc > 0))
+        mine = mine[np.lexsort((self.start_mjd[mine], self.place[mine]))]
+        if mine.size == 0:
+            return
+        nodes = self._nodes(mine)
+        cut = np.flatnonzero(np.diff(self.place[mine], prepend=-1))
+        starts = cut[np.flatnonzero(np.diff(cut // _VISITS_AT_ONCE, prepend=-1))]
+        for begin, end in zip(starts, np.append(starts[1:], mine.size)):
+            rows = mine[begin:end]
+            beyond = self._beyond_limit(nodes, self.reach_mpc[rows])
+            place, at_node = seen_share(
+                self.place[rows],
+                self.start_mjd[rows],
+                self.source.detection.efficiency(beyond),
+                self.source.visits,
+                self.source.gap_minutes,
+            )
+            share = np.concatenate((at_node[:, :1], (at_node[:, 1:] + at_node[:, :-1]) / 2), axis=1)
+            yield place, np.broadcast_to(nodes, share.shape), share
+
+    def _beyond_limit(self, nodes: Floats, reach: Floats) -> Floats:
+        """Magnitudes by which a source at each node is fainter than the limit, (visits, nodes)."""
+        beyond = 5 * np.log10(nodes[None, :] / reach[:, None])
+        if self.source.k_correction == "flat":
+            redshift = self.scene.space.cosmology.redshift
+            beyond -= 2.5 * np.log10((1 + redshift(nodes)) / (1 + redshift(reach)[:, None]))
+        return np.asarray(beyond)
+
+    def _nodes(self, rows: Ints) -> Floats:
+        """Distances (Mpc) from where detection is sure to where it has ended, rising."""
+        first, last = self.source.detection.range_mag
+        reach = self.reach_mpc[rows]
+        low, high = (5 * np.log10(edge) for edge in (reach.min(), reach.max()))
+        count = int(np.ceil((high - low + last - first) / _CURVE_STEP_MAG)) + 1
+        return np.asarray(10 ** (np.linspace(low + first, high + last, count) / 5))
+
+    def _integrate(self, place: Ints, nodes: Floats, share: Floats) -> float:
+        """∫ p(r) S(r) dr over the places' rows, weighted by their probability."""
+        position, row = self.scene.rows_of(place)
+        cell = self.scene.overlay.cell[row]
+        # Many rows lie in few cells: distances are looked up once per cell.
+        cells, rank = np.unique(cell, return_inverse=True)
+        held = np.zeros(row.size)
+        below = np.zeros(cells.size)
+        for node in range(nodes.size):
+            within = self.scene.space.within(cells, np.full(cells.size, nodes[node]))
+            held += (within - below)[rank] * share[position, node]
+            below = within
+        return float(np.sum(held * self.scene.overlay.probability[row]))
+
+
+def tally_sources(
+    coverage: Coverage,
+    space: Space,
+    sources: Sequence[Source],
+    event_mjd: float,
+    dust: Dust | None,
+    coefficients: Mapping[str, float],
+) -> list[SourceRow]:
+    """Tally every source for every selection on one map version with distances."""
+    scenes = [
+        Scene.of(space, patchwork, coverage, dust, coefficients)
+        for patchwork in (coverage.centre, coverage.inner, coverage.outer)
+    ]
+    rows = []
+    for source in sources:
+        seen = [SeenSource.of(source, s, coverage, event_mjd) for s in scenes]
+        volumes = _Volumes.of(seen[0])
+        for selection in selections(coverage.observations):
+            rows.append(_row(space, selection, seen, volumes))
+    return rows
+
+
+@dataclass(frozen=True, eq=False)
+class _Volumes:
+    """Volumes per visit of the centre rule's scene, and what each place holds."""
+
+    reach_mpc3: Floats  # (visits,)
+    reach_comoving: Floats
+    within_mpc3: Floats
+    within_comoving: Floats
+    covered_mpc3: Floats  # (places,)
+    covered_comoving: Floats
+    probability: Floats
+    without: Floats
+
+    @classmethod
+    def of(cls, seen: SeenSource) -> _Volumes:
+        scene = seen.scene
+        overlay, space = scene.overlay, scene.space
+        solid = sum_by(overlay.place, overlay.solid_angle_sr, overlay.places)
+        position, row = scene.rows_of(seen.place)
+        within = space.credible_shell(
+            overlay.cell[row], overlay.solid_angle_sr[row], seen.reach_mpc[position]
+        )
+        far = np.full(overlay.cell.size, np.inf)
+        covered = space.credible_shell(overlay.cell, overlay.solid_angle_sr, far)
+        unknown = (overlay.cell < 0) | ~space.known[overlay.cell]
+        zero = np.zeros(seen.reach_mpc.size)
+        return cls(
+            solid[seen.place] * seen.reach_mpc**3 / 3,
+            space.comoving_shell(solid[seen.place], zero, seen.reach_mpc),
+            *(sum_by(position, part, seen.place.size) for part in within),
+            *(sum_by(overlay.place, part, overlay.places) for part in covered),
+            sum_by(overlay.place, overlay.probability, overlay.places),
+            sum_by(overlay.place, np.where(unknown, overlay.probability, 0.0), overlay.places),
+        )
+
+
+def _row(
+    space: Space, selection: Selection, seen: Sequence[SeenSource], volumes: _Volumes
+) -> SourceRow:
+    """Put one selection's numbers for one source together."""
+    centre = seen[0]
+    value, low, high = (one.probability(selection.chosen) for one in seen)
+    places = np.unique(centre.place[selection.chosen[centre.exposure]])
+    place, visit = centre.decide(selection.chosen)
+    reach = np.zeros(places.size)
+    reach[np.searchsorted(places, place)] = centre.reach_mpc[visit]
+    covered = float(volumes.probability[places].sum())
+    without = float(volumes.without[places].sum())
+    has_90 = space.credible(0.9) is not None
+
+    def total(part: Floats, where: Ints) -> float | None:
+        return float(part[where].sum()) if has_90 else None
+
+    return SourceRow(
+        space.skymap.label,
+        selection.telescope,
+        selection.band,
+        selection.night,
+        centre.source.name,
+        *_reach_numbers(reach, volumes.probability[places]),
+        value,
+        min(low, value),
+        max(high, value),
+        max(covered - without - value, 0.0),
+        without,
+        float(volumes.reach_mpc3[visit].sum()),
+        float(volumes.reach_comoving[visit].sum()),
+        total(volumes.covered_mpc3, places),
+        total(volumes.covered_comoving, places),
+        total(volumes.within_mpc3, visit),
+        total(volumes.within_comoving, visit),
+    )
+
+
+def _reach_numbers(
+    reach: Floats, weight: Floats
+) -> tuple[float | None, float | None, float | None]:
+    """Least, median (by weight) and greatest reach; None where nothing is reached."""
+    reached = reach > 0
+    if not reached.any():
+        return None, None, None
+    order = np.argsort(reach)
+    held = np.cumsum(weight[order])
+    middle = min(int(np.searchsorted(held, held[-1] / 2)), reach.size - 1)
+    return float(reach[reached].min()), float(reach[order[middle]]), float(reach.max())
