@@ -46,8 +46,9 @@ def campaign(tmp_path: Path) -> Path:
 @pytest.fixture
 def _quick_renderers(monkeypatch: pytest.MonkeyPatch) -> None:
     """The renderers have tests of their own; here only the command matters."""
-    monkeypatch.setattr(outputs, "render_html", lambda results: "<p></p>\n")
-    monkeypatch.setattr(outputs, "render_pdf", lambda results: b"%PDF-")
+    monkeypatch.setattr(outputs, "render_html", lambda results, figures: "<p></p>\n")
+    monkeypatch.setattr(outputs, "render_pdf", lambda results, figures: b"%PDF-")
+    monkeypatch.setattr(outputs, "draw_figures", lambda results: {})
 
 
 def test_help_and_import_load_nothing_heavy() -> None:
@@ -125,7 +126,7 @@ def test_report_writes_the_folder_and_prints_the_answer(campaign: Path, tmp_path
 def test_a_report_without_pdf_ends_with_three(
     campaign: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    def fail(results: object) -> bytes:
+    def fail(results: object, figures: object) -> bytes:
         raise OutputError("the PDF could not be made", remedy="Install libpango-1.0-0.")
 
     monkeypatch.setattr(outputs, "render_pdf", fail)

@@ -35,8 +35,11 @@ EVERYTHING = {
 @pytest.fixture(autouse=True)
 def _quick_renderers(monkeypatch: pytest.MonkeyPatch) -> None:
     """The renderers have tests of their own; here only the files matter."""
-    monkeypatch.setattr(outputs, "render_html", lambda results: f"<p>{results.event.name}</p>\n")
-    monkeypatch.setattr(outputs, "render_pdf", lambda results: b"%PDF-")
+    monkeypatch.setattr(
+        outputs, "render_html", lambda results, figures: f"<p>{results.event.name}</p>\n"
+    )
+    monkeypatch.setattr(outputs, "render_pdf", lambda results, figures: b"%PDF-")
+    monkeypatch.setattr(outputs, "draw_figures", lambda results: {})
 
 
 def tree(folder: Path) -> dict[str, bytes]:
@@ -166,7 +169,7 @@ def test_a_failed_rendering_changes_nothing(
         write_outputs(small_results(), night)
     before = tree(tmp_path)
 
-    def fail(results: Results) -> str:
+    def fail(results: Results, figures: object) -> str:
         raise RuntimeError("broken template")
 
     monkeypatch.setattr(outputs, "render_html", fail)
@@ -182,7 +185,7 @@ def test_without_a_pdf_the_rest_is_written_and_no_old_pdf_stays(
 ) -> None:
     write_outputs(small_results(), tmp_path)
 
-    def fail(results: Results) -> bytes:
+    def fail(results: Results, figures: object) -> bytes:
         raise OutputError("the PDF could not be made", remedy="Install libpango-1.0-0.")
 
     monkeypatch.setattr(outputs, "render_pdf", fail)

@@ -336,7 +336,8 @@ class _Loader:
         self.inputs.extend((role, str(folder / file), digest) for role, file, digest in files)
         if len(log) == 0:
             self.notes.append(
-                f"{table.name}: no row of {name} counts ({log.read} read, all set aside)."
+                f"{table.name}: no row of {name} counts ({log.read} read, all set aside); "
+                "check the event's time and the reasons of the rows."
             )
         return log, regions
 

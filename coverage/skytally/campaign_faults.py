@@ -174,6 +174,16 @@ def parse_campaign(path: Path) -> ParsedCampaign:
 
 
 def _read(path: Path) -> bytes:
+    try:
+        return _read_file(path)
+    except (OSError, ValueError) as problem:
+        reason = (getattr(problem, "strerror", None) or str(problem)).lower()
+        raise CampaignError(
+            [f"cannot be read: {reason}. Check the path and the file's permissions."], file=path
+        ) from None
+
+
+def _read_file(path: Path) -> bytes:
     if path.is_dir():
         inside = path / "campaign.toml"
         remedy = f"Name {inside}." if inside.is_file() else "Name the file inside it."
@@ -181,13 +191,12 @@ def _read(path: Path) -> bytes:
     if not path.exists():
         remedy = "Check the path, or start a campaign with: skytally new DIR"
         raise CampaignError([f"there is no such file. {remedy}"], file=path)
-    try:
-        with path.open("rb") as stream:
-            content = stream.read(SIZE_LIMIT_BYTES + 1)
-    except OSError as problem:
+    if not path.is_file():  # A pipe would be waited for without end.
         raise CampaignError(
-            [f"cannot be read: {problem.strerror}. Check the file's permissions."], file=path
-        ) from None
+            ["a device or a pipe, not a plain file. Name the TOML file."], file=path
+        )
+    with path.open("rb") as stream:
+        content = stream.read(SIZE_LIMIT_BYTES + 1)
     if len(content) > SIZE_LIMIT_BYTES:
         raise CampaignError(
             [
@@ -299,7 +308,9 @@ def _sentence(fault: ErrorDetails, prefix: Place, value: object) -> str:
     else:
         # Kinds that the table does not name still get what the key is for.
         template = _EXPECTED.get(fault["type"], "a value that fits this key")
-        expected = template.format(kind=_kind(field), limit=context.get("max_length"))
+        most = context.get("max_length")
+        limit = "1 character" if most == 1 else f"{most} characters"
+        expected = template.format(kind=_kind(field), limit=limit)
         remedy = _REMEDY.get(fault["type"], "")
     received = "missing" if fault["type"] == "missing" else f"got {shown(fault['input'])}"
     parts = [f"{place}: {received}, expected {expected}.", remedy]
@@ -394,7 +405,9 @@ def _choices(field: FieldInfo | None) -> list[str]:
 def _alike(value: object, field: FieldInfo | None) -> str:
     choices = {c.lower(): c for c in _choices(field)}
     near = difflib.get_close_matches(json.dumps(str(value).lower()), choices, 1)
-    return f"Did you mean {choices[near[0]]}?" if near else f"Give {choices.popitem()[1]}."
+    if near:
+        return f"Did you mean {choices[near[0]]}?"
+    return f"Give {field.description}." if field is not None and field.description else ""
 
 
 def _whereto(

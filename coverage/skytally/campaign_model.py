@@ -6,6 +6,7 @@ Nothing that the file names is opened here, only looked for.
 from __future__ import annotations
 
 import re
+from datetime import datetime
 from pathlib import Path
 from typing import Annotated, Literal
 
@@ -43,6 +44,7 @@ __all__ = [
 ]
 
 NAME_LIMIT = 100
+FIRST_YEAR, LAST_YEAR = 1900, 2180  # inside what logs may state
 
 # A region text names a shape and then holds numbers; anything else in a mask is a file.
 _REGION_TEXT = re.compile(
@@ -112,6 +114,12 @@ def _region_or_moc(text: str, info: ValidationInfo) -> str:
     return text
 
 
+def _moment(moment: datetime) -> datetime:
+    if not FIRST_YEAR <= moment.year <= LAST_YEAR:
+        raise _refusal(f"a year from {FIRST_YEAR} to {LAST_YEAR}", "Correct the date.")
+    return moment
+
+
 def _listed(value: object) -> object:
     return [value] if isinstance(value, str) else value
 
@@ -125,6 +133,7 @@ Name = Annotated[str, AfterValidator(_name)]
 FilePattern = Annotated[str, AfterValidator(_pattern)]
 LocalFile = Annotated[str, AfterValidator(_local_file)]
 RegionOrMoc = Annotated[str, AfterValidator(_region_or_moc)]
+Moment = Annotated[AwareDatetime, AfterValidator(_moment)]
 MagnitudeSystem = Literal["AB", "Vega"]
 
 
@@ -138,7 +147,7 @@ class EventTable(Table):
     """``[event]``."""
 
     name: Name = Field(description="the event's name in quotes")
-    time: AwareDatetime = Field(
+    time: Moment = Field(
         description="the event's time without quotes, such as 2031-03-14T05:21:08Z"
     )
 
@@ -195,7 +204,7 @@ class MapTable(Table):
     circle: MapCircleTable | None = Field(
         default=None, description="{ ra = 150.2, dec = -8.1, radius_90 = 2.5 }, all in degrees"
     )
-    issued: AwareDatetime | None = Field(
+    issued: Moment | None = Field(
         default=None, description="when this version was issued, such as 2031-03-14T05:27:00Z"
     )
 

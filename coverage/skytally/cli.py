@@ -279,7 +279,10 @@ def _explain(error: BaseException) -> tuple[int, str]:
         return EXIT_INTERRUPTED, "Stopped."
     if isinstance(error, OSError):
         place = f"{error.filename}: " if error.filename is not None else ""
-        return EXIT_INPUT, f"Error: {place}it could not be read ({_reason(error)})."
+        return (
+            EXIT_INPUT,
+            f"Error: {place}it could not be read ({_reason(error)}). Check it and its permissions.",
+        )
     return EXIT_INPUT, "Error: memory ran out. Split the campaign, or use a larger machine."
 
 

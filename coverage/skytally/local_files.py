@@ -17,12 +17,13 @@ import warnings
 import zlib
 from pathlib import Path
 from stat import S_ISDIR, S_ISREG
+from typing import Any
 
 from astropy.io import fits
 
 from skytally.errors import InputError, OutputError
 
-__all__ = ["expand", "is_url", "open_fits", "read_local_file", "write_whole"]
+__all__ = ["expand", "header_value", "is_url", "open_fits", "read_local_file", "write_whole"]
 
 _CHUNK = 1 << 22
 # Two letters at least, so that a Windows drive is a path; pathlib folds "//" into "/".
@@ -143,13 +144,13 @@ def expand(
                     )
     except EOFError as cause:
         raise error(
-            f"the compressed file ends too early, after {_size_text(whole.tell())} of content",
+            "the compressed file ends too early",
             file=path,
             remedy="It was cut short: copy or download it again.",
         ) from cause
     except (OSError, zlib.error) as cause:
         raise error(
-            f"the compressed file is damaged ({cause})",
+            "the compressed file is damaged",
             file=path,
             remedy="Copy or download it again.",
         ) from cause
@@ -165,9 +166,8 @@ def open_fits(data: bytes, path: str | Path, *, error: type[InputError]) -> fits
         Of the type ``error``: not FITS, or cut short.
     """
     if not data.startswith(b"SIMPLE  ="):
-        seen = "an empty file" if not data else f"a file that begins with {data[:12]!r}"
         raise error(
-            f"this is {seen}, expected FITS, plain or compressed with gzip",
+            f"this is {_beginning(data)}, expected FITS, plain or compressed with gzip",
             file=path,
             remedy="Check that it is the right file.",
         )
@@ -180,7 +180,7 @@ def open_fits(data: bytes, path: str | Path, *, error: type[InputError]) -> fits
         # Damaged headers end in whatever the parser trips over.
         except Exception as cause:
             raise error(
-                f"the FITS headers cannot be read ({type(cause).__name__}: {cause})",
+                "the FITS headers cannot be read",
                 file=path,
                 remedy="The file is damaged or cut short: copy or download it again.",
             ) from cause
@@ -190,20 +190,51 @@ def open_fits(data: bytes, path: str | Path, *, error: type[InputError]) -> fits
     return hdus
 
 
+def _beginning(data: bytes) -> str:
+    """Say what a file is by how it begins."""
+    if not data:
+        return "an empty file"
+    line = data[:12].decode("latin-1").strip().partition("\n")[0].strip()
+    text = "".join(c if c.isascii() and c.isprintable() else "?" for c in line)
+    if text.strip("?"):
+        return f"a file that begins with {text!r}"
+    return f"a file that begins with the bytes {data[:8].hex(' ')}"
+
+
 def _check_whole(hdu: fits.BinTableHDU, path: str | Path, error: type[InputError]) -> None:
     """Refuse a table with fewer rows than its header announces."""
-    announced = hdu.header["NAXIS2"]
     try:
+        announced = hdu.header["NAXIS2"]
         found = len(hdu.data)
         trouble = f"it ends after {found} of {announced} rows" if found < announced else None
-    except Exception as cause:  # see above
-        trouble = f"its rows cannot be read: {cause}"
+    except Exception:  # see above
+        trouble = "its rows cannot be read"
     if trouble:
         raise error(
             f"the table of this FITS file is not whole ({trouble})",
             file=path,
             remedy="The file is damaged or cut short: copy or download it again.",
         )
+
+
+def header_value(
+    header: fits.Header, key: str, default: Any, path: str | Path, error: type[InputError]
+) -> Any:
+    """Return the value of a keyword, the default where the header lacks it.
+
+    Raises
+    ------
+    InputError
+        Of the type ``error``, if its line is damaged.
+    """
+    try:
+        return header.get(key, default)
+    except fits.VerifyError as cause:
+        raise error(
+            f"the line of the keyword {key} in the FITS header cannot be read",
+            file=path,
+            remedy="Correct the header, or copy or download the file again.",
+        ) from cause
 
 
 def write_whole(path: str | Path, data: bytes) -> None:

@@ -125,7 +125,7 @@ def _mapped_column(
     name = normalise_name(wanted)
     if name in bare:
         return bare.index(name)
-    near = get_close_matches(name, bare, n=3, cutoff=0.4)
+    near = get_close_matches(name, dict.fromkeys(bare), n=3, cutoff=0.4)
     close = [repr(table.names[bare.index(x)]) for x in near]
     hint = f"The nearest are {', '.join(close)}" if close else "No name is near it"
     raise LogError(

@@ -320,12 +320,11 @@ class _Reading:
         cells = self._cells("ra")
         known = np.flatnonzero(np.isfinite(ra)).tolist()
         numbers = [i for i in known if is_number(cells[i], self._comma)]
-        sexagesimal = len(known) - len(numbers)
         name = self._name("ra")
-        if sexagesimal and numbers:
+        if 0 < len(numbers) < len(known):
             self._notes.append(
-                f"Column {name!r} mixes {len(numbers)} plain numbers, read as degrees, and "
-                f"{sexagesimal} sexagesimal values, read as hours; set ra_unit if this is wrong."
+                f"Column {name!r} mixes plain numbers ({len(numbers)} of {len(known)}), read as "
+                "degrees, and sexagesimal values, read as hours; set ra_unit if this is wrong."
             )
         elif len(numbers) >= 5 and (ra[numbers] <= 24.0).all():
             self._notes.append(

@@ -46,7 +46,7 @@ def resolve_regions(
         The MOC files read.
     """
     shapes: dict[str, Shape] = {}
-    faults: dict[str, SkytallyError] = {}
+    faults: dict[str, str] = {}
     inputs: list[tuple[str, str, str]] = []
     for text in sorted(set(log.region) - {""}):
         try:
@@ -58,7 +58,8 @@ def resolve_regions(
             else:
                 shapes[text] = parse_region(text)
         except SkytallyError as error:
-            faults[text] = error
+            # The path as the log has it, not as it is on this machine.
+            faults[text] = f"{text}: {error.message.rstrip('.')}. {error.remedy or ''}".rstrip()
     if not faults:
         return log, shapes, inputs
     bad = np.array([text in faults for text in log.region])
@@ -69,7 +70,7 @@ def resolve_regions(
             int(log.row[place]),
             log.exposure[place],
             "unreadable",
-            str(faults[log.region[place]]),
+            faults[log.region[place]],
             "region",
         )
         for place in np.flatnonzero(bad)

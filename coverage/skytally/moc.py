@@ -12,19 +12,22 @@ import io
 import json
 import re
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 from astropy.io import fits
 from mocpy import MOC
+from numpy.typing import NDArray
 
 from skytally.errors import RegionError
-from skytally.local_files import expand, open_fits, read_local_file, write_whole
+from skytally.local_files import expand, header_value, open_fits, read_local_file, write_whole
 from skytally.spans import LINE_END, LINE_ORDER, Ints, Spans, spans_to_cells, uniq_to_cell
 
 __all__ = ["from_mocpy", "parse_moc_ascii", "read_moc", "to_ascii", "to_mocpy", "write_moc"]
 
 SIZE_LIMIT_BYTES = 512 << 20
 
+_MAP_IS_NO_MOC = "A probability map is no MOC; write its region as a MOC first."
 _TOKEN = re.compile(r"(?:(\d+)/)?(?:(\d+)(?:-(\d+))?)?")
 
 
@@ -149,18 +152,22 @@ def _parse_json(text: str) -> Spans:
     return _from_ranges(ranges)
 
 
+def _keyword(hdu: fits.BinTableHDU, key: str, default: str, path: str | Path) -> str:
+    return str(header_value(hdu.header, key, default, path, RegionError)).strip().upper()
+
+
 def _moc_table(hdus: fits.HDUList, path: str | Path) -> fits.BinTableHDU:
     """Find the table that states an ordering we know, and check what it covers."""
     found = []
     for hdu in hdus:
-        ordering = str(hdu.header.get("ORDERING", "")).strip().upper()
+        ordering = _keyword(hdu, "ORDERING", "", path)
         if not isinstance(hdu, fits.BinTableHDU):
             continue
         found.append(ordering or "none stated")
         if ordering not in {"NUNIQ", "RANGE"}:
             continue
-        kind = str(hdu.header.get("MOCDIM", "SPACE")).strip().upper()
-        frame = str(hdu.header.get("COORDSYS", "C")).strip().upper()
+        kind = _keyword(hdu, "MOCDIM", "SPACE", path)
+        frame = _keyword(hdu, "COORDSYS", "C", path)
         if kind != "SPACE":
             raise RegionError(
                 f"this is a MOC of dimension {kind}, expected SPACE",
@@ -173,12 +180,22 @@ def _moc_table(hdus: fits.HDUList, path: str | Path) -> fits.BinTableHDU:
                 file=path,
                 remedy="Convert it to ICRS; the MOC standard knows no other frame.",
             )
+        names = hdu.columns.names
+        if len(names) > 1:
+            raise RegionError(
+                f"this table has {len(names)} columns ({', '.join(names[:8])}), "
+                "expected the one of a MOC",
+                file=path,
+                remedy=_MAP_IS_NO_MOC,
+            )
         return hdu
     raise RegionError(
-        f"this FITS file holds no MOC (ORDERING of its tables: {', '.join(found) or 'no table'}), "
-        "expected ORDERING NUNIQ or RANGE",
+        f"this FITS file holds no MOC (ORDERING of its tables: {', '.join(found)}), "
+        "expected ORDERING NUNIQ or RANGE"
+        if found
+        else "this FITS file holds no table, so no MOC",
         file=path,
-        remedy="A probability map is no MOC; write its region as a MOC first.",
+        remedy=_MAP_IS_NO_MOC if found else "It was cut short, or is the wrong file.",
     )
 
 
@@ -194,12 +211,12 @@ def _read_fits(data: bytes, path: str | Path) -> Spans:
         ) from cause
     if column.dtype.kind not in "iu":
         raise RegionError(
-            f"the MOC's numbers are stored as {column.dtype.name}, expected integers",
+            f"the MOC's numbers are stored as {_kind(column)}, expected integers",
             file=path,
             remedy="Write the MOC again, with a column of 32 or 64 bit integers.",
         )
     numbers = column.ravel().astype(np.int64)
-    if str(hdu.header["ORDERING"]).strip().upper() == "RANGE":
+    if _keyword(hdu, "ORDERING", "", path) == "RANGE":
         return _from_range_column(numbers, path)
     try:
         return Spans.from_cells(*uniq_to_cell(numbers))
@@ -210,6 +227,10 @@ def _read_fits(data: bytes, path: str | Path) -> Spans:
             file=path,
             remedy="Write the MOC again.",
         ) from cause
+
+
+def _kind(column: NDArray[Any]) -> str:
+    return "text" if column.dtype.kind in "SU" else column.dtype.name
 
 
 def _from_range_column(numbers: Ints, path: str | Path) -> Spans:

@@ -18,15 +18,18 @@ import re
 import secrets
 import shutil
 import unicodedata
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from contextlib import contextmanager, suppress
 from dataclasses import asdict
+from functools import cache
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 
 from skytally import __version__
 from skytally.circular import render_circular
 from skytally.errors import OutputError
+from skytally.figure_style import Drawing
+from skytally.figures import draw_figures
 from skytally.footprints import Progress
 from skytally.moc import write_moc
 from skytally.report import render_html, render_pdf
@@ -92,9 +95,13 @@ def write_outputs(
     """
     failures: list[OutputError] = []
 
+    @cache
+    def figures() -> Mapping[str, Drawing]:
+        return draw_figures(results)
+
     def pdf(path: Path) -> None:
         try:
-            _put(path, render_pdf(results))
+            _put(path, render_pdf(results, figures()))
         except OutputError as error:
             failures.append(error)
 
@@ -104,7 +111,7 @@ def write_outputs(
         "tally.ecsv": (0.02, lambda path: _put(path, _ecsv(results))),
         "circular.txt": (0.04, lambda path: _put(path, render_circular(results))),
         "regions": (0.05, lambda path: _render_regions(results, path)),
-        "report.html": (0.15, lambda path: _put(path, render_html(results))),
+        "report.html": (0.15, lambda path: _put(path, render_html(results, figures()))),
         "report.pdf": (0.5, pdf),
     }
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import base64
 import hashlib
+from collections.abc import Mapping
 from functools import cache
 from importlib.resources import files
 from pathlib import Path
@@ -14,7 +15,7 @@ from jinja2 import Environment, FunctionLoader, StrictUndefined
 from markupsafe import Markup
 
 from skytally.errors import OutputError
-from skytally.figure_style import swatch_svg
+from skytally.figure_style import Drawing, swatch_svg
 from skytally.figures import draw_figures
 from skytally.report_tables import key_figures, tables
 from skytally.results import Results
@@ -39,19 +40,22 @@ _FONTS = frozenset(
 )
 
 
-def render_html(results: Results) -> str:
+def render_html(results: Results, figures: Mapping[str, Drawing] | None = None) -> str:
     """Return the report as one HTML page that needs nothing else, not even a network.
 
     Parameters
     ----------
     results : Results
         With at least one map version.
+    figures : mapping, optional
+        What `draw_figures` returned, if both forms are made and it need not be
+        done twice.
     """
-    return _render(results, "screen.css", paper=False)
+    return _render(results, figures, "screen.css", paper=False)
 
 
-def render_pdf(results: Results) -> bytes:
-    """Return the report as a PDF document with its own fonts.
+def render_pdf(results: Results, figures: Mapping[str, Drawing] | None = None) -> bytes:
+    """Return the report as a PDF document with its own fonts; parameters as in `render_html`.
 
     The bytes depend on the results alone if ``SOURCE_DATE_EPOCH`` is set.
 
@@ -60,7 +64,7 @@ def render_pdf(results: Results) -> bytes:
     OutputError
         If the text layout library that WeasyPrint needs is not installed.
     """
-    page = _render(results, "print.css", paper=True)
+    page = _render(results, figures, "print.css", paper=True)
     # Imported here: without Pango the import itself fails, and then everything
     # but the PDF must still work.
     try:
@@ -121,8 +125,10 @@ def _environment() -> Environment:
     return environment
 
 
-def _render(results: Results, sheet: str, *, paper: bool) -> str:
-    figures = draw_figures(results)
+def _render(
+    results: Results, figures: Mapping[str, Drawing] | None, sheet: str, *, paper: bool
+) -> str:
+    figures = draw_figures(results) if figures is None else figures
     style = _template(sheet)
     template = _environment().get_template("report.html.j2")
     return template.render(

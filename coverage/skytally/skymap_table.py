@@ -20,6 +20,7 @@ from astropy_healpix.core import ring_to_nested
 from numpy.typing import NDArray
 
 from skytally.errors import MapError
+from skytally.local_files import header_value
 from skytally.skymap import DistanceLayer, Floats
 from skytally.spans import FULL_SKY_SR, LINE_END, LINE_ORDER, Ints, cell_to_span, uniq_to_cell
 
@@ -91,7 +92,11 @@ class _Table:
 
     def keyword(self, key: str) -> str:
         """Return a header value as upper-case text, empty where it is not stated."""
-        return str(self.hdu.header.get(key, "")).strip().upper()
+        return str(self.header_value(key, "")).strip().upper()
+
+    def header_value(self, key: str, default: Any = None) -> Any:
+        """Return a header value as it is, the default where it is not stated."""
+        return header_value(self.hdu.header, key, default, self.path, MapError)
 
     def fault(self, message: str, remedy: str, name: str | None = None) -> MapError:
         """Build the error that names this file."""
@@ -108,8 +113,9 @@ class _Table:
             ) from cause
         if column.dtype.kind not in kinds:
             wanted = "integers" if kinds == "iu" else "numbers"
+            found = "text" if column.dtype.kind in "SU" else f"values of type {column.dtype.name}"
             raise self.fault(
-                f"the column holds values of type {column.dtype.name}, expected {wanted}",
+                f"the column holds {found}, expected {wanted}",
                 "Write the map again with a numeric column.",
                 name,
             )
@@ -168,9 +174,15 @@ def _find_table(hdus: fits.HDUList, path: str | Path) -> tuple[_Table, str]:
         if name is not None:
             return table, name
         seen += hdu.columns.names
+    if not seen:
+        raise MapError(
+            "the file holds no table, so no probability map",
+            file=path,
+            remedy="It was cut short, or is the wrong file: give a HEALPix map with a column "
+            "PROBDENSITY or PROB.",
+        )
     raise MapError(
-        "no table of this file holds a probability map; "
-        + (f"its columns are {', '.join(seen[:20])}" if seen else "it has no table"),
+        f"no table of this file holds a probability map; its columns are {', '.join(seen[:20])}",
         file=path,
         remedy="Give a HEALPix map with a column PROBDENSITY or PROB.",
     )
@@ -331,7 +343,7 @@ def _listed_pixels(table: _Table) -> Ints | None:
 
 def _flat_order(table: _Table, name: str, count: int, explicit: bool) -> int:
     """Return the order of a flat map from NSIDE, or from the number of its pixels."""
-    stated = table.hdu.header.get("NSIDE")
+    stated = table.header_value("NSIDE")
     if stated is None and explicit:
         raise table.fault(
             "the header states no NSIDE, and the map does not list every pixel",
@@ -426,6 +438,6 @@ def _distance(table: _Table, rows: Ints) -> DistanceLayer | None:
 
 
 def _header_number(table: _Table, key: str) -> float | None:
-    value = table.hdu.header.get(key)
+    value = table.header_value(key)
     usable = isinstance(value, int | float) and not isinstance(value, bool) and np.isfinite(value)
     return float(value) if usable else None

@@ -33,6 +33,8 @@ _COLUMN_LIMIT = 2_000
 _DELIMITERS = (",", ";", "\t")
 _UTF16 = (b"\xff\xfe", b"\xfe\xff")
 _BRACKETED = re.compile(r"\s*[(\[]([^()\[\]]*)[)\]]\s*$")
+# How the VOTable reader writes a fault: file, line, column, code and a sentence.
+_LIBRARY_REASON = re.compile(r"\S*:\d+:\d+: [EW]\d+: (.+)")
 _TEXT_ENCODINGS = frozenset({"utf-8", "us-ascii", "ascii", "iso-8859-1", "latin-1"})
 
 
@@ -162,7 +164,11 @@ def _records(
                     row=source.first_line,
                     remedy='Close the quote, or write a quote inside a cell twice ("").',
                 ) from exc
-            yield source.first_line, str(exc)
+            long = "field limit" in str(exc)
+            yield (
+                source.first_line,
+                f"a cell exceeds {_CELL_LIMIT} characters" if long else str(exc),
+            )
             continue
         yield source.first_line, [cell.strip() for cell in cells]
 
@@ -252,7 +258,7 @@ def _ecsv(
         delimiter = str(meta.get("delimiter", " "))
     except Exception as exc:  # the YAML reader raises many kinds
         raise error(
-            f"the ECSV header cannot be read ({_first_line(exc)})",
+            "the ECSV header cannot be read",
             file=file,
             row=1,
             remedy="Write the table again, or save it as plain CSV.",
@@ -299,7 +305,7 @@ def _fits_table(raw: bytes, file: str | Path, error: type[InputError]) -> TextTa
                 table = Table.read(tables[0], format="fits")
         except Exception as exc:  # damaged FITS raises many kinds
             raise error(
-                f"the FITS table cannot be read ({_first_line(exc)})",
+                "the FITS table cannot be read",
                 file=file,
                 remedy="Fetch or write the file again.",
             ) from exc
@@ -325,7 +331,7 @@ def _votable(raw: bytes, file: str | Path, error: type[InputError]) -> TextTable
         raise
     except Exception as exc:  # damaged VOTables raise many kinds
         raise error(
-            f"the VOTable cannot be read ({_first_line(exc)})",
+            f"the VOTable cannot be read{_reason(exc)}",
             file=file,
             remedy="Fetch or write the file again.",
         ) from exc
@@ -422,7 +428,7 @@ def _joined(cell: Any, word: str) -> str:
     return " ".join([word, *shown]).strip() if shown else ""
 
 
-def _first_line(exc: BaseException) -> str:
-    """Return the first line of a library's message, short enough to print."""
-    text = next(iter(str(exc).strip().splitlines()), "") or type(exc).__name__
-    return text if len(text) <= 160 else text[:157] + "..."
+def _reason(exc: BaseException) -> str:
+    """Return in brackets what the VOTable reader found, where it says so itself."""
+    found = _LIBRARY_REASON.match(str(exc))
+    return "" if found is None else f" ({found[1][:160].rstrip()})"

@@ -83,18 +83,13 @@ def to_ascii(text: str) -> str:
 
 
 def decimals_for(uncertainty: float, most: int = 4) -> int:
-    """Decimals of a number with this uncertainty: two digits of it up to 0.35, else one.
+    """Return the decimals at which a number keeps one digit of its uncertainty (common practice).
 
-    The rounding rule of the Particle Data Group's reviews (from memory): with
-    the three leading digits of the uncertainty at or below 354 keep two
-    digits, above keep one. Zero or less means exact: ``most`` decimals.
+    Zero or less means exact: ``most`` decimals.
     """
     if not uncertainty > 0 or not math.isfinite(uncertainty):
         return most
-    exponent = math.floor(math.log10(uncertainty))
-    leading = round(uncertainty / 10.0**exponent * 100)
-    digits = 2 if leading <= 354 else 1
-    return max(0, min(most, digits - 1 - exponent))
+    return max(0, min(most, -math.floor(math.log10(uncertainty) + 1e-9)))
 
 
 def number_text(value: float, decimals: int = 0) -> str:
@@ -160,7 +155,7 @@ def probability_text(
     Returns
     -------
     str
-        ``34.62 % (34.45–34.81 %)``, ``34.62 ± 0.20 %`` or, where both bounds
+        ``34.6 % (34.4–34.9 %)``, ``34.6 ± 0.2 %`` or, where both bounds
         are the value, the value alone.
     """
     width = high - low
