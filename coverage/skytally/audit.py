@@ -76,7 +76,7 @@ def extinction_findings(bands: Sequence[str]) -> list[Finding]:
             (),
             f"No extinction coefficient is known for band {band}.",
             f"Limits in {band} are not corrected for Galactic extinction.",
-            f"Give one in the campaign: [extinction] coefficients = {{ {band} = … }}.",
+            f'Give one in the campaign: [extinction] coefficients = {{ "{band}" = … }}.',
         )
         for band in bands
     ]

@@ -101,8 +101,10 @@ class AbsoluteLimit:
 class DistanceProfile:
     """Probability per Mpc against luminosity distance.
 
-    Of the whole map (with distance), of the covered part, and of the part where
-    each source in ``sources`` would have been seen by a single exposure.
+    Of the whole map (with distance), of the covered part, and of the part within
+    which each source in ``sources`` would have been seen in as many exposures
+    as it asks for; where detection is gradual, with half the plateau's
+    efficiency in each.
     """
 
     map: str
@@ -176,7 +178,7 @@ def _deepest_limit(scene: Scene, chosen: Bools, dimming: Floats | None = None) -
 def exclusion_curves(coverage: Coverage, scene: Scene) -> list[ExclusionCurve]:
     """Make the curve of every band, and of all bands together first."""
     o = coverage.observations
-    chosen = [(None, np.ones(len(o), dtype=bool))]
+    chosen: list[tuple[str | None, Bools]] = [(None, np.ones(len(o), dtype=bool))]
     chosen += [(name, o.band == index) for index, name in enumerate(o.bands)]
     curves = []
     for band, mask in chosen:
@@ -189,7 +191,8 @@ def exclusion_curves(coverage: Coverage, scene: Scene) -> list[ExclusionCurve]:
                 band,
                 tuple(map(float, MAGNITUDES)),
                 tuple(value),
-                *(_crossing(part, share, highest) for share in (0.5, 0.9)),
+                _crossing(part, 0.5, highest),
+                _crossing(part, 0.9, highest),
                 highest,
             )
         )
@@ -198,11 +201,10 @@ def exclusion_curves(coverage: Coverage, scene: Scene) -> list[ExclusionCurve]:
 
 def _crossing(part: _Deepest, share: float, highest: float) -> float | None:
     """Absolute magnitude at which the curve crosses a share; None if it does not."""
-    faint, bright = 0.0, -40.0
-    if highest <= share or part.detectable(bright) <= share:
+    if highest <= share:
         return None
-    if part.detectable(faint) >= share:
-        return faint
+    # Distance moduli of 1e-10 and 1e9 Mpc: nothing and everything is within reach.
+    faint, bright = float(part.limit.max()) + 25.0, float(part.limit.min()) - 70.0
     return float(brentq(lambda m: part.detectable(m) - share, bright, faint, xtol=1e-4))
 
 
@@ -234,11 +236,7 @@ def absolute_limits(rows: Sequence[TallyRow], space: Space) -> list[AbsoluteLimi
             continue
         near, far = mean - sd, mean + sd
         # The rows' depths are already corrected where an extinction is known.
-        at = [
-            float(absolute_limit(row.depth_median, d)) if d > 0 else None for d in (near, mean, far)
-        ]
-        assert at[1] is not None
-        assert at[2] is not None
+        at_near, at_mean, at_far = map(float, absolute_limit(row.depth_median, [near, mean, far]))
         found.append(
             AbsoluteLimit(
                 row.map,
@@ -249,9 +247,9 @@ def absolute_limits(rows: Sequence[TallyRow], space: Space) -> list[AbsoluteLimi
                 near,
                 mean,
                 far,
-                at[0],
-                at[1],
-                at[2],
+                at_near if near > 0 else None,
+                at_mean,
+                at_far,
             )
         )
     return found
@@ -272,7 +270,7 @@ def distance_profile(scene: Scene, reaches: Sequence[tuple[str, Floats]]) -> Dis
     nodes = np.linspace(0.0, mean + 5 * sd, _PROFILE_NODES)
     known = np.flatnonzero(space.known)
     inside = (overlay.cell >= 0) & space.known[overlay.cell]
-    cell, place, held = (a[inside] for a in (overlay.cell, overlay.place, overlay.probability))
+    cell, place, held = overlay.cell[inside], overlay.place[inside], overlay.probability[inside]
     covered = sum_by(cell, held, space.probability.size)[known]
     mu, sigma = space.mu_mpc[known], space.sigma_mpc[known]
     rank = np.searchsorted(known, cell)

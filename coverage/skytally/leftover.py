@@ -26,6 +26,9 @@ Floats = NDArray[np.float64]
 # Cells that are covered in part are cut to this order, and no finer: a cell of it
 # is 3.4 arcmin wide, below any structure that a search would be planned for.
 _DETAIL_ORDER = 10
+# The distance distribution's mean is more than √3 standard deviations, whatever
+# its parameters; a little above, they are of a moderate size.
+_LEAST_MEAN_PER_SD = 1.74
 
 
 @dataclass(frozen=True, eq=False)
@@ -86,13 +89,10 @@ def left_over(
 
 def _refined(skymap: SkyMap, coverage: Coverage) -> SkyMap:
     """Cut the cells that are covered in part to the detail order."""
-    covered = Spans.from_intervals(coverage.centre.starts, coverage.centre.stops)
-    cells = SpanTable(skymap.starts, skymap.stops, np.arange(skymap.starts.size + 1))
-    inside = cells.clip(covered).area_sr()
-    size = (skymap.stops - skymap.starts) * UNIT_SR
-    part = (inside > 0) & (inside < size * (1 - 1e-12))
-    step = np.int64(1) << (2 * (LINE_ORDER - _DETAIL_ORDER))
     length = skymap.stops - skymap.starts
+    covered = _covered_length(skymap, coverage)
+    part = (covered > 0) & (covered < length)
+    step = np.int64(1) << (2 * (LINE_ORDER - _DETAIL_ORDER))
     count = np.where(part, np.maximum(length // step, 1), 1)
     row, number = expand_ranges(np.zeros_like(count), count)
     width = length[row] // count[row]
@@ -115,12 +115,17 @@ def _refined(skymap: SkyMap, coverage: Coverage) -> SkyMap:
     )
 
 
-def _without_covered(skymap: SkyMap, coverage: Coverage) -> LeftOver:
+def _covered_length(skymap: SkyMap, coverage: Coverage) -> Ints:
+    """Order-29 cells inside each map cell that are covered; (cells,)."""
     covered = Spans.from_intervals(coverage.centre.starts, coverage.centre.stops)
     cells = SpanTable(skymap.starts, skymap.stops, np.arange(skymap.starts.size + 1))
-    size = (skymap.stops - skymap.starts) * UNIT_SR
-    share = np.clip(1.0 - cells.clip(covered).area_sr() / size, 0.0, 1.0)
-    share[share < 1e-12] = 0.0
+    inside = cells.clip(covered)
+    before = np.concatenate(([0], np.cumsum(inside.stops - inside.starts)))
+    return np.asarray(np.diff(before[inside.offsets]), dtype=np.int64)
+
+
+def _without_covered(skymap: SkyMap, coverage: Coverage) -> LeftOver:
+    share = 1.0 - _covered_length(skymap, coverage) / (skymap.stops - skymap.starts)
     return _normalised(skymap, skymap.density_per_sr * share, skymap.distance)
 
 
@@ -158,7 +163,10 @@ def _rebuilt(
     mean, sd = moments(space.mu_mpc[touched], space.sigma_mpc[touched])
     mean_left = (held[touched] * mean - first[touched]) / left[touched]
     square_left = (held[touched] * (mean**2 + sd**2) - second[touched]) / left[touched]
-    spread = np.sqrt(np.maximum(square_left - mean_left**2, (1e-3 * mean_left) ** 2))
+    spread = np.sqrt(np.maximum(square_left - mean_left**2, 0.0))
+    # What is left may be narrower or, with two heaps, wider than the form can be;
+    # then its mean is kept, and a spread that the form has.
+    spread = np.clip(spread, 1e-3 * mean_left, mean_left / _LEAST_MEAN_PER_SD)
     mu, sigma, norm = (a.copy() for a in (layer.mu_mpc, layer.sigma_mpc, layer.norm_per_mpc2))
     mu[touched], sigma[touched], norm[touched] = parameters_from_moments(mean_left, spread)
     size = (skymap.stops - skymap.starts) * UNIT_SR

@@ -31,9 +31,14 @@ __all__ = ["Scene", "SeenSource", "SourceRow", "tally_sources"]
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
 
-# Steps of the integral over a detection curve, in magnitudes of distance modulus.
-_CURVE_STEP_MAG = 0.1
-_VISITS_AT_ONCE = 20_000
+# Steps of the integral over a detection curve, in magnitudes of distance modulus:
+# a fifth of the logistic's width, within these.
+_LEAST_STEP_MAG, _GREATEST_STEP_MAG = 0.005, 0.1
+# So many widths from its middle a logistic is within 1e-5 of its end.
+_END_WIDTHS = 12
+# Where detection ends abruptly, reaches are the steps while they are no more than this.
+_MOST_EDGES = 400
+_NUMBERS_AT_ONCE = 2_000_000
 
 
 @dataclass(frozen=True)
@@ -143,7 +148,7 @@ class SeenSource:
     def of(cls, source: Source, scene: Scene, coverage: Coverage, event_mjd: float) -> SeenSource:
         """Reach of a source in every visit of a scene."""
         magnitude = absolute_magnitudes(source, coverage.observations, event_mjd)
-        reach = visit_reach(scene.visits, magnitude, source.k_correction, scene.space.cosmology)
+        reach = visit_reach(scene.visits, source, magnitude, scene.space.cosmology)
         order = order_by_reach(scene.visits.place, reach)
         place, exposure, reach = (
             scene.visits.place[order],
@@ -151,7 +156,7 @@ class SeenSource:
             reach[order],
         )
         start = coverage.observations.start_mjd[exposure]
-        worth = scene.detectable(place, reach) if source.detection.is_step else np.zeros(reach.size)
+        worth = scene.detectable(place, reach) if _is_step(source) else np.zeros(reach.size)
         return cls(source, scene, place, exposure, start, reach, worth)
 
     def decide(self, chosen: Bools) -> tuple[Ints, Ints]:
@@ -171,7 +176,7 @@ class SeenSource:
 
     def probability(self, chosen: Bools) -> float:
         """Detectable probability of a selection."""
-        if self.source.detection.is_step:
+        if _is_step(self.source):
             return float(self.worth[self.decide(chosen)[1]].sum())
         total = 0.0
         for place, nodes, share in self._curve_shares(chosen):
@@ -180,49 +185,58 @@ class SeenSource:
 
     def shares(self, chosen: Bools) -> Iterator[tuple[Ints, Floats, Floats]]:
         """Yield places, distances (m, nodes), and the share seen up to each from the one before."""
-        if self.source.detection.is_step:
+        if _is_step(self.source):
             place, visit = self.decide(chosen)
             yield place, self.reach_mpc[visit][:, None], np.ones((place.size, 1))
         else:
             yield from self._curve_shares(chosen)
 
     def _curve_shares(self, chosen: Bools) -> Iterator[tuple[Ints, Floats, Floats]]:
-        """Sample the detection curves at nodes of equal steps in distance modulus."""
+        """Sample the detection curves between nodes common to all places."""
         mine = np.flatnonzero(chosen[self.exposure] & (self.reach_mpc > 0))
         mine = mine[np.lexsort((self.start_mjd[mine], self.place[mine]))]
         if mine.size == 0:
             return
-        nodes = self._nodes(mine)
+        nodes = self._nodes(np.unique(self.reach_mpc[mine]))
+        middles = np.sqrt(nodes * np.append(0.5 * nodes[0], nodes[:-1]))
         cut = np.flatnonzero(np.diff(self.place[mine], prepend=-1))
-        starts = cut[np.flatnonzero(np.diff(cut // _VISITS_AT_ONCE, prepend=-1))]
+        block = cut // max(_NUMBERS_AT_ONCE // (nodes.size * self.source.visits), 1)
+        starts = cut[np.flatnonzero(np.diff(block, prepend=-1))]
         for begin, end in zip(starts, np.append(starts[1:], mine.size)):
             rows = mine[begin:end]
-            beyond = self._beyond_limit(nodes, self.reach_mpc[rows])
-            place, at_node = seen_share(
+            place, share = seen_share(
                 self.place[rows],
                 self.start_mjd[rows],
-                self.source.detection.efficiency(beyond),
+                self._efficiency(middles, self.reach_mpc[rows]),
                 self.source.visits,
                 self.source.gap_minutes,
             )
-            share = np.concatenate((at_node[:, :1], (at_node[:, 1:] + at_node[:, :-1]) / 2), axis=1)
             yield place, np.broadcast_to(nodes, share.shape), share
 
-    def _beyond_limit(self, nodes: Floats, reach: Floats) -> Floats:
-        """Magnitudes by which a source at each node is fainter than the limit, (visits, nodes)."""
-        beyond = 5 * np.log10(nodes[None, :] / reach[:, None])
+    def _efficiency(self, distance: Floats, reach: Floats) -> Floats:
+        """Chance that each visit shows a source at each distance, (visits, distances)."""
+        detection = self.source.detection
+        beyond = 5 * np.log10(distance / reach[:, None])
         if self.source.k_correction == "flat":
-            redshift = self.scene.space.cosmology.redshift
-            beyond -= 2.5 * np.log10((1 + redshift(nodes)) / (1 + redshift(reach)[:, None]))
-        return np.asarray(beyond)
+            beyond -= 2.5 * np.log10(self._stretch(distance) / self._stretch(reach)[:, None])
+        return np.asarray(detection.efficiency(beyond + detection.offset))
 
-    def _nodes(self, rows: Ints) -> Floats:
+    def _stretch(self, distance: Floats) -> Floats:
+        """Return 1 + z, that of redshift 1000 beyond it."""
+        cosmology = self.scene.space.cosmology
+        return 1 + cosmology.redshift(np.minimum(distance, cosmology.limit_mpc))
+
+    def _nodes(self, reach: Floats) -> Floats:
         """Distances (Mpc) from where detection is sure to where it has ended, rising."""
-        first, last = self.source.detection.range_mag
-        reach = self.reach_mpc[rows]
-        low, high = (5 * np.log10(edge) for edge in (reach.min(), reach.max()))
-        count = int(np.ceil((high - low + last - first) / _CURVE_STEP_MAG)) + 1
-        return np.asarray(10 ** (np.linspace(low + first, high + last, count) / 5))
+        width = self.source.detection.width
+        if width == 0 and reach.size <= _MOST_EDGES:
+            return reach
+        step = min(max(width / 5, _LEAST_STEP_MAG), _GREATEST_STEP_MAG)
+        # With a flat spectrum's K-correction a source dims down to half as fast with distance.
+        margin = _END_WIDTHS * width * (2 if self.source.k_correction == "flat" else 1)
+        low, high = 5 * np.log10(reach[0]) - margin, 5 * np.log10(reach[-1]) + margin
+        count = int(np.ceil((high - low) / step)) + 1
+        return np.asarray(10 ** (np.linspace(low, high, max(count, 2)) / 5))
 
     def _integrate(self, place: Ints, nodes: Floats, share: Floats) -> float:
         """∫ p(r) S(r) dr over the places' rows, weighted by their probability."""
@@ -280,18 +294,20 @@ class _Volumes:
         overlay, space = scene.overlay, scene.space
         solid = sum_by(overlay.place, overlay.solid_angle_sr, overlay.places)
         position, row = scene.rows_of(seen.place)
-        within = space.credible_shell(
+        within, within_comoving = space.credible_shell(
             overlay.cell[row], overlay.solid_angle_sr[row], seen.reach_mpc[position]
         )
         far = np.full(overlay.cell.size, np.inf)
-        covered = space.credible_shell(overlay.cell, overlay.solid_angle_sr, far)
+        covered, covered_comoving = space.credible_shell(overlay.cell, overlay.solid_angle_sr, far)
         unknown = (overlay.cell < 0) | ~space.known[overlay.cell]
         zero = np.zeros(seen.reach_mpc.size)
         return cls(
             solid[seen.place] * seen.reach_mpc**3 / 3,
             space.comoving_shell(solid[seen.place], zero, seen.reach_mpc),
-            *(sum_by(position, part, seen.place.size) for part in within),
-            *(sum_by(overlay.place, part, overlay.places) for part in covered),
+            sum_by(position, within, seen.place.size),
+            sum_by(position, within_comoving, seen.place.size),
+            sum_by(overlay.place, covered, overlay.places),
+            sum_by(overlay.place, covered_comoving, overlay.places),
             sum_by(overlay.place, overlay.probability, overlay.places),
             sum_by(overlay.place, np.where(unknown, overlay.probability, 0.0), overlay.places),
         )
@@ -333,6 +349,11 @@ def _row(
         total(volumes.within_mpc3, visit),
         total(volumes.within_comoving, visit),
     )
+
+
+def _is_step(source: Source) -> bool:
+    """Whether an exposure certainly shows everything down to some magnitude."""
+    return source.detection.width == 0 and source.detection.plateau == 1
 
 
 def _reach_numbers(

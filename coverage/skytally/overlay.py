@@ -62,7 +62,7 @@ class Overlay:
         place_key, place = np.unique(group * clouds + behind, return_inverse=True)
         cells = skymap.starts.size + 1
         row_key, row = np.unique(place * cells + cell + 1, return_inverse=True)
-        solid = sum_by(row, (stops - starts) * UNIT_SR, row_key.size)
+        solid = sum_by(row, (stops - starts).astype(np.float64) * UNIT_SR, row_key.size)
         row_place, row_cell = np.divmod(row_key, cells)
         row_cell -= 1
         density = np.where(row_cell >= 0, skymap.density_per_sr[row_cell], 0.0)
@@ -83,6 +83,8 @@ def _cut(patchwork: Patchwork, edges: Ints) -> tuple[Ints, Ints, Ints]:
     first = np.searchsorted(edges, patchwork.starts, side="right")
     last = np.searchsorted(edges, patchwork.stops, side="left")
     row, position = expand_ranges(first - 1, last - first + 1)
+    if row.size == 0:
+        return patchwork.starts, patchwork.stops, patchwork.group
     begin = np.flatnonzero(np.diff(row, prepend=-1))
     starts = edges[np.maximum(position, 0)]
     starts[begin] = patchwork.starts[row[begin]]

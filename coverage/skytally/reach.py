@@ -24,10 +24,19 @@ from skytally.patchwork import Patchwork
 from skytally.sources import Source
 from skytally.spans import Ints
 
-__all__ = ["Visits", "absolute_magnitudes", "deciding_visits", "order_by_reach", "seen_share"]
+__all__ = [
+    "Visits",
+    "absolute_magnitudes",
+    "deciding_visits",
+    "order_by_reach",
+    "seen_share",
+    "visit_reach",
+]
 
 Floats = NDArray[np.float64]
-Bools = NDArray[np.bool_]
+
+# Times are compared in whole milliseconds; rounding moves a difference by up to one.
+_SLACK_MS = 1
 
 
 @dataclass(frozen=True, eq=False)
@@ -87,13 +96,20 @@ def absolute_magnitudes(source: Source, observations: Observations, event_mjd: f
     return magnitude
 
 
-def visit_reach(
-    visits: Visits, magnitude: Floats, k_correction: str, cosmology: Cosmology
-) -> Floats:
-    """Reach of each visit in Mpc; 0 where the source is unseen, (visits,)."""
-    reach = reach_mpc(visits.limit, magnitude[visits.exposure])
+def visit_reach(visits: Visits, source: Source, magnitude: Floats, cosmology: Cosmology) -> Floats:
+    """Reach of each visit in Mpc; 0 where the source is unseen, (visits,).
+
+    Where detection is gradual, it is how far the efficiency is at least half
+    the plateau's. ``magnitude`` is absolute, shape (exposures,).
+    """
+    limit = visits.limit + source.detection.offset
+    reach = reach_mpc(limit, magnitude[visits.exposure])
     reach = np.where(np.isfinite(reach), reach, 0.0)
-    return cosmology.flat_spectrum_reach(reach) if k_correction == "flat" else reach
+    if source.k_correction == "flat":
+        corrected = cosmology.flat_spectrum_reach(reach)
+        # Beyond the cosmology's table, redshift 1000, nothing is left to be reached.
+        reach = np.where(np.isnan(corrected), np.maximum(reach, cosmology.limit_mpc), corrected)
+    return reach
 
 
 def order_by_reach(place: Ints, reach: Floats) -> Ints:
@@ -130,15 +146,25 @@ def deciding_visits(
     if visits > 1 and gap_minutes > 0:
         # Milliseconds as integers below a place's own offset: a running maximum
         # along the whole array then starts anew at every place.
-        moment = np.round((start_mjd - start_mjd.min()) * SECONDS_PER_DAY * 1000).astype(np.int64)
-        width = np.int64(moment.max()) + 1
+        moment = _milliseconds(start_mjd)
+        width = moment.max() + 1
         offset = np.cumsum(rank == 0).astype(np.int64) * width
         latest = np.maximum.accumulate(moment + offset) - offset
         earliest = width - 1 - (np.maximum.accumulate(width - 1 - moment + offset) - offset)
-        enough &= latest - earliest >= np.int64(round(gap_minutes * 60_000))
+        enough &= latest - earliest >= _gap_ms(gap_minutes)
     row = np.flatnonzero(enough)
     first = row[np.flatnonzero(np.diff(place[row], prepend=-1))]
     return place[first], first
+
+
+def _milliseconds(start_mjd: Floats) -> Ints:
+    """Starts after the first of them."""
+    passed = (start_mjd - start_mjd.min()) * SECONDS_PER_DAY * 1000
+    return np.asarray(np.round(passed), dtype=np.int64)
+
+
+def _gap_ms(gap_minutes: float) -> int:
+    return max(round(gap_minutes * 60_000) - _SLACK_MS, 0)
 
 
 def seen_share(
@@ -154,35 +180,54 @@ def seen_share(
         Start of each visit.
     efficiency : float64 array, shape (n, nodes)
         Probability of detection in each visit, at each node of distance.
-    visits : {1, 2}
+    visits : int
         In how many exposures the source must be.
     gap_minutes : float
-        How far apart two of them must be.
+        How far the first and the last of these must be apart.
 
     Returns
     -------
     place : int64 array, shape (m,)
         The places in ``place``.
     share : float64 array, shape (m, nodes)
-        For one visit 1 − Π(1 − ε). For two: the first detection at visit i and
-        any detection at least the gap later, summed over i.
+        For one visit 1 − Π(1 − ε). For more, summed over the visit i of the
+        first detection: enough others after i, less those cases where all of
+        them fall within the gap.
     """
     begin = np.flatnonzero(np.diff(place, prepend=-1))
-    missed = np.log1p(-np.minimum(efficiency, 1 - 1e-15))
-    total = np.add.reduceat(missed, begin, axis=0)
+    efficiency = np.minimum(efficiency, 1 - 1e-15)
+    missed = np.log1p(-efficiency)
     if visits == 1:
-        return place[begin], -np.expm1(total)
-    length = np.diff(np.append(begin, place.size))
-    segment = np.repeat(np.arange(begin.size), length)
+        return place[begin], -np.expm1(np.add.reduceat(missed, begin, axis=0))
+    segment = np.repeat(np.arange(begin.size), np.diff(begin, append=place.size))
     running = np.concatenate((np.zeros((1, missed.shape[1])), np.cumsum(missed, axis=0)))
-    before = running[:-1] - running[begin][segment]
-    moment = np.round((start_mjd - start_mjd.min()) * SECONDS_PER_DAY * 1000).astype(np.int64)
-    gap = np.int64(round(gap_minutes * 60_000))
-    width = np.int64(moment.max()) + gap + 2
-    # With no gap asked for, the second detection is any later visit.
-    later = np.searchsorted(segment * width + moment, segment * width + moment + gap, side="left")
-    later = np.maximum(later, np.arange(place.size) + 1)
+    moment, gap = _milliseconds(start_mjd), _gap_ms(gap_minutes)
+    line = segment * (moment.max() + gap + 2) + moment
+    # With no gap asked for, any later visit will do.
+    later = np.maximum(np.searchsorted(line, line + gap, side="left"), np.arange(place.size) + 1)
+    after = np.arange(place.size) + 1
     end = np.append(begin[1:], place.size)[segment]
-    after = running[end] - running[np.minimum(later, end)]
-    first = np.minimum(efficiency, 1 - 1e-15) * np.exp(before) * -np.expm1(after)
-    return place[begin], np.add.reduceat(first, begin, axis=0)
+
+    def fewer(last: Ints) -> Floats:
+        if visits == 2:
+            return np.asarray(np.exp(running[last] - running[after]))
+        return _fewer(efficiency, after, last, visits - 1)
+
+    before = np.exp(running[:-1] - running[begin][segment])
+    none_later = np.exp(running[end] - running[later])
+    enough = 1 - fewer(end) - (1 - fewer(later)) * none_later
+    return place[begin], np.add.reduceat(efficiency * before * enough, begin, axis=0)
+
+
+def _fewer(efficiency: Floats, first: Ints, last: Ints, count: int) -> Floats:
+    """Probability of fewer than ``count`` detections in visits first[i] … last[i] − 1."""
+    longest = int(np.max(last - first))
+    exactly = np.zeros((min(count, longest + 1), *efficiency.shape))
+    exactly[0] = 1.0
+    for step in range(longest):
+        live = np.flatnonzero(first + step < last)
+        hit = efficiency[first[live] + step]
+        before = exactly[:, live]
+        exactly[:, live] = before * (1 - hit)
+        exactly[1:, live] += before[:-1] * hit
+    return np.asarray(exactly.sum(axis=0))

@@ -65,6 +65,11 @@ class Space:
         return np.isfinite(self.mu_mpc)
 
     @cached_property
+    def solid_angle_sr(self) -> Floats:
+        """Size of each cell, shape (cells,)."""
+        return (self.skymap.stops - self.skymap.starts).astype(np.float64) * UNIT_SR
+
+    @cached_property
     def probability(self) -> Floats:
         """Probability of each cell, shape (cells,)."""
         return self.skymap.probability.amount
@@ -114,11 +119,10 @@ class Space:
     def _solve(self, level: float) -> CredibleVolume | None:
         layer = self.skymap.distance
         assert layer is not None  # `of` returns None without it
-        solid = (self.skymap.stops - self.skymap.starts) * UNIT_SR
         return credible_volume(
             level,
             self.skymap.density_per_sr,
-            solid,
+            self.solid_angle_sr,
             self.mu_mpc,
             self.sigma_mpc,
             layer.norm_per_mpc2,
@@ -136,8 +140,8 @@ class Space:
         found = self.credible(level)
         if found is None:
             return None
-        solid = (self.skymap.stops - self.skymap.starts) * UNIT_SR
-        return found.volume, float(self.comoving_shell(solid, found.r_low, found.r_high).sum())
+        comoving = self.comoving_shell(self.solid_angle_sr, found.r_low, found.r_high)
+        return found.volume, float(comoving.sum())
 
     def credible_densities(self) -> tuple[Measure, Measure] | None:
         """90 % volume per steradian as measures, Mpc³ and comoving Mpc³; None without one."""
