@@ -3,7 +3,6 @@
 from pathlib import Path
 
 import numpy as np
-
 from skytally.campaign import CampaignSettings, LoadedCampaign, Site, Telescope
 from skytally.observations import LogTable
 

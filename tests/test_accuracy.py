@@ -12,8 +12,6 @@ from astropy import units as u
 from astropy.coordinates import SkyCoord
 from astropy.io import fits
 from campaign_builder import campaign, log_table, telescope
-from spherical_geometry.polygon import SphericalPolygon
-
 from skytally.account import account
 from skytally.cameras import CircleCamera, MosaicCamera, lay_camera, lay_outlines
 from skytally.footprints import lay_footprints
@@ -21,6 +19,7 @@ from skytally.refinement import refine_footprints
 from skytally.shapes import lonlat_to_vector
 from skytally.skymap_io import circle_skymap, read_skymap
 from skytally.spans import DEG2_PER_SR, FULL_SKY_SR
+from spherical_geometry.polygon import SphericalPolygon
 
 BRUTE_NSIDE = 1 << 14
 
@@ -28,7 +27,7 @@ BRUTE_NSIDE = 1 << 14
 def gapped_mosaic(across=4, side=0.30, gap=0.03):
     at = (np.arange(across) - (across - 1) / 2) * (side + gap)
     square = side / 2 * np.array([[-1, -1], [1, -1], [1, 1], [-1, 1]])
-    rings = tuple(square + [x, y] for x in at for y in at)
+    rings = tuple(square + np.array([x, y]) for x in at for y in at)
     return MosaicCamera(rings, tuple(map(str, range(len(rings)))))
 
 

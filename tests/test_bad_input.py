@@ -47,8 +47,9 @@ def night(sample: Path, tmp_path: Path) -> Path:
 @pytest.fixture(autouse=True)
 def _quick_renderers(monkeypatch: pytest.MonkeyPatch) -> None:
     """What a page looks like is no matter here; that none is left behind is."""
-    monkeypatch.setattr(outputs, "render_html", lambda results: "<p></p>\n")
-    monkeypatch.setattr(outputs, "render_pdf", lambda results: b"%PDF-")
+    monkeypatch.setattr(outputs, "draw_figures", lambda results: {})
+    monkeypatch.setattr(outputs, "render_html", lambda results, figures: "<p></p>\n")
+    monkeypatch.setattr(outputs, "render_pdf", lambda results, figures: b"%PDF-")
 
 
 def arguments(case: Case, folder: Path) -> list[str]:

@@ -22,7 +22,7 @@ from scipy.stats import norm
 
 EXAMPLES = Path(__file__).parent.parent / "examples"
 LANTERN = EXAMPLES / "lantern-7"
-WRITTEN = ("maps", "logs", "cameras")
+WRITTEN = ("maps", "logs", "cameras", "sources")
 MULTIORDER = ("arc", "update")
 
 
@@ -107,6 +107,8 @@ def test_campaign_names_every_written_file_once(campaign):
     named |= {
         t["log"] if isinstance(t["log"], str) else t["log"]["file"] for t in campaign["telescope"]
     }
+    named |= {s["light_curve"] for s in campaign["source"] if "light_curve" in s}
+    named.add(campaign["extinction"]["map"])
     named |= {t["camera"]["file"] for t in campaign["telescope"] if "file" in t.get("camera", {})}
     with (LANTERN / "logs/curlew.csv").open(encoding="utf-8", newline="") as file:
         named |= {f"logs/{row['region']}" for row in csv.DictReader(file)}
@@ -264,6 +266,40 @@ def test_logs_hold_the_mess_of_real_ones(campaign):
     assert set(dunlin["execution_status"]) == {"Performed", "Aborted"}
     starts = {region.split()[0] for region in dunlin["s_region"]}
     assert starts == {"UNION", "POLYGON", "polygon"}
+
+
+def test_dust_is_an_even_sheet_seen_at_a_slant():
+    """A sheet of optical depth τ seen at latitude b: τ / sin|b|; healpy gives the latitudes."""
+    path = LANTERN / "maps/dust.fits.gz"
+    table, header = read_map(path)
+    assert path.stat().st_size < 60_000
+    assert (header["COORDSYS"], header["ORDERING"]) == ("G", "RING")
+    ebv = np.asarray(table["EBV"], dtype=float).ravel()
+    _, latitude = hp.pix2ang(header["NSIDE"], np.arange(ebv.size), lonlat=True)
+    sheet = ebv * np.abs(np.sin(np.radians(latitude)))
+    free = ebv < ebv.max()
+    np.testing.assert_allclose(sheet[free], 0.014, atol=6e-5)
+    assert 0 < (~free).sum() < 0.02 * ebv.size
+    assert (sheet[~free] <= 0.014).all()
+
+
+def test_sources_are_of_every_kind_and_in_observed_bands(campaign, taken):
+    ash, kindling, ember = campaign["source"]
+    assert isinstance(ash["magnitude"], float)
+    bands = {row[4] for rows in taken.values() for row in rows}
+    assert set(kindling["magnitude"]) == bands
+    assert kindling["fade"] > 0 < kindling["rise"]
+    lines = (LANTERN / ember["light_curve"]).read_text(encoding="utf-8").splitlines()
+    rows = list(csv.DictReader(line for line in lines if line[0] != "#"))
+    assert {r["band"] for r in rows} <= bands
+    for band in {r["band"] for r in rows}:
+        days, magnitude = np.array(
+            [[float(r["days"]), float(r["magnitude"])] for r in rows if r["band"] == band]
+        ).T
+        assert (np.diff(days) > 0).all()
+        # One peak, within the curve.
+        assert (np.diff(np.sign(np.diff(magnitude))) >= 0).all()
+        assert 0 < magnitude.argmin() < magnitude.size - 1
 
 
 def test_one_telescope_is_read_in_a_minute():

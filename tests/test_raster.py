@@ -4,8 +4,6 @@ import healpy
 import numpy as np
 import pytest
 from matplotlib.path import Path as PlanePath
-from spherical_geometry.polygon import SphericalPolygon
-
 from skytally.cameras import CircleCamera, MosaicCamera, lay_camera, lay_outlines
 from skytally.raster import (
     cell_radius_rad,
@@ -16,6 +14,7 @@ from skytally.raster import (
 )
 from skytally.shapes import AllOf, AnyOf, Circle, NotIn, Polygon, lonlat_to_vector
 from skytally.spans import DEG2_PER_SR, FULL_SKY_SR, Spans
+from spherical_geometry.polygon import SphericalPolygon
 
 # Cap of radius r: 2π(1 − cos r). Polygons: spherical-geometry (PyPI), an independent library.
 
@@ -80,7 +79,7 @@ def test_gapped_mosaic_area_against_spherical_geometry(lon, lat, angle):
     at = (np.arange(4) - 1.5) * step
     square = side / 2 * np.array([[-1, -1], [1, -1], [1, 1], [-1, 1]])
     camera = MosaicCamera(
-        tuple(square + [x, y] for x in at for y in at), tuple(str(i) for i in range(16))
+        tuple(square + np.array([x, y]) for x in at for y in at), tuple(str(i) for i in range(16))
     )
     pointing = np.array([float(lon)]), np.array([float(lat)]), np.array([float(angle)])
     exact = sum(smaller_side_sr(ring) for ring in lay_outlines(camera, *pointing))
@@ -224,7 +223,7 @@ def test_touching_cells_overstate_a_gapped_mosaic():
     at = (np.arange(4) - 1.5) * step
     square = side / 2 * np.array([[-1, -1], [1, -1], [1, 1], [-1, 1]])
     camera = MosaicCamera(
-        tuple(square + [x, y] for x in at for y in at), tuple(str(i) for i in range(16))
+        tuple(square + np.array([x, y]) for x in at for y in at), tuple(str(i) for i in range(16))
     )
     pointing = np.array([150.0]), np.array([25.0]), np.zeros(1)
     exact = 16 * side**2

@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field, replace
+from collections.abc import Callable
+from dataclasses import replace
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from typing import TypeVar
@@ -13,11 +13,19 @@ import numpy as np
 
 from skytally.camera_io import read_mosaic
 from skytally.cameras import Camera, CircleCamera, MosaicCamera
+from skytally.campaign_data import (
+    CampaignSettings,
+    LoadedCampaign,
+    ReportText,
+    Site,
+    Telescope,
+)
 from skytally.campaign_faults import Entry, key_path, parse_campaign
 from skytally.campaign_model import (
     CameraTable,
     CircleCameraTable,
     DepthTable,
+    ExtinctionTable,
     ImagesTable,
     LogFileTable,
     MapTable,
@@ -25,10 +33,15 @@ from skytally.campaign_model import (
     ReportTable,
     SettingsTable,
     SiteTable,
+    SourceTable,
     TelescopeTable,
     is_region_text,
 )
+from skytally.campaign_sources import build_source, extinction_notes, source_notes
+from skytally.dust import Dust
+from skytally.dust_io import read_dust
 from skytally.errors import CampaignError, InputError, SkytallyError
+from skytally.light_curve_io import read_light_curve
 from skytally.log_io import ImageOptions, LogOptions, read_images, read_log
 from skytally.log_regions import resolve_regions
 from skytally.magnitudes import vega_to_ab
@@ -38,7 +51,7 @@ from skytally.region_text import parse_region
 from skytally.shapes import Shape
 from skytally.skymap import SkyMap
 from skytally.skymap_io import circle_skymap, read_skymap
-from skytally.spans import Spans
+from skytally.sources import Source
 
 __all__ = [
     "CampaignSettings",
@@ -52,125 +65,6 @@ __all__ = [
 Result = TypeVar("Result")
 
 _MJD_ZERO = datetime(1858, 11, 17, tzinfo=UTC)
-
-
-@dataclass(frozen=True)
-class Site:
-    """Where a telescope stands: degrees east, degrees north, metres above sea level."""
-
-    longitude_deg: float
-    latitude_deg: float
-    height_m: float
-
-
-@dataclass(frozen=True)
-class CampaignSettings:
-    """The choices of a campaign that move a number.
-
-    Attributes
-    ----------
-    magnitude_system : str
-        System in which limits are reported, "AB" or "Vega".
-    significance : float
-        Significance (σ) to which limits are brought.
-    revisit_visits, revisit_gap_minutes : int, float
-        A place counts as revisited from so many visits on, the first and the
-        last at least so long apart.
-    bracket : float
-        Width in probability that brackets are tightened to.
-    """
-
-    magnitude_system: str = "AB"
-    significance: float = 5.0
-    revisit_visits: int = 2
-    revisit_gap_minutes: float = 30.0
-    bracket: float = 0.005
-
-
-@dataclass(frozen=True)
-class ReportText:
-    """Who signs the report: authors, their affiliations, acknowledgements."""
-
-    authors: tuple[str, ...] = ()
-    affiliations: tuple[str, ...] = ()
-    thanks: str = ""
-
-
-@dataclass(frozen=True, eq=False)
-class Telescope:
-    """One telescope with its log.
-
-    Attributes
-    ----------
-    name : str
-        As the campaign calls it.
-    site : Site or None
-        None for a spacecraft.
-    camera : CircleCamera, MosaicCamera or None
-        None where every exposure brings its own region.
-    camera_text : str
-        The camera in words.
-    log : LogTable
-        Accepted rows, and the others with their reasons.
-    depth_system, depth_significance : str, float
-        How the log's limits are to be read: "AB" or "Vega", and their σ.
-    vega_offsets : mapping of str to float
-        m_AB − m_Vega per band as the user states it.
-    mask : tuple of shapes
-        Subtracted from every footprint.
-    searchable : Spans or None
-        Every footprint is cut to it; None for no cut.
-    regions : mapping of str to Shape
-        The shape of every distinct region cell of the log.
-    """
-
-    name: str
-    site: Site | None
-    camera: Camera | None
-    camera_text: str
-    log: LogTable
-    depth_system: str = "AB"
-    depth_significance: float = 5.0
-    vega_offsets: Mapping[str, float] = field(default_factory=dict)
-    mask: tuple[Shape, ...] = ()
-    searchable: Spans | None = None
-    regions: Mapping[str, Shape] = field(default_factory=dict)
-
-
-@dataclass(frozen=True, eq=False)
-class LoadedCampaign:
-    """A campaign file and everything that it names, in memory.
-
-    Attributes
-    ----------
-    path : Path
-        The campaign file.
-    event_name, event_mjd : str, float
-        The event and its time (UTC, MJD).
-    maps : tuple of SkyMap
-        In order of issue; in the file's order where a version states no time.
-    telescopes : tuple of Telescope
-        In the file's order.
-    settings : CampaignSettings
-        Choices that move a number.
-    inputs : tuple of (role, path, sha256)
-        Every file read, its path as the campaign names it. Roles: campaign,
-        map, log, region, camera, mask, searchable.
-    notes : tuple of str
-        What was assumed or noticed.
-    report : ReportText
-        Authors and thanks.
-    """
-
-    path: Path
-    event_name: str
-    event_mjd: float
-    maps: tuple[SkyMap, ...]
-    telescopes: tuple[Telescope, ...]
-    settings: CampaignSettings
-    inputs: tuple[tuple[str, str, str], ...]
-    notes: tuple[str, ...]
-    report: ReportText = ReportText()
 
 
 def load_campaign(path: str | Path) -> LoadedCampaign:
@@ -193,21 +87,32 @@ def load_campaign(path: str | Path) -> LoadedCampaign:
     loader.inputs.append(("campaign", path.name, parsed.sha256))
     maps = [loader.map_version(entry) for entry in parsed.maps]
     telescopes = [loader.telescope(entry) for entry in parsed.telescopes]
+    extinction = parsed.extinction or ExtinctionTable()
+    dust = loader.dust(extinction)
+    sources = [loader.source(entry) for entry in parsed.sources]
     loader.raise_faults(path)
     if parsed.event is None or event_mjd is None or parsed.settings is None:
         raise AssertionError("a table is missing and no fault was listed")
     found = tuple(m for m in maps if m is not None)
+    observers = tuple(t for t in telescopes if t is not None)
+    described = tuple(s for s in sources if s is not None)
     loader.notes.extend(_issue_notes(found, event_mjd))
+    loader.notes.extend(extinction_notes(extinction))
+    loader.notes.extend(source_notes(described, (t.log for t in observers)))
     return LoadedCampaign(
         path=path,
         event_name=parsed.event.name,
         event_mjd=event_mjd,
         maps=_in_order(found),
-        telescopes=tuple(t for t in telescopes if t is not None),
+        telescopes=observers,
         settings=_settings(parsed.settings),
         inputs=tuple(dict.fromkeys(loader.inputs)),
         notes=tuple(loader.notes),
         report=_report(parsed.report or ReportTable()),
+        sources=described,
+        dust=dust,
+        extinction_coefficients=extinction.coefficients,
+        dust_path=extinction.map,
     )
 
 
@@ -315,6 +220,27 @@ class _Loader:
             searchable=searchable,
             regions=regions,
         )
+
+    def dust(self, table: ExtinctionTable) -> Dust | None:
+        """Load the dust map, if one is named."""
+        if table.map is None:
+            return None
+        dust = self.file(
+            "dust", table.map, lambda path: read_dust(path, allow_holes=table.allow_holes)
+        )
+        self.notes.extend(() if dust is None else dust.notes)
+        return dust
+
+    def source(self, entry: Entry[SourceTable]) -> Source | None:
+        """Load one source with its light curve."""
+        table = entry.table
+        curves = None
+        if table.light_curve is not None:
+            curves = self.file("light curve", table.light_curve, read_light_curve)
+            if curves is None:
+                return None
+        system = "AB" if self.settings is None else self.settings.magnitude_system
+        return build_source(table, curves, system)
 
     def _log(self, table: TelescopeTable) -> tuple[LogTable | None, dict[str, Shape]]:
         """Load a log or images, and the regions that the rows bring."""
@@ -499,6 +425,7 @@ def _settings(table: SettingsTable) -> CampaignSettings:
         table.revisit.visits,
         table.revisit.gap_minutes,
         table.bracket,
+        table.cosmology,
     )
 
 

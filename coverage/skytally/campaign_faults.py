@@ -24,9 +24,11 @@ from pydantic_core import ErrorDetails
 from skytally.campaign_model import (
     TABLES,
     EventTable,
+    ExtinctionTable,
     MapTable,
     ReportTable,
     SettingsTable,
+    SourceTable,
     Table,
     TelescopeTable,
 )
@@ -41,8 +43,18 @@ Place = tuple[str | int, ...]
 AnyTable = TypeVar("AnyTable", bound=Table)
 
 # Single tables and lists of tables at the top of the file, with what each holds.
-_SINGLE = {"event": "name and time", "settings": "settings", "report": "authors and thanks"}
-_LISTED = {"map": "version and file", "telescope": "name, camera and log"}
+_SINGLE = {
+    "event": "name and time",
+    "settings": "settings",
+    "extinction": "map and coefficients",
+    "report": "authors and thanks",
+}
+_LISTED = {
+    "map": "version and file",
+    "telescope": "name, camera and log",
+    "source": "name and magnitude",
+}
+_OPTIONAL = ("source",)
 
 # What was expected, by the kind of fault; {…} is filled from the key's own limits.
 _EXPECTED = {
@@ -65,6 +77,7 @@ _EXPECTED = {
     "list_type": "a list in square brackets",
     "too_short": "a list with at least one entry",
     "dict_type": "a table in braces",
+    "bool_type": "true or false, without quotes",
     "model_type": "a table",
     "model_attributes_type": "a table in braces",
     "union_tag_invalid": 'shape = "rectangle", "circle" or "mosaic"',
@@ -110,7 +123,7 @@ class ParsedCampaign:
         Hash of the file.
     event : EventTable or None
         None where that table is at fault.
-    maps, telescopes : tuples of Entry
+    maps, telescopes, sources : tuples of Entry
         What there is to load, in the order of the file.
     problems : tuple of str
         The faults, in the order of the file's tables.
@@ -119,9 +132,11 @@ class ParsedCampaign:
     sha256: str
     event: EventTable | None
     settings: SettingsTable | None
+    extinction: ExtinctionTable | None
     report: ReportTable | None
     maps: tuple[Entry[MapTable], ...]
     telescopes: tuple[Entry[TelescopeTable], ...]
+    sources: tuple[Entry[SourceTable], ...]
     problems: tuple[str, ...]
 
 
@@ -162,14 +177,18 @@ def parse_campaign(path: Path) -> ParsedCampaign:
         hashlib.sha256(content).hexdigest(),
         single(EventTable, "event"),
         single(SettingsTable, "settings"),
+        single(ExtinctionTable, "extinction"),
         single(ReportTable, "report"),
         listed(MapTable, "map"),
         listed(TelescopeTable, "telescope"),
+        listed(SourceTable, "source"),
         (),
     )
     problems.extend(_duplicates(raw, "map", "version"))
     problems.extend(_duplicates(raw, "telescope", "name"))
+    problems.extend(_duplicates(raw, "source", "name"))
     problems.extend(_choice_faults(raw))
+    problems.extend(_shape_faults(raw))
     return ParsedCampaign(**{**vars(parsed), "problems": tuple(problems)})
 
 
@@ -252,9 +271,11 @@ def _top_faults(raw: dict[str, Any]) -> Iterator[str]:
 
 
 def _rows(raw: dict[str, Any], key: str, problems: list[str]) -> list[Any]:
-    """Return the tables of a list such as [[map]]; there must be one at least."""
+    """Return the tables of a list such as [[map]]; most must have one at least."""
     value = raw.get(key)
     hint = f"Write [[{key}]] with two brackets, and below it {_LISTED[key]}."
+    if value is None and key in _OPTIONAL:
+        return []
     if value is None or value == []:
         problems.append(f"{key}: missing, expected at least one {key}. {hint}")
     elif not isinstance(value, list):
@@ -349,7 +370,7 @@ def key_path(prefix: Place, inner: Sequence[str | int] = (), value: object = Non
         else:
             break
     names = value if isinstance(value, dict) else {}
-    name = names.get("name" if prefix[0] == "telescope" else "version")
+    name = names.get("version" if prefix[0] == "map" else "name")
     return f"{text} ({shown(name, quoted=False)})" if len(prefix) > 1 and name else text
 
 
@@ -414,12 +435,13 @@ def _whereto(
     key: str, known: Sequence[str] | dict[str, FieldInfo], section: tuple[str, ...]
 ) -> str:
     """Say what an unknown key may have been meant for: another table, or a key much like it."""
+    places = [p for p, t in TABLES.items() if key in t.model_fields and p != section]
+    own = [place for place in places if place[:1] == section[:1]]
     homes = [
         ".".join(place[:2]) + f" with shape = {shown(place[2])}"
         if place[1:2] == ("camera",)
         else ".".join(place)
-        for place, table in TABLES.items()
-        if key in table.model_fields and place != section
+        for place in own or places
     ]
     names = {name.lower(): name for name in known}
     near = difflib.get_close_matches(key.lower(), names, 1)
@@ -452,6 +474,7 @@ def _choice_faults(raw: dict[str, Any]) -> Iterator[str]:
     for key, pair, hint in (
         ("map", ("file", "circle"), "a map file, or a circle for an error circle"),
         ("telescope", ("log", "images"), "a log of exposures, or images for FITS frames"),
+        ("source", ("magnitude", "light_curve"), "an absolute magnitude, or a light-curve file"),
     ):
         rows = raw.get(key)
         for number, row in enumerate(rows if isinstance(rows, list) else []):
@@ -460,6 +483,19 @@ def _choice_faults(raw: dict[str, Any]) -> Iterator[str]:
                 found = f"both {pair[0]} and {pair[1]}" if given else f"no {pair[0]}"
                 place = key_path((key, number), (), row)
                 yield f"{place}: {found}, expected either {pair[0]} or {pair[1]}. Give {hint}."
+
+
+def _shape_faults(raw: dict[str, Any]) -> Iterator[str]:
+    """Yield faults of sources that fade or rise from no magnitude."""
+    rows = raw.get("source")
+    for number, row in enumerate(rows if isinstance(rows, list) else []):
+        for key in ("fade", "rise"):
+            if isinstance(row, dict) and key in row and "magnitude" not in row:
+                place = key_path(("source", number), (key,), row)
+                yield (
+                    f"{place}: a {key}, but no magnitude at peak. Give magnitude, or leave {key} "
+                    "out: a light curve says by itself how the source fades and rises."
+                )
 
 
 def _bare(key: str) -> str:

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import re
 from datetime import datetime
+from difflib import get_close_matches
 from pathlib import Path
 from typing import Annotated, Literal
 
@@ -17,10 +18,12 @@ from pydantic import (
     BeforeValidator,
     ConfigDict,
     Field,
+    PlainValidator,
     ValidationInfo,
 )
 from pydantic_core import PydanticCustomError
 
+from skytally.cosmology import DEFAULT_COSMOLOGY, known_cosmologies
 from skytally.errors import RegionError
 from skytally.region_text import parse_region
 
@@ -30,7 +33,9 @@ __all__ = [
     "CircleCameraTable",
     "DefaultsTable",
     "DepthTable",
+    "DetectionTable",
     "EventTable",
+    "ExtinctionTable",
     "ImagesTable",
     "LogFileTable",
     "MapTable",
@@ -38,12 +43,14 @@ __all__ = [
     "RectangleCameraTable",
     "ReportTable",
     "SettingsTable",
+    "SourceTable",
     "Table",
     "TelescopeTable",
     "is_region_text",
 ]
 
 NAME_LIMIT = 100
+MAGNITUDE_LIMIT = 50.0
 FIRST_YEAR, LAST_YEAR = 1900, 2180  # inside what logs may state
 
 # A region text names a shape and then holds numbers; anything else in a mask is a file.
@@ -120,6 +127,39 @@ def _moment(moment: datetime) -> datetime:
     return moment
 
 
+def _cosmology(name: str) -> str:
+    known = known_cosmologies()
+    if name in known:
+        return name
+    near = get_close_matches(name.lower(), {k.lower(): k for k in known}, 1)
+    hint = next((f"Did you mean {k}? " for k in known if k.lower() in near), "")
+    raise _refusal("a cosmology that astropy knows", f"{hint}Known are {', '.join(known)}.")
+
+
+def _number(value: object, low: float, high: float, what: str) -> float:
+    """Check one number of a table by band; nan fails every comparison."""
+    if isinstance(value, bool) or not isinstance(value, int | float) or not low <= value <= high:
+        raise _refusal(f"{what} from {low:g} to {high:g}")
+    return float(value)
+
+
+def _per_band(value: object, low: float, high: float, what: str) -> dict[str, float]:
+    """Check a table of one number per band."""
+    if not isinstance(value, dict) or not value:
+        raise _refusal(f"a table in braces with {what} for each band")
+    return {
+        _name(band): _number(one, low, high, f"in band {band!r}, which holds {one!r:.40}, {what}")
+        for band, one in value.items()
+    }
+
+
+def _magnitude(value: object) -> float | dict[str, float]:
+    limits = (-MAGNITUDE_LIMIT, MAGNITUDE_LIMIT)
+    if isinstance(value, dict):
+        return _per_band(value, *limits, "an absolute magnitude")
+    return _number(value, *limits, "an absolute magnitude")
+
+
 def _listed(value: object) -> object:
     return [value] if isinstance(value, str) else value
 
@@ -135,6 +175,11 @@ LocalFile = Annotated[str, AfterValidator(_local_file)]
 RegionOrMoc = Annotated[str, AfterValidator(_region_or_moc)]
 Moment = Annotated[AwareDatetime, AfterValidator(_moment)]
 MagnitudeSystem = Literal["AB", "Vega"]
+Cosmology = Annotated[str, AfterValidator(_cosmology)]
+Magnitude = Annotated[float | dict[str, float], PlainValidator(_magnitude)]
+Coefficients = Annotated[
+    dict[str, float], PlainValidator(lambda value: _per_band(value, 0.0, 50.0, "A_b / E(B-V)"))
+]
 
 
 class Table(BaseModel):
@@ -183,6 +228,9 @@ class SettingsTable(Table):
     )
     revisit: RevisitTable = Field(
         default=RevisitTable(), description="{ visits = 2, gap_minutes = 30 }"
+    )
+    cosmology: Cosmology = Field(
+        default=DEFAULT_COSMOLOGY, description="the name of one of astropy's cosmologies"
     )
 
 
@@ -358,6 +406,64 @@ class TelescopeTable(Table):
     searchable: LocalFile | None = Field(default=None, description="a MOC file")
 
 
+class ExtinctionTable(Table):
+    """``[extinction]``: Galactic extinction, A_b = coefficient · E(B−V)."""
+
+    map: LocalFile | None = Field(default=None, description="a HEALPix map of E(B-V)")
+    coefficients: Coefficients = Field(
+        default={}, description="A_b / E(B-V) for each band, such as { w = 2.34 }"
+    )
+    allow_holes: bool = Field(default=False, description="true or false")
+
+
+class DetectionTable(Table):
+    """``[[source]] detection``: the chance that one exposure shows the source."""
+
+    offset: float = Field(
+        default=0.0,
+        ge=-10,
+        le=10,
+        description="the magnitudes from the limit to half the plateau's efficiency",
+    )
+    width: float = Field(
+        default=0.0, ge=0, le=10, description="the width of the logistic in magnitudes; 0: a step"
+    )
+    plateau: float = Field(
+        default=1.0, gt=0, le=1, description="the efficiency for bright sources, such as 0.95"
+    )
+
+
+class SourceTable(Table):
+    """``[[source]]``: what might have been there."""
+
+    name: Name = Field(description="the source's name in quotes")
+    magnitude: Magnitude | None = Field(
+        default=None,
+        description="an absolute magnitude: -16.0, or one per band: { r = -16.0, g = -15.5 }",
+    )
+    fade: float | None = Field(
+        default=None, ge=0, le=100, description="how fast it fades, in magnitudes per day"
+    )
+    rise: float | None = Field(
+        default=None, ge=0, le=10_000, description="the days from the event to the peak"
+    )
+    light_curve: LocalFile | None = Field(
+        default=None, description="a table with the columns days, band and magnitude"
+    )
+    k_correction: Literal["none", "flat"] = Field(
+        default="none", description='"none", or "flat" for a flat spectrum'
+    )
+    visits: int = Field(
+        default=1, ge=1, le=1000, description="in how many exposures it must be seen"
+    )
+    gap_minutes: float = Field(
+        default=0.0, ge=0, description="the least time between first and last of them, in minutes"
+    )
+    detection: DetectionTable = Field(
+        default=DetectionTable(), description="{ offset = 0.0, width = 0.2, plateau = 0.95 }"
+    )
+
+
 class ReportTable(Table):
     """``[report]``: who signs the report."""
 
@@ -370,14 +476,17 @@ class ReportTable(Table):
     thanks: str = Field(default="", max_length=4000, description="the acknowledgements in quotes")
 
 
-# Which model stands where; numbers of [[map]] and [[telescope]] are left out of the place.
+# Which model stands where; numbers of [[map]], [[telescope]] and [[source]] are left out.
 TABLES: dict[tuple[str, ...], type[Table]] = {
     ("event",): EventTable,
     ("settings",): SettingsTable,
     ("settings", "revisit"): RevisitTable,
+    ("extinction",): ExtinctionTable,
     ("report",): ReportTable,
     ("map",): MapTable,
     ("map", "circle"): MapCircleTable,
+    ("source",): SourceTable,
+    ("source", "detection"): DetectionTable,
     ("telescope",): TelescopeTable,
     ("telescope", "site"): SiteTable,
     ("telescope", "camera", "rectangle"): RectangleCameraTable,

@@ -22,7 +22,7 @@ from skytally.raster import (
 )
 from skytally.shapes import AnyOf, Circle, Polygon, Shape
 from skytally.spans import Ints, Spans
-from skytally.working_order import rasterise_to_target
+from skytally.working_order import rasterise_shape_to_target, rasterise_to_target
 
 __all__ = ["UNSTATED_BAND", "Footprints", "Progress", "clip_raster", "lay_footprints"]
 
@@ -32,8 +32,6 @@ Progress = Callable[[str, float], None]
 # Exposures whose log names no band are a band of their own, so that sums hold.
 UNSTATED_BAND = "unstated"
 
-# Working order of intersections and complements, whose exact area is not known.
-_OTHER_ORDER = 14
 _MJD_ZERO = date(1858, 11, 17).toordinal()
 
 
@@ -287,8 +285,10 @@ def _rasterise(laid: _Laid, band: Ints, night: Ints) -> Raster:
     groups = [np.searchsorted(simple, row[np.isin(row, simple)]) for row in rows]
     parts = [rasterise_to_target(pieces, simple.size, groups)]
     owners = [simple]
+    other = [np.unique(row[~np.isin(row, simple)]) for row in rows]
     for owner, shape in laid.other.items():
-        parts.append(rasterise_shape(shape, _OTHER_ORDER))
+        companions = min(row.size for row in other if owner in row)
+        parts.append(rasterise_shape_to_target(shape, companions))
         owners.append(np.array([owner]))
     return stack_rasters(parts).take(np.argsort(np.concatenate(owners)))
 

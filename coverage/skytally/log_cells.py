@@ -24,6 +24,7 @@ __all__ = [
     "read_declination",
     "read_depth",
     "read_duration",
+    "read_number",
     "read_right_ascension",
     "read_times",
     "shown",
@@ -164,7 +165,14 @@ def _is_sentinel(cell: str) -> bool:
     return _NINES.fullmatch(cell) is not None
 
 
-def _plain(cell: str, comma: bool, remedy: str) -> float:
+def read_number(cell: str, comma: bool, remedy: str) -> float:
+    """Value of a plain number.
+
+    Raises
+    ------
+    CellFault
+        If the text is none, with ``remedy``, which does not end in a full stop.
+    """
     value = _number(cell, comma)
     if value is None:
         why = "not a number"
@@ -212,7 +220,7 @@ def read_right_ascension(cell: str, unit: str, option: str | None, comma: bool) 
     else:
         parts = _sexagesimal(cell, comma)
         if parts is None:
-            degrees = _plain(cell, comma, remedy)
+            degrees = read_number(cell, comma, remedy)
         else:
             in_degrees = parts[1] in "d°" or (option == "deg" and parts[1] != "h")
             degrees = parts[0] * (1.0 if in_degrees else 15.0)
@@ -240,7 +248,7 @@ def read_declination(cell: str, unit: str, comma: bool) -> float | None:
         parts = _sexagesimal(cell, comma)
         if parts is not None and parts[1] == "h":
             raise _unreadable("a declination in hours", remedy)
-        degrees = _plain(cell, comma, remedy) if parts is None else parts[0]
+        degrees = read_number(cell, comma, remedy) if parts is None else parts[0]
     if not -90.0 <= degrees <= 90.0:
         raise _unreadable("a declination outside -90 to 90", remedy)
     return degrees
@@ -257,7 +265,7 @@ def read_angle(cell: str, unit: str, comma: bool) -> float | None:
     if _is_missing(cell) or cell.lower() == "nan":
         return None
     remedy = "give the position angle in degrees east of north"
-    degrees = _plain(cell, comma, remedy) * UNIT_DEGREES.get(unit, 1.0)
+    degrees = read_number(cell, comma, remedy) * UNIT_DEGREES.get(unit, 1.0)
     if not -360.0 <= degrees <= 360.0:
         raise _unreadable("an angle outside -360 to 360 degrees", remedy)
     return degrees
@@ -274,7 +282,7 @@ def read_duration(cell: str, unit: str, comma: bool) -> float | None:
     if _is_missing(cell) or cell.lower() == "nan" or (cell[:1] == "-" and _is_sentinel(cell)):
         return None
     remedy = "give the exposure time in seconds, or leave the cell empty"
-    seconds = _plain(cell, comma, remedy) * UNIT_SECONDS.get(unit, 1.0)
+    seconds = read_number(cell, comma, remedy) * UNIT_SECONDS.get(unit, 1.0)
     if seconds < 0:
         raise _unreadable("a negative exposure time", remedy)
     return seconds
@@ -297,7 +305,7 @@ def read_depth(cell: str, comma: bool) -> float | None:
         return None
     if _is_sentinel(bare.replace(",", ".") if comma else bare):
         return None
-    return _plain(bare, comma, "give a magnitude, or leave the cell empty")
+    return read_number(bare, comma, "give a magnitude, or leave the cell empty")
 
 
 def read_times(

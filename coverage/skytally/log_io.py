@@ -39,6 +39,7 @@ __all__ = ["ImageOptions", "LogOptions", "read_images", "read_log"]
 
 # Of the values of ObsLocTAP's execution_status, the one that means it happened.
 PERFORMED = "Performed"
+EXTINCTION_LIMIT = 50.0  # magnitudes; more is another unit
 
 
 @dataclass(frozen=True)
@@ -178,7 +179,7 @@ class _Reading:
         duration = self._duration(start)
         band = [_text(x) or self._options.band or "" for x in self._cells("band")]
         depth = self._magnitude("depth", self._options.depth)
-        extinction = self._magnitude("extinction", None)
+        extinction = self._extinction()
         if self._options.use_fov:
             self._add_fields_of_view(region, ra, dec)
         self._set_aside_early(start)
@@ -394,6 +395,18 @@ class _Reading:
                 "exposures count, with the value missing."
             )
         return values if default is None else np.where(np.isnan(values), default, values)
+
+    def _extinction(self) -> NDArray[np.float64]:
+        """A_b in magnitudes; a row with one that no dust gives is set aside."""
+        values = self._magnitude("extinction", None)
+        wrong = np.flatnonzero((values < 0) | (values > EXTINCTION_LIMIT)).tolist()
+        fault = CellFault(
+            "unreadable",
+            f"no extinction in magnitudes (0 to {EXTINCTION_LIMIT:g})",
+            "give A_b in magnitudes, or leave the cell empty",
+        )
+        self._put_aside_cells("extinction", dict.fromkeys(wrong, fault))
+        return values
 
     def _add_fields_of_view(
         self, region: list[str], ra: NDArray[np.float64], dec: NDArray[np.float64]

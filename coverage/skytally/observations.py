@@ -164,8 +164,10 @@ class Observations:
 def night_of(start_mjd: NDArray[np.float64], longitude_deg: float | None) -> NDArray[np.int64]:
     """Night of each exposure, as the MJD of the date on which it began.
 
-    Nights break at local mean noon of the site's longitude (degrees east), at
-    12:00 UTC where there is no site.
+    Nights break at local mean noon of the site's longitude (degrees east, −180
+    to 360), at 12:00 UTC where there is no site.
     """
-    local = start_mjd + (0.0 if longitude_deg is None else longitude_deg / 360.0)
+    east = 0.0 if longitude_deg is None else longitude_deg
+    # Beyond 180° east the date is that of the western hemisphere: 350° is −10°.
+    local = start_mjd + (east - 360.0 if east > 180.0 else east) / 360.0
     return np.floor(local - 0.5).astype(np.int64)

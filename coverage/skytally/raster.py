@@ -472,20 +472,23 @@ def rasterise(pieces: Pieces, owners: int, order: int, within: Spans | None = No
     )
 
 
-def rasterise_shape(shape: Shape, order: int) -> Raster:
-    """Rasterise one shape of any kind at one working order; a raster of one owner."""
+def rasterise_shape(shape: Shape, order: int, within: Spans | None = None) -> Raster:
+    """Rasterise one shape of any kind at one working order; a raster of one owner.
+
+    ``within`` is as in `rasterise`.
+    """
     if isinstance(shape, Spans):
         return Raster.exact(shape)
     if isinstance(shape, Circle | Polygon):
-        return rasterise(pieces_of_shape(shape, 0), 1, order)
+        return rasterise(pieces_of_shape(shape, 0), 1, order, within)
     if isinstance(shape, NotIn):
-        part = rasterise_shape(shape.part, order)
+        part = rasterise_shape(shape.part, order, within)
         centre, inner, outer = (
             SpanTable.from_regions([table.region(0).complement()])
             for table in (part.centre, part.outer, part.inner)
         )
         return Raster(centre, inner, outer, part.order)
-    parts = [rasterise_shape(part, order) for part in shape.parts]
+    parts = [rasterise_shape(part, order, within) for part in shape.parts]
     if isinstance(shape, AnyOf):
         return stack_rasters(parts).combined()
     assert isinstance(shape, AllOf)

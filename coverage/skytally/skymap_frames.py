@@ -22,7 +22,7 @@ from skytally.skymap import DistanceLayer, Floats
 from skytally.skymap_table import MapCells
 from skytally.spans import LINE_ORDER, UNIT_SR, Ints, Spans, cell_to_span, spans_to_cells
 
-__all__ = ["galactic_to_line"]
+__all__ = ["galactic_positions", "galactic_to_line"]
 
 # A source cell is matched by cells one order finer for each of these amounts of
 # probability that it exceeds: the cells along a region's edge, each off by a
@@ -98,6 +98,28 @@ def _cells_at(order: int, vector: Floats) -> Ints:
     return np.asarray(xyz_to_healpix(*vector, 1 << order, order="nested"), dtype=np.int64)
 
 
+def galactic_positions(order: int, cell: Ints, depth: int) -> Ints:
+    """Where the centres of the sub-cells of ICRS cells lie on the line of a Galactic map.
+
+    Parameters
+    ----------
+    order : int
+        Of the cells.
+    cell : int64 array, shape (n,)
+        NESTED indices of ICRS cells.
+    depth : int
+        How many orders deeper the sub-cells are.
+
+    Returns
+    -------
+    int64 array, shape (n, 4**depth)
+        Order-29 NESTED indices in the Galactic frame.
+    """
+    sub = (cell << (2 * depth))[:, np.newaxis] + np.arange(1 << (2 * depth))
+    vector = _galactic_axes().T @ _centres(order + depth, sub.reshape(-1))
+    return _cells_at(LINE_ORDER, vector).reshape(sub.shape)
+
+
 def _covering_cells(cells: MapCells, share: Floats) -> Iterator[tuple[Ints, Ints, int]]:
     """Yield order, cells of the line that may hold probability, and how deep to sample them.
 
@@ -147,18 +169,15 @@ def _sample(cells: MapCells, order: Ints, cell: Ints, depth: int) -> tuple[Float
     """
     mean = np.zeros(cell.size)
     row = np.full(cell.size, -1, dtype=np.int64)
-    icrs_to_galactic = _galactic_axes().T
     for level in np.unique(order):
         ours = np.flatnonzero(order == level)
         for low in range(0, ours.size, _CHUNK >> (2 * depth)):
             part = ours[low : low + (_CHUNK >> (2 * depth))]
-            sub = (cell[part] << (2 * depth))[:, np.newaxis] + np.arange(1 << (2 * depth))
-            vector = icrs_to_galactic @ _centres(int(level) + depth, sub.reshape(-1))
-            position = _cells_at(LINE_ORDER, vector)
+            position = galactic_positions(int(level), cell[part], depth)
             source = np.searchsorted(cells.starts, position, side="right") - 1
             inside = (source >= 0) & (position < cells.stops[source])
-            density = np.where(inside, cells.density_per_sr[source], 0.0).reshape(sub.shape)
-            source = np.where(inside, source, -1).reshape(sub.shape)
+            density = np.where(inside, cells.density_per_sr[source], 0.0)
+            source = np.where(inside, source, -1)
             mean[part] = density.mean(axis=1)
             row[part] = source[np.arange(part.size), density.argmax(axis=1)]
     return mean, row

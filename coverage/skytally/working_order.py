@@ -15,10 +15,18 @@ import numpy as np
 from numpy.typing import NDArray
 
 from skytally.grouping import sum_by
-from skytally.raster import Pieces, Raster, cell_width_rad, rasterise, stack_rasters
-from skytally.spans import Ints
+from skytally.raster import (
+    Pieces,
+    Raster,
+    cell_width_rad,
+    rasterise,
+    rasterise_shape,
+    stack_rasters,
+)
+from skytally.shapes import Shape
+from skytally.spans import Ints, SpanTable
 
-__all__ = ["ORDER_CAP", "ORDER_FLOOR", "rasterise_to_target"]
+__all__ = ["ORDER_CAP", "ORDER_FLOOR", "rasterise_shape_to_target", "rasterise_to_target"]
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -31,9 +39,12 @@ _ONE_FOOTPRINT, _ONE_ROW = 0.005, 0.0005
 # rings: rows are 0.65 to 0.77 cell widths apart, and uniform offsets of such
 # rows have a standard deviation of 0.29 of that.
 _EDGE_ERROR = 0.25
-# Beyond so many standard errors it is not the centre rule: the pieces overlap,
-# and their areas do not add up to the footprint's.
-_OVERLAP_SIGMA = 6.0
+# The same as a share of the undecided cells, about 7.5 cell widths for each of edge.
+_STRIP_ERROR = 0.06
+# No shape of unknown area stays coarser, for brackets are not refined there.
+_SHAPE_FLOOR = 14
+# Pieces overlap where their areas exceed the footprint's by more than rounding.
+_ROUNDING = 1e-9
 
 
 @dataclass(frozen=True, eq=False)
@@ -96,22 +107,41 @@ def rasterise_to_target(pieces: Pieces, owners: int, groups: Sequence[Ints]) -> 
     order = _model_orders(model, groups, sigmas=1.0)
     safe = _model_orders(model, groups, sigmas=3.0)
     raster = _at_orders(pieces, order)
+    several = np.bincount(pieces.owner, minlength=owners) > 1
     while True:
-        error = raster.centre.area_sr() / model.area_sr - 1
-        width = cell_width_rad(0) / 2.0**order
-        overlapping = np.abs(error) > _OVERLAP_SIGMA * model.relative * width
-        deeper = np.where(overlapping, safe, order)
-        failing = _failing(model, groups, np.where(overlapping, 0.0, error)) & ~overlapping
-        deeper = np.minimum(deeper + failing, ORDER_CAP)
-        again = np.flatnonzero(deeper > order)
+        area = raster.centre.area_sr()
+        summed = area.copy()
+        failing = _failing(model, groups, summed / model.area_sr - 1)
+        # Where pieces overlap the union is smaller than their sum, at any order.
+        asked = np.flatnonzero(failing & several)
+        if asked.size:
+            summed[asked] = _summed_sr(pieces, order, asked)
+            failing = _failing(model, groups, summed / model.area_sr - 1)
+        overlapping = summed > area * (1 + _ROUNDING)
+        # There the measured error is not all of the union's, so its standard error must do.
+        deeper = np.maximum(order + failing, np.where(overlapping, safe, 0))
+        again = np.flatnonzero(np.minimum(deeper, ORDER_CAP) > order)
         if again.size == 0:
             return raster
-        order = np.maximum(order, deeper)
-        chosen = np.isin(pieces.owner, again)
-        part = pieces.take(chosen, np.searchsorted(again, pieces.owner[chosen]))
+        order[again] = np.minimum(deeper[again], ORDER_CAP)
+        part = _of_owners(pieces, again)
         pick = np.arange(owners)
         pick[again] = owners + np.arange(again.size)
         raster = stack_rasters([raster, _at_orders(part, order[again])]).take(pick)
+
+
+def _of_owners(pieces: Pieces, owners: Ints) -> Pieces:
+    """Pieces of the owners named, rising, which are renumbered from 0."""
+    chosen = np.isin(pieces.owner, owners)
+    return pieces.take(chosen, np.searchsorted(owners, pieces.owner[chosen]))
+
+
+def _summed_sr(pieces: Pieces, order: Ints, owners: Ints) -> Floats:
+    """Solid angle of the owners' pieces by the centre rule, each by itself, then summed."""
+    part = _of_owners(pieces, owners)
+    everything = np.arange(len(part))
+    alone = _at_orders(part.take(everything, everything), order[owners][part.owner])
+    return sum_by(part.owner, alone.centre.area_sr(), owners.size)
 
 
 def _model_orders(model: _Model, groups: Sequence[Ints], sigmas: float) -> Ints:
@@ -146,8 +176,44 @@ def _at_orders(pieces: Pieces, order: Ints) -> Raster:
     parts, owners = [], []
     for level in np.unique(order):
         mine = np.flatnonzero(order == level)
-        chosen = np.isin(pieces.owner, mine)
-        part = pieces.take(chosen, np.searchsorted(mine, pieces.owner[chosen]))
-        parts.append(rasterise(part, mine.size, int(level)))
+        parts.append(rasterise(_of_owners(pieces, mine), mine.size, int(level)))
         owners.append(mine)
     return stack_rasters(parts).take(np.argsort(np.concatenate(owners)))
+
+
+def rasterise_shape_to_target(shape: Shape, companions: int) -> Raster:
+    """Rasterise a shape whose exact solid angle is not known: an intersection, a complement.
+
+    There is no error to measure, so three standard errors must fit into what is
+    allowed. Each step descends only the cells that the one before left undecided.
+
+    Parameters
+    ----------
+    shape : Shape
+        Any.
+    companions : int
+        Footprints, itself included, over which its error averages in the
+        smallest row that it belongs to.
+
+    Returns
+    -------
+    Raster
+        Of one owner.
+    """
+    allowed = 2 * min(_ONE_FOOTPRINT, _ONE_ROW * float(np.sqrt(companions)))
+    order = _SHAPE_FLOOR
+    raster = rasterise_shape(shape, order)
+    while order < ORDER_CAP:
+        kept = raster.inner.region(0)
+        undecided = raster.outer.region(0) - kept
+        error = 3 * _STRIP_ERROR * undecided.area_sr
+        if error <= allowed * float(raster.centre.area_sr()[0]):
+            break
+        order += 1
+        deeper = rasterise_shape(shape, order, within=undecided)
+        centre, inner, outer = (
+            SpanTable.from_regions([kept | (table.region(0) & undecided)])
+            for table in (deeper.centre, deeper.inner, deeper.outer)
+        )
+        raster = Raster(centre, inner, outer, deeper.order)
+    return raster

@@ -1,4 +1,4 @@
-"""Write the maps, logs and camera of the invented event "Lantern 7".
+"""Write the maps, logs, camera and light curve of the invented event "Lantern 7".
 
 Run ``python generate.py`` to rewrite the files beside this script (or name another
 folder); the same files come out every time. ``campaign.toml`` is written by hand and
@@ -202,6 +202,18 @@ def write_multiorder_map(path, version, order, share):
     write_fits(path, table, {**explicit, "DISTMEAN": round(mean, 9), "DISTSTD": round(sd, 9)})
 
 
+def write_dust_map(path, nside=64):
+    """Write E(B−V) of an even sheet of dust, a cosecant law of Galactic latitude with a cap."""
+    hp = HEALPix(nside, order="ring")
+    latitude = hp.healpix_to_lonlat(np.arange(hp.npix))[1].rad
+    ebv = np.minimum(0.014 / np.maximum(np.abs(np.sin(latitude)), 1e-9), 2.5)
+    table = Table({"EBV": ebv.round(4).astype("f4").reshape(-1, 1024)})
+    table["EBV"].unit = "mag"
+    pixels = {"FIRSTPIX": 0, "LASTPIX": hp.npix - 1, "INDXSCHM": "IMPLICIT"}
+    frame = {"ORDERING": "RING", "NSIDE": nside, "COORDSYS": "G", "OBJECT": "FULLSKY"}
+    write_fits(path, table, {**frame, **pixels})
+
+
 # --- nights ---------------------------------------------------------------------------
 
 
@@ -384,12 +396,25 @@ def heron_camera():
     return "\n".join(lines) + "\n"
 
 
+def ember_light_curve():
+    """Absolute magnitudes of a source that peaks later in redder bands (a parabola in log time)."""
+    lines = ["# days since the event, absolute AB magnitude; invented", "days,band,magnitude"]
+    for band, peak_days, peak in (("g", 0.6, -15.6), ("r", 0.9, -16.1), ("i", 1.3, -16.2)):
+        for days in (0.05, 0.1, 0.2, 0.35, 0.6, 0.9, 1.3, 2, 3, 4.5):
+            magnitude = peak + 0.9 * np.log(days / peak_days) ** 2
+            lines.append(f"{days:g},{band},{magnitude:.2f}")
+    return "\n".join(lines) + "\n"
+
+
 def main(folder):
-    for name in ("maps", "logs", "cameras"):
+    for name in ("maps", "logs", "cameras", "sources"):
         (folder / name).mkdir(parents=True, exist_ok=True)
     write_flat_map(folder / "maps/first.fits.gz")
     write_multiorder_map(folder / "maps/arc.fits.gz", "arc", order=8, share=3e-4)
     write_multiorder_map(folder / "maps/update.fits.gz", "update", order=9, share=3e-4)
+    write_dust_map(folder / "maps/dust.fits.gz")
+    curve = ember_light_curve()
+    (folder / "sources/ember.csv").write_text(curve, encoding="utf-8", newline="\n")
 
     rng = np.random.default_rng(SEED)
     taken = {name: [] for name in TELESCOPES}
