@@ -24,7 +24,6 @@ from skytally.sky_chart import (
     whole_sky_figure,
     zoom_figure,
 )
-from skytally.tally import TallyRow
 from skytally.wording import (
     NBSP,
     area_text,
@@ -195,14 +194,10 @@ def _credit(results: Results) -> Drawing:
 
 def _depth(results: Results) -> Drawing:
     rows = depth_bands(results)
-
-    def best(row: TallyRow) -> float:
-        return row.depth_max if row.depth_max is not None else float("-inf")
-
-    deepest = max(rows, key=best)
+    depth, band = max((e.depth, str(e.band)) for e in results.exposures if e.depth is not None)
     without = sum(e.depth is None for e in results.exposures)
     finding = (
-        f"The deepest exposure reached {magnitude_text(deepest.depth_max)} in {deepest.band}; "
+        f"The deepest exposure reached {magnitude_text(depth)} in {band}; "
         f"{count('exposure', without)} of {len(results.exposures)} came without a limit."
     )
     note = f" The {MOST_BANDS} most used bands are shown." if len(rows) > MOST_BANDS else ""

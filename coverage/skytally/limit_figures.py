@@ -71,11 +71,12 @@ def _histogram(results: Results, shown: list[DepthHistogram]) -> Drawing:
     peak = int(np.argmax(held))
     low, high = largest.edges[peak], largest.edges[peak + 1]
     without = sum(h.without_limit for h in shown)
+    share = float(held[peak])
+    most = "most of it" if share > held.sum() / 2 else f"the largest part of it ({percent(share)})"
     finding = (
-        f"In {largest.band}, {percent(float(held.sum()))} of all probability has a limit, most of "
-        f"it between {number_text(low, 2)} and {number_text(high, 2)}{NBSP}mag"
-        + ("." if held[peak] > held.sum() / 2 else f" ({percent(float(held[peak]))}).")
-    ).replace("most of it between", "most often between" if held[peak] <= held.sum() / 2 else "most of it between")
+        f"In {largest.band}, {percent(float(held.sum()))} of all probability has a limit, {most} "
+        f"between {number_text(low, 2)} and {number_text(high, 2)}{NBSP}mag."
+    )
     if without > 0:
         finding += " What was covered only by exposures without a limit is stated in each panel."
     note = f" The {MOST_BANDS} most used bands are shown." if len(shown) > MOST_BANDS else ""

@@ -11,8 +11,15 @@ from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 
 from skytally.exclusion import DepthHistogram, DistanceProfile, ExclusionCurve, FadingPlane
-from skytally.figure_style import ACCENT, GREY, INK, RULE, WIDTH_IN, new_figure, plain_axes
-from skytally.figure_style import short_label
+from skytally.figure_style import (
+    ACCENT,
+    GREY,
+    INK,
+    WIDTH_IN,
+    new_figure,
+    plain_axes,
+    short_label,
+)
 from skytally.plots import MOST_BANDS, end_labels
 from skytally.wording import number_text, percent
 

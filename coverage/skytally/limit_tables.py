@@ -15,7 +15,6 @@ from skytally.wording import (
     distance_text,
     limit_rows,
     limit_terms,
-    magnitude_text,
     newest_curves,
     number_text,
     percent,
@@ -225,9 +224,10 @@ def _sources(results: Results) -> Table:
         )
         for row in _newest(results)
     ]
+    version = version_text(results.newest.version)
     return Table(
         "sources",
-        f"What would have been seen, of all the probability of {version_text(results.newest.version)}",
+        f"What would have been seen, of all the probability of {version}",
         columns_of(
             "source",
             "reach (Mpc)",
@@ -388,11 +388,11 @@ def _exclusion(results: Results) -> Table:
     ]
     return Table(
         "exclusion",
-        "Absolute magnitude at which a constant source is ruled out over so much of all probability",
+        f"Constant sources ruled out over 50{NBSP}% and 90{NBSP}% of all probability",
         columns_of(
             "band",
-            f"50{NBSP}% (mag)",
-            f"90{NBSP}% (mag)",
+            f"over 50{NBSP}% (M, mag)",
+            f"over 90{NBSP}% (M, mag)",
             "however bright",
         ),
         (*rows, _without_row(without, 4, 3)) if rows else (),
