@@ -159,10 +159,12 @@ def _third_dimension(
             continue
         if progress is not None:
             progress(f"Reaching into map {skymap.label}", index / len(spaces))
-        scene = Scene.of(space, coverage.centre, coverage, *dust)
+        patchworks = coverage.centre, coverage.inner, coverage.outer
+        scenes = [Scene.of(space, patchwork, coverage, *dust) for patchwork in patchworks]
+        scene = scenes[0]
         seen = [SeenSource.of(s, scene, coverage, campaign.event_mjd) for s in campaign.sources]
         found["source_rows"] += tuple(
-            tally_sources(coverage, space, campaign.sources, campaign.event_mjd, *dust)
+            tally_sources(coverage, scenes, campaign.sources, campaign.event_mjd)
         )
         found["exclusions"] += tuple(exclusion_curves(coverage, scene))
         found["fading_planes"] += (fading_plane(coverage, scene, campaign.event_mjd),)
