@@ -26,6 +26,7 @@ from deep_sky import (
     fields,
     map_of,
     often,
+    scenes_of,
     spans_of_cells,
 )
 from hypothesis import given, settings
@@ -33,7 +34,7 @@ from hypothesis import strategies as st
 from skytally.cameras import CircleCamera
 from skytally.cosmology import Cosmology
 from skytally.covered import TallySettings
-from skytally.limits import Scene, tally_sources
+from skytally.limits import tally_sources
 from skytally.skymap import SkyMap
 from skytally.sources import Detection, Source
 from skytally.space import Space
@@ -133,7 +134,8 @@ class Night:
         return found
 
     def rows(self, *sources):
-        return tally_sources(self.coverage, self.space, sources, EVENT_MJD, self.dust, COEFFICIENTS)
+        scenes = scenes_of(self.coverage, self.space, self.dust, COEFFICIENTS)
+        return tally_sources(self.coverage, scenes, sources, EVENT_MJD)
 
     def chosen(self, row):
         return ((self.telescope == row.telescope) | (row.telescope is None)) & (
@@ -203,8 +205,8 @@ def plain_map(cell, mu, sigma, order=3):
 
 def tallied(regions, skymap, sources, dust=None, **log):
     coverage = exact_coverage(regions, skymap, **log)
-    space = Space.of(skymap, PLANCK)
-    return tally_sources(coverage, space, sources, EVENT_MJD, dust, COEFFICIENTS)
+    scenes = scenes_of(coverage, Space.of(skymap, PLANCK), dust, COEFFICIENTS)
+    return tally_sources(coverage, scenes, sources, EVENT_MJD)
 
 
 @pytest.fixture
@@ -307,9 +309,8 @@ def test_volumes_of_a_cap_against_its_formula_and_astropy():
     skymap = plain_map(squares(0, 200), np.full(200, 150.0), np.full(200, 40.0))
     log = log_table("Heron", [150.0], [20.0], depth=limit)
     coverage = coverage_of([telescope("Heron", CircleCamera(radius), log)], skymap)
-    row = tally_sources(
-        coverage, Space.of(skymap, PLANCK), [constant(magnitude)], EVENT_MJD, None, {}
-    )[0]
+    scenes = scenes_of(coverage, Space.of(skymap, PLANCK))
+    row = tally_sources(coverage, scenes, [constant(magnitude)], EVENT_MJD)[0]
     reach = Distance(distmod=limit - magnitude).to_value(u.Mpc)
     solid = 2 * np.pi * (1 - np.cos(np.radians(radius)))
     redshift = Distance(distmod=limit - magnitude).compute_z(Planck18)
@@ -429,12 +430,13 @@ def test_without_a_credible_volume_its_parts_are_missing(cells):
 
 @pytest.mark.parametrize("name", SOURCES)
 def test_no_exposure_and_none_on_the_map(cells, name):
-    cell, skymap = cells
+    _, skymap = cells
     log = log_table("Heron", [], [])
     nothing = coverage_of([telescope("Heron", CircleCamera(1.0), log)], skymap)
     space = Space.of(skymap, PLANCK)
     for coverage in (nothing, exact_coverage([Spans.from_cells(3, np.array([500]))], skymap)):
-        for row in tally_sources(coverage, space, [SOURCES[name]], EVENT_MJD, None, {}):
+        scenes = scenes_of(coverage, space)
+        for row in tally_sources(coverage, scenes, [SOURCES[name]], EVENT_MJD):
             assert (row.probability, row.probability_high) == (0.0, 0.0)
 
 
@@ -452,8 +454,8 @@ def test_a_field_of_less_than_a_cell_has_a_bracket_from_nothing(cells):
             offsets=np.zeros(1, dtype=np.int64),
         ),
     )
-    space = Space.of(skymap, PLANCK)
-    row = tally_sources(coverage, space, [constant(-20.0)], EVENT_MJD, None, {})[0]
+    scenes = scenes_of(coverage, Space.of(skymap, PLANCK))
+    row = tally_sources(coverage, scenes, [constant(-20.0)], EVENT_MJD)[0]
     assert row.probability_low == 0.0
     assert 0.0 < row.probability <= row.probability_high
 

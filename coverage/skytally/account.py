@@ -28,7 +28,7 @@ from skytally.exclusion import (
 )
 from skytally.field_extinction import bands_without_coefficient, field_extinction
 from skytally.footprints import Footprints, Progress, lay_footprints
-from skytally.limits import Scene, SeenSource, SourceRow, tally_sources
+from skytally.limits import Scene, SeenSource, SourceRow, tally_scenes
 from skytally.refinement import refine_footprints
 from skytally.results import (
     Event,
@@ -159,12 +159,11 @@ def _third_dimension(
             continue
         if progress is not None:
             progress(f"Reaching into map {skymap.label}", index / len(spaces))
-        patchworks = coverage.centre, coverage.inner, coverage.outer
-        scenes = [Scene.of(space, patchwork, coverage, *dust) for patchwork in patchworks]
+        scenes = Scene.of_brackets(space, coverage, *dust)
         scene = scenes[0]
         seen = [SeenSource.of(s, scene, coverage, campaign.event_mjd) for s in campaign.sources]
         found["source_rows"] += tuple(
-            tally_sources(coverage, scenes, campaign.sources, campaign.event_mjd)
+            tally_scenes(coverage, scenes, campaign.sources, campaign.event_mjd)
         )
         found["exclusions"] += tuple(exclusion_curves(coverage, scene))
         found["fading_planes"] += (fading_plane(coverage, scene, campaign.event_mjd),)

@@ -27,7 +27,7 @@ from skytally.sources import Source
 from skytally.space import Space
 from skytally.spans import Ints
 
-__all__ = ["Scene", "SeenSource", "SourceRow", "tally_sources"]
+__all__ = ["Scene", "SeenSource", "SourceRow", "tally_scenes", "tally_sources"]
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -38,7 +38,7 @@ Bools = NDArray[np.bool_]
 _LEAST_STEP_MAG, _GREATEST_STEP_MAG = 0.005, 0.1
 # So many widths from its middle a logistic is within 1e-5 of its end.
 _END_WIDTHS = 10
-# Where detection ends abruptly, reaches are the steps while they are no more than this.
+# Where detection ends abruptly the reaches are the nodes, or so many of them.
 _MOST_EDGES = 400
 _NUMBERS_AT_ONCE = 2_000_000
 
@@ -106,6 +106,14 @@ class Scene:
         overlay = Overlay.build(patchwork, space.skymap, dust)
         visits = Visits.of(patchwork, overlay, coverage.observations, coefficients)
         return cls(space, overlay, visits)
+
+    @classmethod
+    def of_brackets(
+        cls, space: Space, coverage: Coverage, dust: Dust | None, coefficients: Mapping[str, float]
+    ) -> list[Scene]:
+        """Scenes of the centre rule's, the inner and the outer patchwork."""
+        patchworks = coverage.centre, coverage.inner, coverage.outer
+        return [cls.of(space, p, coverage, dust, coefficients) for p in patchworks]
 
     def rows_of(self, place: Ints) -> tuple[Ints, Ints]:
         """Overlay rows of each place given: (position in ``place``, row)."""
@@ -233,14 +241,17 @@ class SeenSource:
         """Distances (Mpc) from where detection is sure to where it has ended, rising."""
         width = self.source.detection.width
         reach = np.unique(self.reach_mpc[self.reach_mpc > 0])
-        if reach.size == 0 or (width == 0 and reach.size <= _MOST_EDGES):
+        if reach.size == 0:
             return reach
+        if width == 0:
+            return reach[np.linspace(0, reach.size - 1, min(reach.size, _MOST_EDGES)).astype(int)]
         step = min(max(width / 2, _LEAST_STEP_MAG), _GREATEST_STEP_MAG)
         # With a flat spectrum's K-correction a source dims down to half as fast with distance.
         margin = _END_WIDTHS * width * (2 if self.source.k_correction == "flat" else 1)
-        low, high = 5 * np.log10(reach[0]) - margin, 5 * np.log10(reach[-1]) + margin
-        count = int(np.ceil((high - low) / step)) + 1
-        return np.asarray(10 ** (np.linspace(low, high, max(count, 2)) / 5))
+        near, far = 5 * np.log10(self.scene.space.extent_mpc)
+        low = max(5 * np.log10(reach[0]) - margin, near)
+        high = max(min(5 * np.log10(reach[-1]) + margin, far), low)
+        return np.asarray(10 ** (np.linspace(low, high, int((high - low) / step) + 2) / 5))
 
     @cached_property
     def _held(self) -> NDArray[np.float32]:
@@ -263,11 +274,24 @@ class SeenSource:
 
 
 def tally_sources(
+    coverage: Coverage,
+    space: Space,
+    sources: Sequence[Source],
+    event_mjd: float,
+    dust: Dust | None,
+    coefficients: Mapping[str, float],
+) -> list[SourceRow]:
+    """Tally every source for every selection on one map version with distances."""
+    scenes = Scene.of_brackets(space, coverage, dust, coefficients)
+    return tally_scenes(coverage, scenes, sources, event_mjd)
+
+
+def tally_scenes(
     coverage: Coverage, scenes: Sequence[Scene], sources: Sequence[Source], event_mjd: float
 ) -> list[SourceRow]:
-    """Tally every source for every selection on one map version with distances.
+    """Tally every source for every selection, given the map's scenes.
 
-    ``scenes`` are those of the centre rule's, the inner and the outer patchwork.
+    ``scenes`` are as `Scene.of_brackets` makes them.
     """
     rows = []
     for source in sources:
