@@ -84,7 +84,7 @@ def exclusion_figure(curves: Sequence[ExclusionCurve]) -> Figure:
         _curve(axes, curve, color=colour, ls=line, lw=1.2)
         ends.append((curve.highest, short_label(str(curve.band), 12), colour))
     _curve(axes, shown[0], color=INK, lw=1.8)
-    ends.append((shown[0].highest, "all together", INK))
+    ends.append((shown[0].highest, "all bands", INK))
     axes.set_xlim(faint, bright)
     axes.set_ylim(0, 100)
     for level in (50, 90):
@@ -134,13 +134,45 @@ def fading_figure(plane: FadingPlane) -> Figure:
     shades = _shades(len(levels) + 1)
     axes.contourf(peak, fade, value, levels=[-1.0, *levels, 101.0], colors=shades)
     widths = [1.8 if level == 50 else 0.9 for level in levels]
-    lines = axes.contour(peak, fade, value, levels=levels, colors=INK, linewidths=widths)
-    axes.clabel(lines, fmt=lambda level: f"{level:g} %", fontsize=7, inline_spacing=3)
-    axes.set_xlim(peak.max(), peak.min())
+    axes.contour(peak, fade, value, levels=levels, colors=INK, linewidths=widths)
+    axes.set_xlim(*_decisive_peaks(peak, value))
     axes.set_ylim(fade.min(), fade.max())
+    _label_contours(axes, plane, levels)
     axes.set_xlabel("absolute magnitude at the event, brighter to the right")
     axes.set_ylabel("fade (mag per day)")
     return figure
+
+
+def _decisive_peaks(peak: NDArray[np.float64], value: NDArray[np.float64]) -> tuple[float, float]:
+    """Return the faint and bright end between which the plane, brightest first, changes."""
+    most = value.max()
+    some = np.flatnonzero(value.max(axis=0) > 0.01 * most)
+    short = np.flatnonzero(value.min(axis=0) < 0.985 * most)
+    bright = int(short[0]) - 1 if short.size else 0
+    return float(peak[some].max()), float(peak[max(bright, 0)])
+
+
+def _label_contours(axes: Axes, plane: FadingPlane, levels: Sequence[float]) -> None:
+    """Label each contour where it crosses a row: three rows by turns, so that labels keep apart."""
+    value = 100 * np.array(plane.probability)
+    last = len(plane.fade_per_day) - 1
+    for number, level in enumerate(levels):
+        wanted = last * (1 + number % 3) // 4
+        crossed = np.flatnonzero((value.min(axis=1) <= level) & (value.max(axis=1) >= level))
+        row = int(crossed[np.argmin(np.abs(crossed - wanted))])
+        order = np.argsort(value[row], kind="stable")
+        peak = float(np.interp(level, value[row][order], np.array(plane.peak)[order]))
+        axes.text(
+            peak,
+            plane.fade_per_day[row],
+            f"{level:g} %",
+            fontsize=6.5,
+            fontweight="bold" if level == 50 else "normal",
+            ha="center",
+            va="center",
+            bbox={"fc": "#ffffff", "ec": "none", "alpha": 0.85, "pad": 0.6},
+            clip_on=True,
+        )
 
 
 def _shades(number: int) -> list[tuple[float, float, float]]:
@@ -155,7 +187,7 @@ def histogram_figure(histograms: Sequence[DepthHistogram]) -> Figure:
     shown = histograms[:MOST_BANDS]
     rows = -(-len(shown) // 4)
     columns = -(-len(shown) // rows)
-    height = 0.55 + _PANEL_STEP * rows
+    height = 0.2 + _PANEL_STEP * (rows - 1) + _PANEL + 0.45
     figure = new_figure(height)
     low = min(h.edges[0] for h in shown)
     high = max(h.edges[-1] for h in shown)
@@ -172,7 +204,7 @@ def histogram_figure(histograms: Sequence[DepthHistogram]) -> Figure:
         axes.stairs(
             100 * np.array(histogram.probability), histogram.edges, fill=True, fc=ACCENT, alpha=0.75
         )
-        axes.set_xlim(low, high)
+        axes.set_xlim(low - 0.05, high + 0.05)
         axes.set_ylim(0, max(top, 1e-9))
         axes.xaxis.set_major_locator(MaxNLocator(4, integer=True))
         axes.tick_params(labelsize=6.5)

@@ -250,7 +250,7 @@ def _sources(results: Results) -> Table:
 def _without_row(without: float, columns: int, place: int) -> tuple[Cell, ...]:
     """Return the line of the probability that no distance is known for."""
     blank = [Cell("")] * (columns - 1)
-    blank[place - 1] = Cell(percent(without, 2), "of the map, never detectable" if without else "")
+    blank[place - 1] = Cell(percent(without, 2), "of the map")
     return (Cell(f"probability {_WITHOUT}"), *blank)
 
 
@@ -291,26 +291,27 @@ def _volumes(results: Results) -> Table:
 def _telescope_reach(results: Results) -> Table:
     found = _newest(results, by_telescope=True)
     scale = max((row.probability for row in found), default=0.0)
-    used = {t.name for t in results.telescopes if t.exposures}
+    used = [t.name for t in results.telescopes if t.exposures]
     rows = [
         (
+            _telescope(results, name),
             Cell(row.source),
-            _telescope(results, row.telescope or ""),
             _reach_cell(row),
             _detected(row, scale),
             Cell(percent(row.probability_beyond)),
             Cell(percent(row.probability_without_distance, 2)),
             _volume(row.volume_90_within_reach_mpc3, row.volume_90_within_reach_comoving_mpc3),
         )
+        for name in used
         for row in found
-        if row.telescope in used
+        if row.telescope == name
     ]
     return Table(
         "telescope-reach",
         "The same, telescope by telescope",
         columns_of(
-            "source",
             "telescope",
+            "source",
             "reach (Mpc)",
             "detectable",
             "covered, but beyond reach or missed",
@@ -351,9 +352,9 @@ def _absolute_limits(results: Results) -> Table:
             f"M at {far[2]} (mean + 1 sd)",
             text=2,
         ),
-        (*rows, _without_row(without, 7, 3)) if rows else (),
+        (*rows, _without_row(without, 7, 6)) if rows else (),
         note=(
-            "M = m − A − 5 log₁₀(d / 10 pc), with the median limit m − A as given and no "
+            "M = m − A − 5 log10(d / 10 pc), with the median limit m − A as given and no "
             f"K-correction ({_terms(results)}). What the map holds {_WITHOUT} has no part in the "
             "mean distance."
         ),
@@ -375,7 +376,7 @@ def _exclusion(results: Results) -> Table:
     def crossing(curve: ExclusionCurve, magnitude: float | None) -> Cell:
         if magnitude is None:
             return Cell("not reached", f"highest {percent(curve.highest)}")
-        return Cell(bright_magnitude(magnitude))
+        return Cell(bright_magnitude(magnitude, 2))
 
     rows = [
         (
@@ -411,10 +412,10 @@ def _fading(results: Results) -> Table:
     return Table(
         "fading",
         "Detectable probability of a fading source (%)",
-        columns_of("fade (mag/day)", *(f"M₀ = {number_text(peak, 1)}" for peak in peaks)),
+        columns_of("fade (mag/day)", *(f"M = {number_text(peak, 1)}" for peak in peaks)),
         rows,
         note=(
-            "M₀ is the absolute magnitude at the event, in every band. Every row and column of "
+            "M is the absolute magnitude at the event, in every band. Every row and column of "
             "the plane stands in tally.json."
         ),
     )

@@ -116,7 +116,8 @@ def _time_axis(axes: Axes, hours: Sequence[float]) -> tuple[float, float, bool]:
 def end_labels(axes: Axes, ends: Sequence[tuple[float, str, str]], top: float) -> None:
     """Write each line's name at its right end, moved apart where they would touch.
 
-    ``ends`` holds a probability, a name and a colour each; ``top`` is the axis' end in percent.
+    ``ends`` holds a probability, a name and a colour each; what is in our ink is the
+    whole, and bold. ``top`` is the end of the axis in percent.
     """
     kept = sorted(sorted(ends)[-MOST_LABELS:])
     least = 0.062 * top
@@ -139,7 +140,7 @@ def end_labels(axes: Axes, ends: Sequence[tuple[float, str, str]], top: float) -
             textcoords=("axes fraction", "data"),
             fontsize=7,
             va="center",
-            fontweight="bold" if colour == INK and name == "all together" else "normal",
+            fontweight="bold" if colour == INK else "normal",
             arrowprops={
                 "arrowstyle": "-",
                 "color": colour,

@@ -276,12 +276,14 @@ def depth_range(row: TallyRow) -> str:
     return f"{low}{NBSP}mag" if low == high else f"{low}–{high}{NBSP}mag"
 
 
-def bright_magnitude(magnitude: float) -> str:
-    """Return an absolute magnitude to a tenth, rounded to the bright side.
+def bright_magnitude(magnitude: float, decimals: int = 1) -> str:
+    """Return an absolute magnitude rounded to the bright side.
 
-    What is ruled out at the printed value is then ruled out indeed.
+    What is ruled out at the printed value is then ruled out indeed; up to the
+    thousandth of a magnitude that the crossing itself may be off.
     """
-    return number_text(math.floor(magnitude * 10 + 1e-6) / 10, 1)
+    scale = 10.0**decimals
+    return number_text(math.floor((magnitude + 1e-3) * scale) / scale, decimals)
 
 
 def reach_text(distance_mpc: float | None) -> str:
