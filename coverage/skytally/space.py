@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from skytally.cosmology import Cosmology
-from skytally.distance import cdf, has_distance, marginal_moments
+from skytally.distance import cdf, has_distance, marginal_moments, moments
 from skytally.skymap import Measure, SkyMap
 from skytally.spans import UNIT_SR, Ints
 from skytally.volume import CredibleVolume, credible_volume, shell_volume
@@ -84,6 +84,14 @@ class Space:
         """Mean and standard deviation of the distance over the sky, Mpc."""
         norm = np.where(self.known, 1.0, 0.0)
         return marginal_moments(self.probability, self.mu_mpc, self.sigma_mpc, norm)
+
+    @cached_property
+    def extent_mpc(self) -> tuple[float, float]:
+        """Distances between which all but a few millionths of the probability lie."""
+        mu, sigma = self.mu_mpc[self.known], self.sigma_mpc[self.known]
+        mean, _ = moments(mu, sigma)
+        # Near 0 the probability grows as r³ or faster: at a hundredth of the mean it is 5e-6.
+        return 0.01 * float(mean.min()), float(np.max(np.maximum(mu, 0.0) + _SURE_SIGMA * sigma))
 
     def within(self, cell: Ints, reach_mpc: Floats) -> Floats:
         """Probability that something in a cell lies within a reach; 0 without distance.
