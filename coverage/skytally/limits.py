@@ -249,21 +249,20 @@ class SeenSource:
         # With a flat spectrum's K-correction a source dims down to half as fast with distance.
         margin = _END_WIDTHS * width * (2 if self.source.k_correction == "flat" else 1)
         near, far = 5 * np.log10(self.scene.space.extent_mpc)
-        low = max(5 * np.log10(reach[0]) - margin, near)
+        low = min(max(5 * np.log10(reach[0]) - margin, near), far)
         high = max(min(5 * np.log10(reach[-1]) + margin, far), low)
         return np.asarray(10 ** (np.linspace(low, high, int((high - low) / step) + 2) / 5))
 
     @cached_property
-    def _held(self) -> NDArray[np.float32]:
+    def _held(self) -> Floats:
         """Probability of each place between a node and the one before, (places, nodes).
 
-        The same for every selection, so it is made once; single precision
-        bounds its memory and errs by less than a part in ten million.
+        The same for every selection, so it is made once.
         """
         overlay = self.scene.overlay
         # Many rows lie in few cells: distances are looked up once per cell.
         cells, rank = np.unique(overlay.cell, return_inverse=True)
-        held = np.empty((overlay.places, self._nodes.size), dtype=np.float32)
+        held = np.empty((overlay.places, self._nodes.size))
         below = np.zeros(cells.size)
         for number, node in enumerate(self._nodes):
             within = self.scene.space.within(cells, np.full(cells.size, node))
