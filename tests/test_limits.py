@@ -30,6 +30,8 @@ from deep_sky import (
 )
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from scipy.integrate import trapezoid
+from scipy.special import expit
 from skytally.cameras import CircleCamera
 from skytally.cosmology import Cosmology
 from skytally.covered import TallySettings
@@ -42,6 +44,8 @@ from skytally.tally import tally_maps
 
 PLANCK = Cosmology.named("Planck18")
 COEFFICIENTS = {"g": 3.3, "r": 2.3}
+# What the steps of the integral over a detection curve may cost in probability.
+ALLOWED = 1e-4
 SETTINGS = TallySettings(EVENT_MJD, 2, 30.0)
 FADING = Source("Ember", None, "fade", {"g": -16.6, "r": -16.2}, fade_per_day=0.9, rise_days=0.4)
 CURVE = Source(
@@ -466,3 +470,31 @@ def test_no_map_cell_is_seen_by_an_exposure_beside_it():
     alone = tallied([spans_of_cells(3, cell)], skymap, [constant(-16.0)], depth=20.0)[0]
     assert row.probability == pytest.approx(alone.probability, rel=1e-12)
     assert row.volume_mpc3 == pytest.approx(10 * alone.volume_mpc3, rel=1e-9)
+
+
+@pytest.mark.parametrize("k_correction", ["none", "flat"])
+@pytest.mark.parametrize("visits", [1, 2])
+@pytest.mark.parametrize("width", [0.005, 0.05, 0.2, 1.0, 4.0])
+@pytest.mark.parametrize(
+    ("mu", "sigma"), [(150.0, 2.0), (150.0, 8.0), (150.0, 40.0), (-50.0, 60.0)]
+)
+def test_gradual_detection_against_quadrature(mu, sigma, width, visits, k_correction):
+    """∫ p(r) S(r) dr of one place and two exposures by the trapezoid rule on 200,001 points."""
+    cell = squares(0, 1)
+    limits = np.array([20.0, 20.4])
+    source = constant(
+        -15.6, detection=Detection(0.1, width, 0.95), visits=visits, k_correction=k_correction
+    )
+    row = tallied(
+        [spans_of_cells(3, cell)] * 2, plain_map(cell, [mu], [sigma]), [source], depth=limits
+    )[0]
+    r = np.linspace(1e-3, max(mu, 0.0) + 9 * sigma, 200_001)
+    p = r**2 * np.exp(-0.5 * ((r - mu) / sigma) ** 2)
+    z = np.linspace(0, 0.3, 3001)
+    at = np.append(0.0, Planck18.luminosity_distance(z[1:]).to_value(u.Mpc))
+    k = -2.5 * np.log10(1 + np.interp(r, at, z)) if k_correction == "flat" else 0.0
+    x = -15.6 + 5 * np.log10(r) + 25 + k - limits[:, None] - 0.1
+    one, two = 0.95 * expit(-x / width)
+    seen = one + two - one * two if visits == 1 else one * two
+    expected = trapezoid(p * seen, r) / trapezoid(p, r)
+    assert row.probability == pytest.approx(expected, abs=ALLOWED)

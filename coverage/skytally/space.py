@@ -93,6 +93,12 @@ class Space:
         # Near 0 the probability grows as r³ or faster: at a hundredth of the mean it is 5e-6.
         return 0.01 * float(mean.min()), float(np.max(np.maximum(mu, 0.0) + _SURE_SIGMA * sigma))
 
+    @cached_property
+    def least_spread(self) -> float:
+        """Standard deviation of the distance over its mean, that of the narrowest hundredth."""
+        mean, sd = moments(self.mu_mpc[self.known], self.sigma_mpc[self.known])
+        return float(np.quantile(sd / mean, 0.01))
+
     def within(self, cell: Ints, reach_mpc: Floats) -> Floats:
         """Probability that something in a cell lies within a reach; 0 without distance.
 
