@@ -341,11 +341,11 @@ def _absolute_limits(results: Results) -> Table:
     ]
     return Table(
         "absolute-limits",
-        "Absolute magnitudes at the median limits, at the map’s distance",
+        f"Absolute magnitudes at the map’s distance, from the limits ({_terms(results)})",
         columns_of(
             "telescope",
             "band",
-            "median limit (mag)",
+            "median m − A (mag)",
             "extinction A (mag)",
             f"M at {far[0]} (mean − 1 sd)",
             f"M at {far[1]} (mean)",
@@ -354,8 +354,8 @@ def _absolute_limits(results: Results) -> Table:
         ),
         (*rows, _without_row(without, 7, 6)) if rows else (),
         note=(
-            "M = m − A − 5 log10(d / 10 pc), with the median limit m − A as given and no "
-            f"K-correction ({_terms(results)}). What the map holds {_WITHOUT} has no part in the "
+            "M = m − A − 5 log10(d / 10 pc), with the median limit m − A of the exposures and no "
+            f"K-correction. What the map holds {_WITHOUT} has no part in the "
             "mean distance."
         ),
     )
