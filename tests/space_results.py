@@ -49,6 +49,7 @@ def with_space(
     sources: Sequence[SourceInfo] = SOURCES,
     findings: Sequence[Finding] = (FINDING,),
     middle: float = -14.747,
+    stretch: float = 1.0,
 ) -> Results:
     """Return the results as they would be if every map carried distances.
 
@@ -60,6 +61,9 @@ def with_space(
         What was asked about, and what the check noticed.
     middle : float
         Absolute magnitude at which every exclusion curve comes to half its height.
+    stretch : float
+        How much higher than the covered probability the exclusion curves come, so
+        that few exposures can rule something out.
     """
     versions = [m.version for m in results.maps]
     bands = sorted({row.band for row in results.rows if row.band is not None})
@@ -94,7 +98,7 @@ def with_space(
             for row in results.rows
         ),
         exclusions=tuple(
-            _curve(v, band, results.row(map=v, band=band).probability, middle)
+            _curve(v, band, stretch * results.row(map=v, band=band).probability, middle)
             for v in versions
             for band in (None, *bands)
         ),

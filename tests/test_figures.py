@@ -297,10 +297,13 @@ def test_each_contour_is_labelled_where_it_runs(deep: Results) -> None:
         assert value == pytest.approx(level, abs=0.04 * 100 * highest)
 
 
-def test_captions_say_what_is_ruled_out_and_on_what_terms(deep: Results) -> None:
+@pytest.mark.parametrize("stretch", [1.0, 2.85])
+def test_captions_say_what_is_ruled_out_and_on_what_terms(stretch: float) -> None:
+    deep = with_space(sample_results(exposures=60), middle=-16.0, stretch=stretch)
     drawings = draw_figures(deep)
     every = newest(deep.exclusions, deep)[0]
     caption = drawings["exclusion"].caption
+    assert (every.magnitude_50 is None) == (stretch == 1.0)
     if every.magnitude_50 is None:
         assert f"more than {100 * every.highest:.1f}\u00a0% of all probability" in caption
     else:

@@ -228,7 +228,7 @@ def test_text_colours_stand_out_from_white(sheet: str) -> None:
 
 @pytest.fixture(scope="module")
 def deep() -> Results:
-    return with_space(sample_results(exposures=60, set_aside=4), middle=-16.0)
+    return with_space(sample_results(exposures=60, set_aside=4), middle=-16.0, stretch=2.85)
 
 
 @pytest.fixture(scope="module")
@@ -267,6 +267,9 @@ def test_what_is_not_reached_says_how_high_it_comes(deep: Results, deep_page: Pa
     curves = [c for c in deep.exclusions if c.map == deep.newest.version]
     rows = deep_page.cells["exclusion"][1:-1]
     assert [row[0] for row in rows] == ["all bands", *(str(c.band) for c in curves[1:])]
+    # What is tested holds both kinds.
+    assert {c.magnitude_50 is None for c in curves} == {True, False}
+    assert curves[0].magnitude_90 is not None
     for row, curve in zip(rows, curves):
         for cell, magnitude in zip(row[1:3], (curve.magnitude_50, curve.magnitude_90)):
             if magnitude is None:
