@@ -149,7 +149,9 @@ def _decisive_peaks(peak: NDArray[np.float64], value: NDArray[np.float64]) -> tu
     some = np.flatnonzero(value.max(axis=0) > 0.01 * most)
     short = np.flatnonzero(value.min(axis=0) < 0.985 * most)
     bright = int(short[0]) - 1 if short.size else 0
-    return float(peak[some].max()), float(peak[max(bright, 0)])
+    ends = float(peak[some].max()), float(peak[max(bright, 0)])
+    # Where all of it happens at one peak there is nothing to leave out.
+    return ends if ends[0] > ends[1] else (float(peak.max()), float(peak.min()))
 
 
 def _label_contours(axes: Axes, plane: FadingPlane, levels: Sequence[float]) -> None:

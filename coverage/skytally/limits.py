@@ -51,7 +51,8 @@ class SourceRow:
     probability is the sum of what is detectable, what lies beyond reach or is
     missed, and what is without distance. Distances are luminosity distances;
     reaches are over places weighted by their probability, 0 where an exposure
-    states no limit.
+    states no limit; where detection is gradual, reaches and the volumes within
+    them are those of half its plateau.
     """
 
     map: str
@@ -248,7 +249,8 @@ class SeenSource:
         if reach.size == 0:
             return reach
         if width == 0:
-            return reach[np.linspace(0, reach.size - 1, min(reach.size, _MOST_EDGES)).astype(int)]
+            kept = np.linspace(0, reach.size - 1, min(reach.size, _MOST_EDGES))
+            return np.asarray(reach[kept.astype(int)])
         spread_mag = 5 / np.log(10) * self.scene.space.least_spread
         step = max(min(_STEP_WIDTHS * width, _STEP_SPREADS * spread_mag), _LEAST_STEP_MAG)
         # With a flat spectrum's K-correction a source dims down to half as fast with distance.
