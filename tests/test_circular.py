@@ -9,7 +9,9 @@ import pytest
 from skytally.circular import render_circular
 from skytally.results import LogCount, Results
 from skytally.tally import TallyRow
+from skytally.wording import source_probability
 from small_results import renamed, small_results, small_row
+from space_results import SOURCES, with_space
 
 # Nouns after "1 " that end in s, a percentage that rounds to nothing, and words of Python.
 BAD = re.compile(r"\b1 [a-z]+s\b|(?<![\d.])0\.0+ %|\bNone\b|\bnan\b|\binf\b|[ \t]+$", re.M)
@@ -105,6 +107,10 @@ CASES = {
     "small probability": small_probability,
     "odd names": odd_names,
     "one of each": one_of_each,
+    "with distances": lambda: with_space(small_results()),
+    "distances, off the map": lambda: with_space(off_the_map()),
+    "distances, no exposure": lambda: with_space(nothing()),
+    "distances, no source": lambda: with_space(small_results(), sources=()),
 }
 
 
@@ -170,3 +176,66 @@ def test_one_version_is_not_called_the_newest() -> None:
     assert "The only map version" in text
     assert "earlier" not in text
     assert "one telescope has" in " ".join(text.split())
+
+
+def test_each_source_has_its_sentence_with_what_was_lost() -> None:
+    results = with_space(small_results())
+    text = " ".join(render_circular(results).split())
+    row = next(
+        r
+        for r in results.source_rows
+        if (r.map, r.source, r.telescope, r.band, r.night) == ("2 update", "Steady", *[None] * 3)
+    )
+    shown = source_probability(row).replace("\N{NO-BREAK SPACE}", " ").replace("–", "-")
+    assert (
+        'A source "Steady" with absolute AB magnitude -16 in every band, constant from the event '
+        "on (no K-correction; detection certain down to the limit and impossible beyond; seen "
+        f"means in one exposure), would have been detected over {shown} of the probability of "
+        'map version "2 update"; of the rest, 3.0 % was covered but lies beyond reach or was '
+        "missed and 0.3 % was covered where the map gives no distance."
+    ) in text
+    # 30 % of a third, less one hundredth of it: the parts of what is covered.
+    assert row.probability + 0.03 + 1 / 300 == pytest.approx(1 / 3)
+    assert text.count("would have been detected") == len(SOURCES)
+    assert "no distance" not in text.replace("where the map gives no distance", "")
+
+
+def test_limits_stand_at_the_distance_of_the_map() -> None:
+    text = " ".join(render_circular(with_space(small_results())).split())
+    # 21.25 - 5 log10(142.3e5) = -14.516, and 0.54 and 0.43 mag to either side.
+    assert "- Heron, g: -14.52 mag (-13.98 and -14.95 mag)" in text
+    head = text[text.index("Median limits as absolute") :][:260]
+    assert "142 +/- 31 Mpc" in head
+    assert "AB, 5 sigma, not corrected for Galactic extinction" in head
+
+
+def test_a_map_without_distance_says_only_that() -> None:
+    text = render_circular(small_results())
+    assert text.count("The map carries no distance.") == 1
+    assert "absolute" not in text
+    assert "The map carries no distance." not in render_circular(with_space(small_results()))
+
+
+def test_limits_of_unlike_correction_say_each_what_they_are() -> None:
+    base = small_results()
+    rows = tuple(
+        replace(r, extinction="corrected", extinction_median=0.31)
+        if r.band == "g" and r.depth_median is not None
+        else r
+        for r in base.rows
+    )
+    text = " ".join(render_circular(replace(base, rows=rows)).split())
+    assert (
+        "Limiting magnitudes (AB, 5 sigma, corrected for Galactic extinction, median A = 0.31"
+        in text
+    )
+    assert "Exposures by Heron (limits not corrected for Galactic extinction):" in text
+    more = (
+        *rows,
+        small_row(map="2 update", telescope="Plover", band="i"),
+        small_row(map="2 update", band="i"),
+    )
+    text = " ".join(render_circular(replace(base, rows=more)).split())
+    assert "(AB, 5 sigma, partly corrected for Galactic extinction, median A = 0.31 mag):" in text
+    assert "(3 exposures), not corrected for Galactic extinction" in text
+    assert "(2 exposures), corrected for Galactic extinction, median A = 0.31 mag" in text

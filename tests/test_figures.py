@@ -16,6 +16,13 @@ from matplotlib import image
 from matplotlib.colors import to_rgb
 from skytally.figure_style import ACCENT, GREY, INK, draw, hatch_mask, new_figure, style_of
 from skytally.figures import draw_figures
+from skytally.limit_plots import (
+    distance_figure,
+    exclusion_figure,
+    fading_figure,
+    fading_levels,
+    histogram_figure,
+)
 from skytally.projection import (
     Window,
     dec_label,
@@ -31,6 +38,7 @@ from skytally.skymap import SkyMap
 from skytally.spans import LINE_ORDER, Spans, cell_to_span
 
 from tests.sample_results import NAMES, sample_map, sample_results
+from tests.space_results import with_space
 
 FULL_SKY_DEG2 = 41252.96
 
@@ -230,9 +238,87 @@ def test_figures_are_there_when_they_have_something_to_show(results: Results) ->
     assert "versions" not in draw_figures(one)
 
 
-def test_drawings_are_safe_and_complete_svg(results: Results) -> None:
+@pytest.fixture(scope="module")
+def deep(results: Results) -> Results:
+    return with_space(results, middle=-16.0)
+
+
+def test_a_map_with_distances_has_four_figures_more(results: Results, deep: Results) -> None:
+    more = list(draw_figures(deep))[len(draw_figures(results)) :]
+    assert more == ["depth-histogram", "distance", "exclusion", "fading"]
+    bare = with_space(sample_results(covered=False, depth=False, exposures=20))
+    assert list(draw_figures(bare)) == ["whole-sky", "zoom", "versions"]
+
+
+def newest(parts: tuple[object, ...], deep: Results) -> list[object]:
+    return [part for part in parts if part.map == deep.newest.version]
+
+
+def test_the_curves_drawn_are_the_numbers(deep: Results) -> None:
+    profile = newest(deep.distance_profiles, deep)[0]
+    lines = distance_figure(profile).axes[0].get_lines()
+    wanted = [profile.whole, profile.covered, *profile.within_reach]
+    assert len(lines) == len(wanted)
+    for line, values in zip(lines, wanted):
+        np.testing.assert_allclose(line.get_xdata(), profile.distance_mpc)
+        np.testing.assert_allclose(line.get_ydata(), 100 * np.array(values))
+    curves = newest(deep.exclusions, deep)
+    axes = exclusion_figure(curves).axes[0]
+    drawn = [line for line in axes.get_lines() if len(line.get_xdata()) > 2]
+    assert len(drawn) == len(curves)
+    found = sorted(tuple(line.get_ydata()) for line in drawn)
+    expected = sorted(tuple(100 * np.array(curve.probability)) for curve in curves)
+    np.testing.assert_allclose(found, expected)
+    faint, bright = axes.get_xlim()
+    assert faint > -16.0 > bright, "brighter is to the right, and the rise is in sight"
+    levels = {line.get_ydata()[0] for line in axes.get_lines() if len(line.get_xdata()) == 2}
+    assert {50, 90} <= levels
+
+
+def test_the_histograms_hold_what_has_a_limit(deep: Results) -> None:
+    histograms = newest(deep.depth_histograms, deep)
+    for axes, histogram in zip(histogram_figure(histograms).axes, histograms, strict=True):
+        values, edges, _ = axes.patches[0].get_data()
+        np.testing.assert_allclose(values, 100 * np.array(histogram.probability))
+        np.testing.assert_allclose(edges, histogram.edges)
+        assert f"band {histogram.band}" == axes.get_title(loc="left")
+
+
+def test_each_contour_is_labelled_where_it_runs(deep: Results) -> None:
+    plane = newest(deep.fading_planes, deep)[0]
+    levels = fading_levels(plane)
+    texts = fading_figure(plane).axes[0].texts
+    assert [text.get_text() for text in texts] == [f"{level:g} %" for level in levels]
+    highest = deep.row().probability
+    for text, level in zip(texts, levels):
+        peak, fade = text.get_position()
+        # The plane was made of this formula, and is interpolated over half a magnitude.
+        value = 100 * highest / (1 + np.exp((peak + fade + 16.0) / 0.4))
+        assert value == pytest.approx(level, abs=0.04 * 100 * highest)
+
+
+@pytest.mark.parametrize("stretch", [1.0, 2.85])
+def test_captions_say_what_is_ruled_out_and_on_what_terms(stretch: float) -> None:
+    deep = with_space(sample_results(exposures=60), middle=-16.0, stretch=stretch)
+    drawings = draw_figures(deep)
+    every = newest(deep.exclusions, deep)[0]
+    caption = drawings["exclusion"].caption
+    assert (every.magnitude_50 is None) == (stretch == 1.0)
+    if every.magnitude_50 is None:
+        assert f"more than {100 * every.highest:.1f}\u00a0% of all probability" in caption
+    else:
+        assert f"−{abs(np.floor(every.magnitude_50 * 10) / 10):.1f} in every band" in caption
+    for name in ("exclusion", "fading", "depth-histogram"):
+        assert "not corrected for Galactic extinction" in drawings[name].caption
+    for name in ("exclusion", "fading"):
+        assert "without K-correction" in drawings[name].caption
+    assert f"{100 * deep.row().probability:.1f}\u00a0%" in drawings["distance"].caption
+
+
+@pytest.mark.parametrize("space", [False, True])
+def test_drawings_are_safe_and_complete_svg(results: Results, deep: Results, space: bool) -> None:
     ids: list[str] = []
-    for name, drawing in draw_figures(results).items():
+    for name, drawing in draw_figures(deep if space else results).items():
         root = ElementTree.fromstring(drawing.svg)
         assert root.get("role") == "img"
         assert root.get("aria-label") == drawing.alt != ""

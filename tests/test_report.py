@@ -8,10 +8,12 @@ import importlib.abc
 import io
 import re
 import sys
+from dataclasses import replace
 from html.parser import HTMLParser
 from importlib.resources import files
 from itertools import pairwise
 
+import numpy as np
 import pypdf
 import pytest
 from skytally.errors import OutputError
@@ -20,6 +22,7 @@ from skytally.results import Results
 from skytally.wording import headline, row_probability
 
 from tests.sample_results import NAMES, sample_map, sample_results
+from tests.space_results import FINDING, SOURCES, with_space
 
 EVIL = '<script>alert(1)</script> & "$x_1$" --> {{ 7 * 7 }}'
 ODD = {
@@ -29,6 +32,11 @@ ODD = {
     "one exposure": {"names": ("Heron",), "exposures": 1, "set_aside": 0},
     "no outlines": {"outlines": False, "exposures": 30},
     "with distances": {"distance": True, "exposures": 30},
+    "deep": {"exposures": 30},
+    "deep, nothing covered": {"covered": False, "exposures": 30},
+    "deep, nothing used": {"exposures": 0},
+    "deep, no limits": {"depth": False, "exposures": 30},
+    "deep, hostile names": {"names": (EVIL, "bell\x07", "名前"), "event": EVIL, "exposures": 20},
     "forty telescopes": {"names": tuple(f"Heron {n}" for n in range(40)), "exposures": 80},
     "a position": {
         "exposures": 20,
@@ -218,6 +226,99 @@ def test_text_colours_stand_out_from_white(sheet: str) -> None:
         assert 1.05 / (luminance(value) + 0.05) >= 4.5
 
 
+@pytest.fixture(scope="module")
+def deep() -> Results:
+    return with_space(sample_results(exposures=60, set_aside=4), middle=-16.0, stretch=2.85)
+
+
+@pytest.fixture(scope="module")
+def deep_page(deep: Results) -> Page:
+    return Page(render_html(deep))
+
+
+def percents(cell: str) -> float:
+    return float(re.search(r"([\d.]+) %", plain(cell))[1])
+
+
+def test_what_would_have_been_seen_and_what_was_lost_add_up(deep: Results, deep_page: Page) -> None:
+    body = {row[0]: row for row in deep_page.cells["sources"][1:]}
+    assert set(body) == {"Steady", "Ember", "probability without a distance"}
+    for name in ("Steady", "Ember"):
+        assert sum(percents(cell) for cell in body[name][2:]) == pytest.approx(100, abs=0.25)
+        assert "302" in body[name][1]
+    for table in ("sources", "volumes", "absolute-limits", "exclusion"):
+        last = deep_page.cells[table][-1]
+        assert last[0] == "probability without a distance"
+        assert any("0.14" in cell for cell in last[1:])
+    assert plain(deep_page.cells["distances"][1][-1]) == "0.14 %"
+
+
+def test_every_assumption_stands_with_its_source(deep_page: Page) -> None:
+    for source in SOURCES:
+        for part in source.text.removeprefix(f"{source.name}: ").rstrip(".").split("; "):
+            assert part.replace("-1", "−1").replace("-2", "−2") in deep_page.words
+    assert "cosmology Planck18" in deep_page.words
+    assert "without K-correction" in deep_page.words
+    assert "M = m − A − 5 log10(d / 10 pc)" in deep_page.words
+    assert deep_page.words.count("A non-detection constrains a source only as far as") == 2
+
+
+def test_what_is_not_reached_says_how_high_it_comes(deep: Results, deep_page: Page) -> None:
+    curves = [c for c in deep.exclusions if c.map == deep.newest.version]
+    rows = deep_page.cells["exclusion"][1:-1]
+    assert [row[0] for row in rows] == ["all bands", *(str(c.band) for c in curves[1:])]
+    # What is tested holds both kinds.
+    assert {c.magnitude_50 is None for c in curves} == {True, False}
+    assert curves[0].magnitude_90 is not None
+    for row, curve in zip(rows, curves):
+        for cell, magnitude in zip(row[1:3], (curve.magnitude_50, curve.magnitude_90)):
+            if magnitude is None:
+                assert plain(cell).startswith("not reached")
+                assert f"{100 * curve.highest:.1f} %" in plain(cell)
+            else:
+                assert magnitude - 0.01 <= float(cell.replace("−", "-")) <= magnitude + 0.001
+
+
+def test_absolute_limits_are_those_of_the_formula(deep: Results, deep_page: Page) -> None:
+    for row in deep_page.cells["absolute-limits"][1:-1]:
+        depth, extinction, *limits = (cell.replace("−", "-") for cell in row[2:])
+        assert extinction == "not corrected"
+        for limit, distance in zip(limits, (142.3 - 31.2, 142.3, 142.3 + 31.2)):
+            modulus = 5 * np.log10(distance) + 25
+            assert float(limit) == pytest.approx(float(depth) - modulus, abs=0.011)
+
+
+def test_findings_say_what_was_seen_done_and_is_to_do(deep_page: Page) -> None:
+    row = deep_page.cells["findings"][1]
+    assert row[0] == FINDING.severity
+    assert row[1] == f"{FINDING.subject}rows 3, 4"
+    assert row[2:] == [FINDING.text, FINDING.done, FINDING.remedy]
+
+
+def test_a_map_without_distance_says_only_that(page: Page) -> None:
+    assert page.words.count("The map carries no distance.") == 1
+    assert "distance" not in page.cells
+    assert not {"sources", "volumes", "exclusion", "fading"} & set(page.cells)
+    for word in ("Mpc", "comoving", "Planck18", "findings"):
+        assert word not in page.words
+
+
+def test_corrected_limits_say_by_how_much() -> None:
+    base = sample_results(exposures=30)
+    rows = tuple(
+        replace(row, extinction="corrected", extinction_median=0.2 + 0.1 * (row.band == "g"))
+        if row.depth_median is not None
+        else row
+        for row in base.rows
+    )
+    page = Page(render_html(with_space(replace(base, rows=rows))))
+    assert "corrected for Galactic extinction, median A = 0.20–0.30 mag" in page.words
+    assert page.cells["depth"][0][-1] == "extinction A"
+    assert {plain(row[-1]) for row in page.cells["depth"][1:]} <= {"0.20 mag", "0.30 mag", "—"}
+    marks = page.words.index("One mark per exposure")
+    assert "not corrected for Galactic extinction" in page.words[marks:][:120]
+
+
 def luminance(colour: str) -> float:
     """Relative luminance of WCAG 2.1."""
     parts = [int(colour[place : place + 2], 16) / 255 for place in (1, 3, 5)]
@@ -228,6 +329,9 @@ def luminance(colour: str) -> float:
 @pytest.mark.parametrize("kind", ODD)
 def test_odd_campaigns_make_a_sensible_page(kind: str) -> None:
     results = sample_results(**ODD[kind])
+    if kind.startswith("deep"):
+        hostile = [replace(source, name=f"{source.name} {EVIL}") for source in SOURCES]
+        results = with_space(results, sources=hostile if "hostile" in kind else SOURCES)
     text = render_html(results)
     page = Page(text)
     assert plain(headline(results)) in page.words
@@ -321,13 +425,13 @@ def test_the_paper_form_carries_its_fonts(pdf: pypdf.PdfReader) -> None:
 
 
 def test_no_character_of_ours_lacks_a_glyph(
-    results: Results, caplog: pytest.LogCaptureFixture
+    deep: Results, caplog: pytest.LogCaptureFixture
 ) -> None:
     with caplog.at_level("WARNING"):
-        data = render_pdf(results)
+        data = render_pdf(deep)
     assert [r.getMessage() for r in caplog.records if r.name.startswith("weasyprint")] == []
     text = "".join(p.extract_text() for p in pypdf.PdfReader(io.BytesIO(data)).pages)
-    assert {"²", "σ", "–", "“", "≥"} <= set(text)
+    assert {"²", "³", "σ", "–", "“", "≥", "Ω"} <= set(text)
     assert "\ufffd" not in text
 
 

@@ -15,6 +15,7 @@ from skytally.errors import UsageError
 from skytally.serialise import select_map, to_dict, to_json, to_table
 from skytally.tally import TallyRow
 from small_results import VERSIONS, small_results, small_row
+from space_results import with_space
 
 # What DESIGN section 6 promises to readers of the files.
 TOP = {"format", "format_version", "software", "inputs", "event", "maps", "rows", "findings"}
@@ -63,7 +64,8 @@ def test_every_number_survives_the_text_exactly() -> None:
     found = strict(to_json(results))
     assert len(found["rows"]) == len(results.rows)
     for row, wanted in zip(found["rows"], results.rows):
-        assert row == {f.name: getattr(wanted, f.name) for f in fields(TallyRow)}
+        plain = {f.name: getattr(wanted, f.name) for f in fields(TallyRow)}
+        assert row == {**plain, "sources": []}
     for key in ("timelines", "as_pointed", "exposures", "set_aside", "telescopes", "maps"):
         for item, wanted in zip(found[key], getattr(results, key), strict=True):
             for name, value in item.items():
@@ -126,7 +128,70 @@ def test_the_table_comes_back_from_its_file_with_units_and_the_same_numbers(tmp_
     assert table["depth_over_90"].unit == u.mag
     assert table["volume_90_covered_mpc3"].unit == u.Mpc**3
     assert table["volume_90_covered_mpc3"].dtype == np.float64
+    assert table["volume_90_covered_comoving_mpc3"].unit == u.Mpc**3
+    assert table["extinction_median"].unit == u.mag
+    assert set(table["extinction"]) == {"not corrected"}
+    assert table.meta["cosmology"] == "Planck18"
     assert table["exposures"].dtype == np.int64
     assert table.meta["event"] == "Lantern 7"
     assert (table.meta["magnitude_system"], table.meta["significance"]) == ("AB", 5.0)
     assert set(table["map"]) == set(VERSIONS)
+
+
+def test_every_row_holds_its_own_numbers_of_every_source() -> None:
+    results = with_space(small_results())
+    found = strict(to_json(results))
+    assert [source["name"] for source in found["sources"]] == ["Steady", "Ember"]
+    listed = 0
+    for row in found["rows"]:
+        assert [s["source"] for s in row["sources"]] == ["Steady", "Ember"]
+        for numbers in row["sources"]:
+            listed += 1
+            wanted = next(
+                r
+                for r in results.source_rows
+                if r.source == numbers["source"]
+                and (r.map, r.telescope, r.band, r.night)
+                == (row["map"], row["telescope"], row["band"], row["night"])
+            )
+            assert not numbers.keys() & {"map", "telescope", "band", "night"}
+            for name, value in numbers.items():
+                assert value == getattr(wanted, name)
+    assert listed == len(results.source_rows)
+
+
+def test_what_is_ruled_out_and_what_was_found_are_written() -> None:
+    results = with_space(small_results())
+    found = strict(to_json(results))
+    assert found["settings"]["cosmology"] == "Planck18"
+    assert found["maps"][1]["volume_90_comoving_mpc3"] == 7.9e5
+    for key, name in (
+        ("exclusion", "exclusions"),
+        ("fading", "fading_planes"),
+        ("absolute_limits", "absolute_limits"),
+        ("distance_profiles", "distance_profiles"),
+        ("depth_histograms", "depth_histograms"),
+        ("findings", "findings"),
+    ):
+        wanted = getattr(results, name)
+        assert wanted
+        for item, made in zip(found[key], wanted, strict=True):
+            assert set(item) == {f.name for f in fields(made)}
+    curve = found["exclusion"][0]
+    assert (curve["band"], curve["magnitude_90"]) == (None, None)
+    assert curve["magnitude_50"] == results.exclusions[0].magnitude_50
+    assert curve["probability"] == list(results.exclusions[0].probability)
+    assert found["fading"][0]["probability"][1][0] == results.fading_planes[0].probability[1][0]
+    assert found["findings"][0]["remedy"].startswith("Ask the issuer")
+    assert strict(to_json(small_results()))["exclusion"] == []
+
+
+def test_one_version_takes_its_own_third_dimension_along() -> None:
+    whole = with_space(small_results())
+    chosen = select_map(whole, "1 first")
+    for name in ("source_rows", "exclusions", "fading_planes", "absolute_limits"):
+        kept = getattr(chosen, name)
+        assert {item.map for item in kept} == {"1 first"}
+        assert len(kept) == sum(item.map == "1 first" for item in getattr(whole, name))
+    assert {p.map for p in chosen.distance_profiles} == {"1 first"}
+    assert {h.map for h in chosen.depth_histograms} == {"1 first"}

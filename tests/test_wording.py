@@ -11,19 +11,27 @@ from hypothesis import strategies as st
 from skytally.wording import (
     NBSP,
     area_text,
+    bright_magnitude,
     count,
     decimals_for,
     distance_text,
+    extinction_text,
     headline,
     hours_text,
     join_words,
+    limit_terms,
     number_text,
     percent,
     probability_text,
+    reach_text,
     since_event,
+    source_words,
     to_ascii,
     utc_text,
+    volume_text,
 )
+from small_results import small_results, small_row
+from space_results import SOURCES, with_space
 
 from tests.sample_results import sample_results
 
@@ -145,3 +153,69 @@ def test_the_headline_is_plain_about_nothing() -> None:
     empty = sample_results(exposures=0)
     assert "every row of the logs was set aside" in headline(empty)
     assert "was given" in headline(replace(empty, logs=()))
+
+
+@given(st.floats(-30, 5), st.integers(0, 3))
+def test_a_magnitude_ruled_out_is_never_printed_too_faint(magnitude: float, decimals: int) -> None:
+    shown = float(bright_magnitude(magnitude, decimals).replace("−", "-"))
+    # The crossing itself is found to a thousandth.
+    assert magnitude - 10.0**-decimals - 1e-9 <= shown <= magnitude + 1.001e-3
+
+
+def test_distances_and_volumes_keep_three_digits() -> None:
+    assert [reach_text(d) for d in (448.7, 96.18, 9.618, 0.9618)] == ["449", "96", "9.6", "0.96"]
+    assert reach_text(None) == reach_text(0.0) == "—"
+    shown = [volume_text(v) for v in (818042.6, 31235.4, 186.23, 7.7, 0.01234, 0.0)]
+    assert shown == ["818,000", "31,200", "186", "7.70", "0.0123", "0"]
+    assert volume_text(2.297703e9) == "2,300,000,000"
+    assert volume_text(None) == "—"
+
+
+def test_the_state_of_extinction_is_that_of_the_rows() -> None:
+    raw = small_row(extinction="not corrected")
+    one = small_row(extinction="corrected", extinction_median=0.118)
+    two = small_row(extinction="corrected", extinction_median=0.31)
+    part = small_row(extinction="partly corrected", extinction_median=0.2)
+    blank = small_row(extinction="corrected", depth_median=None)
+    assert plain(extinction_text([raw])) == "not corrected for Galactic extinction"
+    assert plain(extinction_text([one])) == (
+        "corrected for Galactic extinction, median A = 0.12 mag"
+    )
+    assert plain(extinction_text([one, two])).endswith("median A = 0.12–0.31 mag")
+    for mixed in ([raw, one], [part], [part, raw]):
+        assert extinction_text(mixed).startswith("partly corrected for Galactic extinction")
+    assert extinction_text([blank, raw]) == extinction_text([raw])
+    assert extinction_text([blank]) == ""
+    settings = small_results().settings
+    assert limit_terms(settings, [blank]) == limit_terms(settings)
+    assert plain(limit_terms(settings, [one])) == f"AB, 5 σ, {plain(extinction_text([one]))}"
+
+
+def test_a_source_is_split_into_its_brightness_and_the_search() -> None:
+    brightness, search = source_words(SOURCES[1])
+    assert brightness == (
+        "peak absolute AB magnitude −17 in every band, fading by 0.5 mag/day from the event on"
+    )
+    assert search.startswith("flat-spectrum K-correction −2.5 log10(1+z); detection certain")
+    assert search.endswith("seen means in one exposure")
+    assert source_words(replace(SOURCES[0], text="as bright as can be")) == (
+        "as bright as can be",
+        "",
+    )
+
+
+def test_the_headline_rules_out_only_what_is_reached() -> None:
+    base = small_results()
+    # A third of the probability is covered: half of it all is out of reach.
+    assert "ruled out" not in headline(with_space(base))
+    rows = tuple(replace(row, probability=0.8) for row in base.rows)
+    text = headline(with_space(replace(base, rows=rows)))
+    # Half of everything at middle + 0.4 ln(0.8/0.5 − 1) = −14.951; to the bright side −15.0.
+    assert text.endswith(
+        "; a constant source of absolute magnitude −15.0 in r, or brighter, is ruled out over "
+        "half of all probability."
+    )
+    assert "ruled out" not in headline(base)
+    every = with_space(replace(base, rows=rows))
+    every = replace(every, exclusions=tuple(c for c in every.exclusions if c.band is None))
+    assert "−15.0 in every band, or brighter" in headline(every)

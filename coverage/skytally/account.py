@@ -3,13 +3,32 @@
 from __future__ import annotations
 
 from collections import Counter
+from collections.abc import Sequence
+from typing import TypedDict
 
 import numpy as np
+from numpy.typing import NDArray
 
 from skytally import __version__
+from skytally.audit import extinction_findings, map_findings
 from skytally.campaign import LoadedCampaign, Site, Telescope
+from skytally.cosmology import Cosmology
 from skytally.covered import Coverage, TallySettings
+from skytally.exclusion import (
+    AbsoluteLimit,
+    DepthHistogram,
+    DistanceProfile,
+    ExclusionCurve,
+    FadingPlane,
+    absolute_limits,
+    depth_histograms,
+    distance_profile,
+    exclusion_curves,
+    fading_plane,
+)
+from skytally.field_extinction import bands_without_coefficient, field_extinction
 from skytally.footprints import Footprints, Progress, lay_footprints
+from skytally.limits import Scene, SeenSource, SourceRow, tally_scenes
 from skytally.refinement import refine_footprints
 from skytally.results import (
     Event,
@@ -21,14 +40,29 @@ from skytally.results import (
     SetAsideInfo,
     Settings,
     SkyData,
+    SourceInfo,
     TelescopeInfo,
 )
 from skytally.skymap import SkyMap
+from skytally.space import Space
 from skytally.spans import DEG2_PER_SR, Spans
-from skytally.tally import maps_in_force, tally_as_pointed, tally_maps
+from skytally.tally import TallyRow, maps_in_force, tally_as_pointed, tally_maps
 from skytally.times import hours_since, mjd_to_iso
 
 __all__ = ["account"]
+
+Floats = NDArray[np.float64]
+
+
+class _Depths(TypedDict):
+    """The fields of `Results` that only maps with distances fill."""
+
+    source_rows: tuple[SourceRow, ...]
+    exclusions: tuple[ExclusionCurve, ...]
+    fading_planes: tuple[FadingPlane, ...]
+    absolute_limits: tuple[AbsoluteLimit, ...]
+    distance_profiles: tuple[DistanceProfile, ...]
+    depth_histograms: tuple[DepthHistogram, ...]
 
 
 def account(campaign: LoadedCampaign, progress: Progress | None = None) -> Results:
@@ -48,15 +82,20 @@ def account(campaign: LoadedCampaign, progress: Progress | None = None) -> Resul
         return lambda stage, done: progress(stage, low + (high - low) * done)
 
     settings = campaign.settings
-    footprints = lay_footprints(campaign, part(0.0, 0.5))
-    footprints = refine_footprints(footprints, campaign.maps, settings.bracket, part(0.5, 0.7))
-    coverage = Coverage.build(footprints)
+    footprints = lay_footprints(campaign, part(0.0, 0.4))
+    footprints = refine_footprints(footprints, campaign.maps, settings.bracket, part(0.4, 0.6))
+    dust = campaign.dust, campaign.extinction_coefficients
+    extinction = field_extinction(footprints, *dust)
+    coverage = Coverage.build(footprints, extinction)
+    cosmology = Cosmology.named(settings.cosmology)
+    spaces = [(skymap, Space.of(skymap, cosmology)) for skymap in campaign.maps]
     tally_settings = TallySettings(
         campaign.event_mjd, settings.revisit_visits, settings.revisit_gap_minutes
     )
     if progress is not None:
-        progress("Tallying", 0.75)
-    rows, timelines = tally_maps(coverage, campaign.maps, tally_settings)
+        progress("Tallying", 0.6)
+    rows, timelines = tally_maps(coverage, spaces, tally_settings)
+    depths = _third_dimension(campaign, coverage, rows, spaces, part(0.7, 0.95))
     if progress is not None:
         progress("Tallying as pointed", 0.95)
     return Results(
@@ -68,10 +107,11 @@ def account(campaign: LoadedCampaign, progress: Progress | None = None) -> Resul
             settings.revisit_visits,
             settings.revisit_gap_minutes,
             settings.bracket,
-            "not corrected for Galactic extinction",
+            _extinction_text(campaign, extinction, coverage),
+            settings.cosmology,
         ),
         inputs=tuple(InputFile(*item) for item in campaign.inputs),
-        maps=tuple(_map_info(skymap, campaign.event_mjd) for skymap in campaign.maps),
+        maps=tuple(_map_info(*pair, campaign.event_mjd) for pair in spaces),
         telescopes=tuple(
             _telescope_info(telescope, index, footprints)
             for index, telescope in enumerate(campaign.telescopes)
@@ -88,11 +128,71 @@ def account(campaign: LoadedCampaign, progress: Progress | None = None) -> Resul
         ),
         notes=_notes(campaign),
         sky=SkyData(campaign.maps, _covered(footprints), footprints.outlines),
+        findings=(
+            *map_findings(spaces),
+            *extinction_findings(bands_without_coefficient(footprints, *dust)),
+        ),
+        sources=tuple(SourceInfo(source.name, source.text) for source in campaign.sources),
+        **depths,
     )
 
 
-def _map_info(skymap: SkyMap, event_mjd: float) -> MapInfo:
+def _third_dimension(
+    campaign: LoadedCampaign,
+    coverage: Coverage,
+    rows: Sequence[TallyRow],
+    spaces: Sequence[tuple[SkyMap, Space | None]],
+    progress: Progress | None,
+) -> _Depths:
+    """Tally sources and limits on every map version that carries distances."""
+    dust = campaign.dust, campaign.extinction_coefficients
+    found: _Depths = {
+        "source_rows": (),
+        "exclusions": (),
+        "fading_planes": (),
+        "absolute_limits": (),
+        "distance_profiles": (),
+        "depth_histograms": (),
+    }
+    for index, (skymap, space) in enumerate(spaces):
+        if space is None:
+            continue
+        if progress is not None:
+            progress(f"Reaching into map {skymap.label}", index / len(spaces))
+        scenes = Scene.of_brackets(space, coverage, *dust)
+        scene = scenes[0]
+        seen = [SeenSource.of(s, scene, coverage, campaign.event_mjd) for s in campaign.sources]
+        found["source_rows"] += tuple(
+            tally_scenes(coverage, scenes, campaign.sources, campaign.event_mjd)
+        )
+        found["exclusions"] += tuple(exclusion_curves(coverage, scene))
+        found["fading_planes"] += (fading_plane(coverage, scene, campaign.event_mjd),)
+        found["absolute_limits"] += tuple(absolute_limits(rows, space))
+        found["distance_profiles"] += (
+            distance_profile(scene, [(one.source.name, one.reach_by_place()) for one in seen]),
+        )
+        found["depth_histograms"] += tuple(depth_histograms(coverage, scene))
+    return found
+
+
+def _extinction_text(campaign: LoadedCampaign, extinction: Floats, coverage: Coverage) -> str:
+    """Say in words whether limits are corrected for Galactic extinction."""
+    limited = np.isfinite(coverage.observations.depth)
+    known = np.isfinite(extinction[limited])
+    if not known.any():
+        return "not corrected for Galactic extinction"
+    if known.all():
+        return "corrected for Galactic extinction"
+    return "corrected for Galactic extinction where it is known"
+
+
+def _map_info(skymap: SkyMap, space: Space | None, event_mjd: float) -> MapInfo:
     issued = skymap.issued_mjd
+    mean, sd = (None, None) if space is None else space.moments
+    volume_50, volume_90 = (
+        (None if space is None else space.credible_volumes(level)) or (None, None)
+        for level in (0.5, 0.9)
+    )
     return MapInfo(
         version=skymap.label,
         issued=None if issued is None else mjd_to_iso(issued),
@@ -101,14 +201,16 @@ def _map_info(skymap: SkyMap, event_mjd: float) -> MapInfo:
         order_max=skymap.order_max,
         area_50_deg2=skymap.credible_region(0.5).area_deg2,
         area_90_deg2=skymap.credible_region(0.9).area_deg2,
-        distance_mean_mpc=None,
-        distance_sd_mpc=None,
-        volume_50_mpc3=None,
-        volume_90_mpc3=None,
-        probability_without_distance=None,
+        distance_mean_mpc=mean,
+        distance_sd_mpc=sd,
+        volume_50_mpc3=volume_50[0],
+        volume_90_mpc3=volume_90[0],
+        probability_without_distance=None if space is None else space.probability_without,
         path=skymap.path,
         sha256=skymap.sha256,
         notes=skymap.notes,
+        volume_50_comoving_mpc3=volume_50[1],
+        volume_90_comoving_mpc3=volume_90[1],
     )
 
 

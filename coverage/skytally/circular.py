@@ -6,23 +6,32 @@ import textwrap
 import unicodedata
 from collections.abc import Iterable, Iterator, Sequence
 
-from skytally.results import ExposureInfo, MapInfo, Results, TelescopeInfo
+from skytally.exclusion import AbsoluteLimit
+from skytally.limits import SourceRow
+from skytally.results import ExposureInfo, MapInfo, Results, SourceInfo, TelescopeInfo
 from skytally.tally import TallyRow
 from skytally.wording import (
     MISSING,
     NBSP,
+    NO_DISTANCE,
     area_text,
     count,
     depth_range,
+    distance_text,
+    extinction_text,
     headline,
     hours_text,
     join_words,
+    limit_rows,
     limit_terms,
     magnitude_text,
     number_text,
     percent,
+    reach_text,
     row_probability,
     since_event,
+    source_probability,
+    source_words,
     to_ascii,
     utc_text,
     version_text,
@@ -69,6 +78,7 @@ def render_circular(results: Results) -> str:
         *_observations(results),
         *_probability(results),
         *_depth(results),
+        *_distance(results),
         _paragraph(_rows_read(results)),
         *_table(results),
         _paragraph(_CAUTION),
@@ -167,8 +177,10 @@ def _depth(results: Results) -> Iterator[list[str]]:
     if not known:
         yield _paragraph("The logs give no limiting magnitudes.")
         return
+    mixed = len({row.extinction for row in known}) > 1
     yield _list(
-        f"Limiting magnitudes ({limit_terms(results.settings)}):", [_limits(row) for row in rows]
+        f"Limiting magnitudes ({limit_terms(results.settings, rows)}):",
+        [_limits(row) + (f", {extinction_text([row])}" if mixed else "") for row in rows],
     )
 
 
@@ -180,6 +192,74 @@ def _limits(row: TallyRow) -> str:
     if row.depth_min != row.depth_max:
         text += f", median {magnitude_text(row.depth_median)}"
     return f"{text} ({count('exposure', row.exposures)})"
+
+
+def _distance(results: Results) -> Iterator[list[str]]:
+    """What would have been seen of each source, and the absolute limits at the map's distance."""
+    newest = results.newest
+    if newest.distance_mean_mpc is None:
+        yield _paragraph(NO_DISTANCE)
+        return
+    seen = {
+        row.source: row
+        for row in results.source_rows
+        if row.map == newest.version and (row.telescope, row.band, row.night) == (None, None, None)
+    }
+    for source in results.sources:
+        if source.name in seen:
+            yield _paragraph(_source(source, seen[source.name], results))
+    yield from _absolute(results)
+
+
+def _source(source: SourceInfo, row: SourceRow, results: Results) -> str:
+    """One source in a sentence: what it assumes, over what it was detectable, and what was not."""
+    brightness, search = source_words(source)
+    who = f'A source "{source.name}" with {brightness}' + (f" ({search})," if search else ",")
+    on = version_text(results.newest.version)
+    if row.probability <= 0:
+        return f"{who} would have been detected over none of the probability of {on}."
+    text = (
+        f"{who} would have been detected over {_worded(source_probability(row))} of the "
+        f"probability of {on}"
+    )
+    lost = []
+    if row.probability_beyond > 0:
+        part = _worded(percent(row.probability_beyond))
+        lost.append(f"{part} was covered but lies beyond reach or was missed")
+    if row.probability_without_distance > 0:
+        part = _worded(percent(row.probability_without_distance))
+        lost.append(f"{part} was covered where the map gives no distance")
+    text += f"; of the rest, {join_words(lost)}." if lost else "."
+    if row.reach_median_mpc:
+        text += f" Its median reach is {reach_text(row.reach_median_mpc)}{NBSP}Mpc."
+    return text
+
+
+def _absolute(results: Results) -> Iterator[list[str]]:
+    """The limits as absolute magnitudes at the map's mean distance."""
+    limits = [one for one in results.absolute_limits if one.map == results.newest.version]
+    if not limits:
+        return
+    info = results.newest
+    distance = distance_text(info.distance_mean_mpc, info.distance_sd_mpc)
+    mixed = len({one.extinction is None for one in limits}) > 1
+    terms = limit_terms(results.settings, limit_rows(results))
+    yield _list(
+        f"Median limits as absolute magnitudes at the map's distance of {distance}, with the "
+        f"values one standard deviation nearer and farther ({terms}, no K-correction):",
+        [_absolute_limit(one, mixed=mixed) for one in limits],
+    )
+
+
+def _absolute_limit(one: AbsoluteLimit, *, mixed: bool) -> str:
+    near = MISSING if one.limit_near is None else number_text(one.limit_near, 2)
+    text = (
+        f"{one.telescope}, {one.band}: {magnitude_text(one.limit_mean)} "
+        f"({near} and {number_text(one.limit_far, 2)}{NBSP}mag)"
+    )
+    if mixed and one.extinction is None:
+        text += ", not corrected for Galactic extinction"
+    return text
 
 
 def _rows_read(results: Results) -> str:
@@ -208,11 +288,13 @@ def _table(results: Results) -> Iterator[list[str]]:
     if len(results.exposures) > LISTED_EXPOSURES:
         yield from _night_table(results)
         return
+    corrected = any(row.extinction != "not corrected" for row in limit_rows(results))
+    logged = " (limits not corrected for Galactic extinction)" if corrected else ""
     for telescope in results.telescopes:
         mine = [e for e in results.exposures if e.telescope == telescope.name]
         if mine:
             yield [
-                *_paragraph(f"Exposures by {telescope.name}:"),
+                *_paragraph(f"Exposures by {telescope.name}{logged}:"),
                 *_columns(
                     ("UTC start", "t-t0/h", "Band", "RA/deg", "Dec/deg", "Limit"),
                     [_exposure(e) for e in mine],

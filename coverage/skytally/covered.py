@@ -15,7 +15,7 @@ from skytally.patchwork import Patchwork
 from skytally.selection import Selection
 from skytally.spans import Ints
 
-__all__ = ["Chosen", "Coverage", "TallySettings"]
+__all__ = ["Chosen", "Coverage", "TallySettings", "visits_of"]
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -38,21 +38,29 @@ class Coverage:
     ----------
     footprints : Footprints
         Exposures and their rasterised footprints.
+    extinction : float64 array, shape (exposures,)
+        Galactic extinction A_b of each exposure, NaN where none is known.
     centre, inner, outer : Patchwork
         The patchwork by the centre rule, and those of the two brackets.
     """
 
     footprints: Footprints
+    extinction: Floats
     centre: Patchwork
     inner: Patchwork
     outer: Patchwork
 
     @classmethod
-    def build(cls, footprints: Footprints) -> Coverage:
-        """Cut the line once for each of the three regions."""
+    def build(cls, footprints: Footprints, extinction: Floats | None = None) -> Coverage:
+        """Cut the line once for each of the three regions.
+
+        ``extinction`` is that of each exposure as in the attribute; the logs'
+        own where it is left out.
+        """
         raster = footprints.raster
         return cls(
             footprints,
+            footprints.observations.extinction if extinction is None else extinction,
             Patchwork.build(raster.centre),
             Patchwork.build(raster.inner),
             Patchwork.build(raster.outer),
@@ -64,18 +72,30 @@ class Coverage:
         return self.footprints.observations
 
     @cached_property
+    def corrected_depth(self) -> Floats:
+        """Limits less the extinction where one is known, shape (exposures,)."""
+        known = np.isfinite(self.extinction)
+        return self.observations.depth - np.where(known, self.extinction, 0.0)
+
+    @cached_property
     def visits(self) -> tuple[Ints, Ints]:
-        """Pairs of set and exposure, sets rising and exposures in time order within each."""
-        by_footprint = np.argsort(self.observations.footprint, kind="stable")
-        count = np.bincount(
-            self.observations.footprint, minlength=self.footprints.raster.order.size
-        )
-        before = np.cumsum(count) - count
-        members = self.centre.members
-        row, place = expand_ranges(before[members], count[members])
-        exposure, group = by_footprint[place], self.centre.set_of_member[row]
-        order = np.argsort(group * max(len(self.observations), 1) + exposure)
-        return group[order], exposure[order]
+        """Pairs of set and exposure of the centre rule's patchwork; see `visits_of`."""
+        return visits_of(self.centre, self.observations)
+
+
+def visits_of(patchwork: Patchwork, observations: Observations) -> tuple[Ints, Ints]:
+    """Pairs of set and exposure, sets rising and exposures in time order within each."""
+    exposures = max(len(observations), 1)
+    by_footprint = np.argsort(observations.footprint, kind="stable")
+    count = np.bincount(
+        observations.footprint, minlength=int(patchwork.members.max(initial=-1)) + 1
+    )
+    before = np.cumsum(count) - count
+    members = patchwork.members
+    row, place = expand_ranges(before[members], count[members])
+    exposure, group = by_footprint[place], patchwork.set_of_member[row]
+    order = np.argsort(group * exposures + exposure)
+    return group[order], exposure[order]
 
 
 @dataclass(frozen=True, eq=False)

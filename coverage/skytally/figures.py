@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 from skytally.figure_style import Drawing, draw
+from skytally.limit_figures import limit_figures
 from skytally.plots import (
     MOST_BANDS,
     MOST_LABELS,
@@ -21,7 +24,6 @@ from skytally.sky_chart import (
     whole_sky_figure,
     zoom_figure,
 )
-from skytally.tally import TallyRow
 from skytally.wording import (
     NBSP,
     area_text,
@@ -51,7 +53,8 @@ def draw_figures(results: Results) -> dict[str, Drawing]:
     dict of str to Drawing
         Always ``whole-sky`` and ``zoom``; ``versions`` with several map
         versions; ``timeline`` where any probability is covered, ``credit``
-        where several telescopes did; ``depth`` where any exposure has a limit.
+        where several telescopes did; ``depth`` where any exposure has a limit;
+        those of `limit_figures` where the newest map carries distances.
     """
     parts = _zoomed(credible_parts(results.sky.maps[-1]))
     drawings = [_whole_sky(results, parts), _zoom(results, parts)]
@@ -66,6 +69,7 @@ def draw_figures(results: Results) -> dict[str, Drawing]:
         drawings.append(_credit(results))
     if depth_bands(results):
         drawings.append(_depth(results))
+    drawings += limit_figures(results)
     return {drawing.name: drawing for drawing in drawings}
 
 
@@ -190,21 +194,19 @@ def _credit(results: Results) -> Drawing:
 
 def _depth(results: Results) -> Drawing:
     rows = depth_bands(results)
-
-    def best(row: TallyRow) -> float:
-        return row.depth_max if row.depth_max is not None else float("-inf")
-
-    deepest = max(rows, key=best)
+    depth, band = max((e.depth, str(e.band)) for e in results.exposures if e.depth is not None)
     without = sum(e.depth is None for e in results.exposures)
     finding = (
-        f"The deepest exposure reached {magnitude_text(deepest.depth_max)} in {deepest.band}; "
+        f"The deepest exposure reached {magnitude_text(depth)} in {band}; "
         f"{count('exposure', without)} of {len(results.exposures)} came without a limit."
     )
     note = f" The {MOST_BANDS} most used bands are shown." if len(rows) > MOST_BANDS else ""
+    # Exposures are listed as logged; only the sums over them are corrected.
+    settings = replace(results.settings, extinction="not corrected for Galactic extinction")
     return draw(
         "depth",
         "Limits against time",
-        f"{finding} One mark per exposure: {limit_terms(results.settings)}.{note}",
+        f"{finding} One mark per exposure: {limit_terms(settings)}.{note}",
         f"Plots of limiting magnitude against hours since the event, one per band. {finding}",
         lambda: depth_figure(results),
     )

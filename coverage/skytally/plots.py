@@ -25,7 +25,7 @@ from skytally.figure_style import (
 )
 from skytally.results import Results
 from skytally.tally import TallyRow, Timeline
-from skytally.wording import percent
+from skytally.wording import limit_rows, percent
 
 __all__ = [
     "MOST_BANDS",
@@ -33,6 +33,7 @@ __all__ = [
     "credit_figure",
     "depth_bands",
     "depth_figure",
+    "end_labels",
     "telescope_timelines",
     "timeline_figure",
 ]
@@ -84,7 +85,7 @@ def timeline_figure(results: Results) -> Figure:
     axes.set_ylim(0, top)
     axes.set_ylabel("probability covered (%)")
     axes.set_xlabel("hours since the event" + (" (logarithmic)" if is_log else ""))
-    _end_labels(axes, ends, top)
+    end_labels(axes, ends, top)
     _mark_versions(axes, versions, is_log=is_log)
     return figure
 
@@ -112,8 +113,12 @@ def _time_axis(axes: Axes, hours: Sequence[float]) -> tuple[float, float, bool]:
     return low, high, is_log
 
 
-def _end_labels(axes: Axes, ends: Sequence[tuple[float, str, str]], top: float) -> None:
-    """Write each line's name at its end, moved apart where they would touch."""
+def end_labels(axes: Axes, ends: Sequence[tuple[float, str, str]], top: float) -> None:
+    """Write each line's name at its right end, moved apart where they would touch.
+
+    ``ends`` holds a probability, a name and a colour each; what is in our ink is the
+    whole, and bold. ``top`` is the end of the axis in percent.
+    """
     kept = sorted(sorted(ends)[-MOST_LABELS:])
     least = 0.062 * top
     places: list[float] = []
@@ -135,7 +140,7 @@ def _end_labels(axes: Axes, ends: Sequence[tuple[float, str, str]], top: float) 
             textcoords=("axes fraction", "data"),
             fontsize=7,
             va="center",
-            fontweight="bold" if colour == INK and name == "all together" else "normal",
+            fontweight="bold" if colour == INK else "normal",
             arrowprops={
                 "arrowstyle": "-",
                 "color": colour,
@@ -251,15 +256,7 @@ def _hatched_rest(width: float) -> NDArray[np.float64]:
 
 def depth_bands(results: Results) -> list[TallyRow]:
     """Return the newest map's rows by band that have limits, the most observed first."""
-    rows = [
-        row
-        for row in results.rows
-        if row.map == results.newest.version
-        and row.band is not None
-        and row.telescope is None
-        and row.depth_median is not None
-    ]
-    return sorted(rows, key=lambda row: (-row.exposures, row.band))
+    return sorted(limit_rows(results), key=lambda row: (-row.exposures, row.band))
 
 
 def depth_figure(results: Results) -> Figure:

@@ -17,13 +17,17 @@ from markupsafe import Markup
 from skytally.errors import OutputError
 from skytally.figure_style import Drawing, swatch_svg
 from skytally.figures import draw_figures
+from skytally.limit_tables import limit_tables
 from skytally.report_tables import key_figures, tables
 from skytally.results import Results
 from skytally.wording import (
+    NO_DISTANCE,
     count,
     headline,
+    limit_rows,
     limit_terms,
     percent,
+    source_words,
     utc_text,
     version_text,
 )
@@ -139,7 +143,9 @@ def _render(
         headline=headline(results),
         key_figures=key_figures(results),
         figures={name: (d, Markup(d.svg)) for name, d in figures.items()},
-        tables=tables(results),
-        terms=limit_terms(results.settings),
+        tables=tables(results) | limit_tables(results),
+        terms=limit_terms(results.settings, limit_rows(results)),
+        sources=[(source.name, *source_words(source)) for source in results.sources],
+        no_distance=NO_DISTANCE,
         newest=version_text(results.newest.version),
     )

@@ -14,6 +14,7 @@ from skytally.wording import (
     count,
     distance_text,
     hours_text,
+    limit_rows,
     limit_terms,
     magnitude_text,
     number_text,
@@ -22,7 +23,7 @@ from skytally.wording import (
     utc_text,
 )
 
-__all__ = ["Cell", "Column", "Table", "key_figures", "tables"]
+__all__ = ["Cell", "Column", "Table", "capped", "columns_of", "key_figures", "tables"]
 
 # Rows of one table; more would fill pages that nobody reads, and the PDF takes a minute.
 MOST_ROWS = 48
@@ -90,24 +91,23 @@ class Table:
 
 
 def tables(results: Results) -> dict[str, Table]:
-    """Return every table of the report by name, long ones cut with a pointer to the file."""
+    """Return the tables of coverage by name, long ones cut with a pointer to the file."""
     made = (
         _maps(results),
         _telescopes(results),
         _bands(results),
         _nights(results),
         _milestones(results),
-        _depth(results),
         _as_pointed(results),
         _logs(results),
         _set_aside(results),
         _instruments(results),
         _inputs(results),
     )
-    return {table.name: _capped(table) for table in made}
+    return {table.name: capped(table) for table in made}
 
 
-def _capped(table: Table) -> Table:
+def capped(table: Table) -> Table:
     """Cut a long table; its note says how much is left out and where it stands."""
     more = len(table.rows) - MOST_ROWS
     if more <= 0:
@@ -116,7 +116,7 @@ def _capped(table: Table) -> Table:
     return replace(table, rows=table.rows[:MOST_ROWS], note=f"{table.note} {pointer}".strip())
 
 
-def _columns(*titles: str, text: int = 1) -> tuple[Column, ...]:
+def columns_of(*titles: str, text: int = 1) -> tuple[Column, ...]:
     """Return columns of which the first few hold text and the others numbers."""
     return tuple(Column(title, numeric=place >= text) for place, title in enumerate(titles))
 
@@ -182,7 +182,7 @@ def _maps(results: Results) -> Table:
     return Table(
         "maps",
         "All exposures on every map version",
-        _columns(*titles, text=2),
+        columns_of(*titles, text=2),
         tuple(rows),
         note=f"Probabilities are fractions of all of a map’s probability. {_bracket_note(results)}",
     )
@@ -223,7 +223,7 @@ def _telescopes(results: Results) -> Table:
     return Table(
         "telescopes",
         "Each telescope on the newest map version",
-        _columns("telescope", "exposures", "area", "covered", "alone", "share", "revisited"),
+        columns_of("telescope", "exposures", "area", "covered", "alone", "share", "revisited"),
         tuple(
             cells(row, Cell(row.telescope or "", telescope=index if row.exposures else None))
             for index, row in rows
@@ -243,7 +243,7 @@ def _bands(results: Results) -> Table:
     return Table(
         "bands",
         "By band, all telescopes",
-        _columns("band", "exposures", "area", "covered", f"in 90{NBSP}% region", "revisited"),
+        columns_of("band", "exposures", "area", "covered", f"in 90{NBSP}% region", "revisited"),
         tuple(
             (
                 Cell(row.band or ""),
@@ -264,7 +264,7 @@ def _nights(results: Results) -> Table:
     return Table(
         "nights",
         "By night, all telescopes",
-        _columns("evening of", "first start", "last end", "exposures", "area", "covered", text=3),
+        columns_of("evening of", "first start", "last end", "exposures", "area", "covered", text=3),
         tuple(
             (
                 Cell(row.night or ""),
@@ -309,71 +309,11 @@ def _milestones(results: Results) -> Table:
     return Table(
         "milestones",
         "Hours from the event to what each finally covered",
-        _columns(
+        columns_of(
             "telescope", "first sky", "half of its own", "nine tenths", "last new sky", "in the end"
         ),
         tuple(cells(line) for line in lines if line.telescope is not None),
         total=whole[0] if whole else None,
-    )
-
-
-def _depth(results: Results) -> Table:
-    rows = [
-        row
-        for row in results.rows
-        if row.map == results.newest.version and row.telescope is not None and row.band is not None
-    ]
-    index = {t.name: number for number, t in enumerate(results.telescopes)}
-
-    def magnitude(value: float | None) -> Cell:
-        return Cell(MISSING if value is None else number_text(value, 2))
-
-    converted = [
-        f"{t.name} from {t.depth_system} at {t.depth_significance:g}{NBSP}σ"
-        for t in results.telescopes
-        if t.exposures
-        and (t.depth_system, t.depth_significance)
-        != (results.settings.magnitude_system, results.settings.significance)
-    ]
-    note = f"All limits in magnitudes: {limit_terms(results.settings)}."
-    if converted:
-        note += f" Converted: {'; '.join(converted)}."
-    return Table(
-        "depth",
-        f"Limits ({limit_terms(results.settings)})",
-        _columns(
-            "telescope",
-            "band",
-            "exposures",
-            "least",
-            "median",
-            "deepest",
-            f"over 50{NBSP}%",
-            f"over 90{NBSP}%",
-            f"stacked, over 50{NBSP}%",
-            f"stacked, over 90{NBSP}%",
-            text=2,
-        ),
-        tuple(
-            (
-                Cell(row.telescope or "", telescope=index[row.telescope or ""]),
-                Cell(row.band or ""),
-                Cell(number_text(row.exposures)),
-                magnitude(row.depth_min),
-                magnitude(row.depth_median),
-                magnitude(row.depth_max),
-                magnitude(row.depth_over_50),
-                magnitude(row.depth_over_90),
-                magnitude(row.depth_stacked_over_50),
-                magnitude(row.depth_stacked_over_90),
-            )
-            for row in rows
-        ),
-        note=(
-            f"{note} Over 50{NBSP}% and 90{NBSP}%: the limit that at least so much of the "
-            "probability covered reaches, by the deepest single exposure of each place, and by "
-            "the stack of those of one telescope, band and night."
-        ),
     )
 
 
@@ -398,7 +338,7 @@ def _as_pointed(results: Results) -> Table:
     return Table(
         "as-pointed",
         "Exposures by the map version in force when they began",
-        _columns(
+        columns_of(
             "telescope", "version in force", "exposures", "covered of it", "of the newest", text=2
         ),
         tuple(cells(part) for part in shown),
@@ -412,7 +352,7 @@ def _logs(results: Results) -> Table:
         "logs",
         "Rows of the logs: read = used + set aside",
         (
-            *_columns("telescope", "log", text=2),
+            *columns_of("telescope", "log", text=2),
             *(Column(title) for title in ("read", "used", "set aside")),
             Column("why", numeric=False),
         ),
@@ -445,7 +385,7 @@ def _set_aside(results: Results) -> Table:
         (
             Column("telescope", numeric=False),
             Column("row"),
-            *_columns("exposure", "reason", "detail", text=3),
+            *columns_of("exposure", "reason", "detail", text=3),
         ),
         tuple(
             (
@@ -469,7 +409,7 @@ def _instruments(results: Results) -> Table:
     return Table(
         "instruments",
         "Telescopes and how finely their footprints were laid out",
-        _columns("telescope", "camera", "site", "bands", "fields", "working order", text=4),
+        columns_of("telescope", "camera", "site", "bands", "fields", "working order", text=4),
         tuple(
             (
                 Cell(t.name),
@@ -492,7 +432,7 @@ def _inputs(results: Results) -> Table:
     return Table(
         "inputs",
         "Files read",
-        _columns("role", "file", "SHA-256", text=3),
+        columns_of("role", "file", "SHA-256", text=3),
         tuple(
             (Cell(item.role), Cell(item.path, code=True), Cell(item.sha256, code=True))
             for item in results.inputs
@@ -520,11 +460,12 @@ def key_figures(results: Results) -> Sequence[tuple[str, str, str]]:
             f"≥{NBSP}{results.settings.revisit_gap_minutes:g}{NBSP}min",
         ),
     ]
-    limits = [r for r in _rows(results, "band") if r.depth_median is not None]
+    limits = limit_rows(results)
     if limits:
         most = max(limits, key=lambda row: (row.exposures, row.band))
         limit = magnitude_text(most.depth_median)
-        found.append((f"median limit in {most.band}", limit, limit_terms(results.settings)))
+        terms = limit_terms(results.settings, [most])
+        found.append((f"median limit in {most.band}", limit, terms))
     return found
 
 

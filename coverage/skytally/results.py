@@ -7,6 +7,15 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from skytally.audit import Finding
+from skytally.exclusion import (
+    AbsoluteLimit,
+    DepthHistogram,
+    DistanceProfile,
+    ExclusionCurve,
+    FadingPlane,
+)
+from skytally.limits import SourceRow
 from skytally.skymap import SkyMap
 from skytally.spans import Spans
 from skytally.tally import AsPointed, TallyRow, Timeline
@@ -21,6 +30,7 @@ __all__ = [
     "SetAsideInfo",
     "Settings",
     "SkyData",
+    "SourceInfo",
     "TelescopeInfo",
 ]
 
@@ -62,6 +72,16 @@ class MapInfo:
     path: str | None
     sha256: str | None
     notes: tuple[str, ...]
+    volume_50_comoving_mpc3: float | None = None
+    volume_90_comoving_mpc3: float | None = None
+
+
+@dataclass(frozen=True)
+class SourceInfo:
+    """One source that limits are stated for: its name, and its assumptions in words."""
+
+    name: str
+    text: str
 
 
 @dataclass(frozen=True)
@@ -135,6 +155,7 @@ class Settings:
     revisit_gap_minutes: float
     bracket_target: float
     extinction: str
+    cosmology: str = "Planck18"
 
 
 @dataclass(frozen=True, eq=False)
@@ -181,6 +202,14 @@ class Results:
     set_aside: tuple[SetAsideInfo, ...]
     notes: tuple[str, ...]
     sky: SkyData = field(repr=False, compare=False)
+    findings: tuple[Finding, ...] = ()
+    sources: tuple[SourceInfo, ...] = ()
+    source_rows: tuple[SourceRow, ...] = ()
+    exclusions: tuple[ExclusionCurve, ...] = ()
+    fading_planes: tuple[FadingPlane, ...] = ()
+    absolute_limits: tuple[AbsoluteLimit, ...] = ()
+    distance_profiles: tuple[DistanceProfile, ...] = ()
+    depth_histograms: tuple[DepthHistogram, ...] = ()
 
     @property
     def newest(self) -> MapInfo:

@@ -2,8 +2,9 @@
 
 The JSON format is ``skytally/tally``, version 1. Keys come in a fixed order,
 numbers with all their digits, and what is missing is null, so that equal
-results give equal bytes. ``rows`` is one tidy table; ``findings`` is where a
-check of the logs puts what it noticed and is empty where no check was run.
+results give equal bytes. ``rows`` is one tidy table; each row's ``sources``
+holds what that selection could have seen of each source on that map. Distances,
+sources and what they exclude are empty where no map carries distances.
 """
 
 from __future__ import annotations
@@ -56,11 +57,25 @@ _COLUMNS: dict[str, tuple[u.UnitBase | None, str]] = {
     "volume_90_covered_mpc3": (u.Mpc**3, "volume of the 90 % credible volume that was covered"),
     "first_start": (None, "start of the first exposure, UTC"),
     "last_end": (None, "end of the last exposure, UTC"),
+    "extinction": (None, "whether the limits are corrected for Galactic extinction"),
+    "extinction_median": (u.mag, "median Galactic extinction of the exposures"),
+    "volume_90_covered_comoving_mpc3": (
+        u.Mpc**3,
+        "comoving volume of the 90 % credible volume that was covered",
+    ),
 }
+
+# What a source's row shares with the tally row that it is written into.
+_SELECTED_BY = ("map", "telescope", "band", "night")
+# The parts of the results that belong to one map version each.
+_BY_MAP = (
+    *("rows", "timelines", "source_rows", "exclusions", "fading_planes"),
+    *("absolute_limits", "distance_profiles", "depth_histograms"),
+)
 
 
 def select_map(results: Results, version: str) -> Results:
-    """Return the results with the maps, rows and timelines of one map version only.
+    """Return the results with what belongs to one map version only.
 
     Raises
     ------
@@ -74,12 +89,15 @@ def select_map(results: Results, version: str) -> Results:
             remedy=f"Choose one of: {', '.join(map(repr, versions))}.",
         )
     kept = versions.index(version)
+    parts: dict[str, Any] = {
+        name: tuple(item for item in getattr(results, name) if item.map == version)
+        for name in _BY_MAP
+    }
     return replace(
         results,
         maps=(results.maps[kept],),
-        rows=tuple(row for row in results.rows if row.map == version),
-        timelines=tuple(line for line in results.timelines if line.map == version),
         sky=replace(results.sky, maps=(results.sky.maps[kept],)),
+        **parts,
     )
 
 
@@ -111,14 +129,32 @@ def to_dict(results: Results) -> dict[str, Any]:
         "maps": _plain(results.maps),
         "telescopes": _plain(results.telescopes),
         "logs": logs,
-        "rows": _plain(results.rows),
+        "rows": _rows(results),
         "timelines": _plain(results.timelines),
         "as_pointed": _plain(results.as_pointed),
         "exposures": _plain(results.exposures),
         "set_aside": _plain(results.set_aside),
-        "findings": [],
+        "sources": _plain(results.sources),
+        "exclusion": _plain(results.exclusions),
+        "fading": _plain(results.fading_planes),
+        "absolute_limits": _plain(results.absolute_limits),
+        "distance_profiles": _plain(results.distance_profiles),
+        "depth_histograms": _plain(results.depth_histograms),
+        "findings": _plain(results.findings),
         "notes": list(results.notes),
     }
+
+
+def _rows(results: Results) -> list[dict[str, Any]]:
+    """Return the tidy rows, each with what it could have seen of every source."""
+    seen: dict[tuple[Any, ...], list[dict[str, Any]]] = {}
+    for row in results.source_rows:
+        numbers = _plain(row)
+        key = tuple(numbers.pop(name) for name in _SELECTED_BY)
+        seen.setdefault(key, []).append(numbers)
+    return [
+        {**_plain(row), "sources": seen.get((row.map, *row.selection), [])} for row in results.rows
+    ]
 
 
 def to_json(results: Results) -> str:
@@ -170,5 +206,6 @@ def to_table(results: Results) -> Table:
         "magnitude_system": results.settings.magnitude_system,
         "significance": results.settings.significance,
         "extinction": results.settings.extinction,
+        "cosmology": results.settings.cosmology,
     }
     return table

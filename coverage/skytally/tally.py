@@ -9,10 +9,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from skytally.covered import Chosen, Coverage, TallySettings
-from skytally.depth import depth_numbers
+from skytally.depth import depth_numbers, extinction_state
 from skytally.grouping import sum_by
 from skytally.selection import selections
 from skytally.skymap import Measure, SkyMap
+from skytally.space import Space
 from skytally.spans import DEG2_PER_SR, Ints
 from skytally.times import hours_since, mjd_to_iso
 
@@ -36,7 +37,8 @@ class TallyRow:
     ``None`` for telescope, band or night means all; ``None`` for a number
     means that it does not exist (never NaN). Areas in square degrees,
     probabilities as fractions of the map's total, magnitudes in the campaign's
-    system and significance.
+    system and significance, less Galactic extinction where ``extinction`` says
+    so; ``extinction_median`` is the median A_b of the exposures where known.
     """
 
     map: str
@@ -68,6 +70,9 @@ class TallyRow:
     volume_90_covered_mpc3: float | None
     first_start: str | None
     last_end: str | None
+    extinction: str = "not corrected"
+    extinction_median: float | None = None
+    volume_90_covered_comoving_mpc3: float | None = None
 
     @property
     def selection(self) -> tuple[str | None, str | None, str | None]:
@@ -122,6 +127,8 @@ class _Sets:
         Probability of each set of the two brackets' patchworks.
     strip : float64 array, shape (footprints,)
         Probability in each footprint's undecided cells.
+    volume_90, volume_90_comoving : float64 arrays or None
+        Part of the 90 % volume in each set's directions, Mpc³, shape (sets,).
     """
 
     probability: Floats
@@ -132,11 +139,14 @@ class _Sets:
     inner: Floats
     outer: Floats
     strip: Floats
+    volume_90: Floats | None
+    volume_90_comoving: Floats | None
 
     @classmethod
-    def of(cls, coverage: Coverage, skymap: SkyMap) -> _Sets:
+    def of(cls, coverage: Coverage, skymap: SkyMap, space: Space | None) -> _Sets:
         raster, whole = coverage.footprints.raster, skymap.probability
         strip = whole.of_table(raster.outer) - whole.of_table(raster.inner)
+        volumes = None if space is None else space.credible_densities()
         return cls(
             coverage.centre.measure(whole),
             coverage.centre.measure(skymap.restricted(0.5)),
@@ -146,17 +156,24 @@ class _Sets:
             coverage.inner.measure(whole),
             coverage.outer.measure(whole),
             np.maximum(strip, 0.0),
+            None if volumes is None else coverage.centre.measure(volumes[0]),
+            None if volumes is None else coverage.centre.measure(volumes[1]),
         )
 
 
 def tally_maps(
-    coverage: Coverage, maps: Sequence[SkyMap], settings: TallySettings
+    coverage: Coverage,
+    maps: Sequence[tuple[SkyMap, Space | None]],
+    settings: TallySettings,
 ) -> tuple[list[TallyRow], list[Timeline]]:
-    """Tally every selection on every map version, map by map."""
+    """Tally every selection on every map version, map by map.
+
+    Each map comes with its third dimension, None where it has no distances.
+    """
     chosen = [Chosen.of(coverage, s, settings) for s in selections(coverage.observations)]
     rows, timelines = [], []
-    for skymap in maps:
-        sets = _Sets.of(coverage, skymap)
+    for skymap, space in maps:
+        sets = _Sets.of(coverage, skymap, space)
         shares: dict[int, _Shares] = {}
         for part in chosen:
             peers = part.selection.peers
@@ -171,6 +188,7 @@ def _row(coverage: Coverage, part: Chosen, label: str, sets: _Sets, share: _Shar
     """Sum what a map gives each set over the sets that a selection covers."""
     selection, o = part.selection, coverage.observations
     covered = part.covered
+    extinction, extinction_median = extinction_state(coverage, part)
     low = float(sets.inner[part.covered_inner].sum())
     high = float(sets.outer[part.covered_outer].sum())
 
@@ -198,10 +216,17 @@ def _row(coverage: Coverage, part: Chosen, label: str, sets: _Sets, share: _Shar
         probability_credit=share.credit.get(selection.peer, 0.0),
         probability_revisited=float(sets.probability[part.revisited].sum()),
         **depth_numbers(coverage, part, sets.probability),
-        volume_90_covered_mpc3=None,
+        volume_90_covered_mpc3=_volume(sets.volume_90, covered),
         first_start=_iso(o.start_mjd[selection.chosen].min(initial=np.inf)),
         last_end=_iso(o.end_mjd[selection.chosen].max(initial=-np.inf)),
+        extinction=extinction,
+        extinction_median=extinction_median,
+        volume_90_covered_comoving_mpc3=_volume(sets.volume_90_comoving, covered),
     )
+
+
+def _volume(volume: Floats | None, covered: Bools) -> float | None:
+    return None if volume is None else float(volume[covered].sum())
 
 
 def _iso(mjd: float) -> str | None:

@@ -21,10 +21,14 @@ from skytally.wording import (
     count,
     headline,
     hours_text,
+    limit_rows,
     limit_terms,
     number_text,
     percent,
+    reach_text,
     row_probability,
+    source_probability,
+    source_words,
     to_ascii,
     version_text,
 )
@@ -54,8 +58,9 @@ def render_tally(results: Results, stream: TextIO) -> str:
         page.write_line()
         page.write_line(f"On {version_text(results.newest.version)}:")
         page.write_table(*_selections(results))
-        terms = limit_terms(results.settings)
+        terms = limit_terms(results.settings, limit_rows(results))
         page.write_line(f"Depth is the median limit in one band: {terms}.", style="dim")
+        _write_sources(page, results)
     if len(results.maps) > 1:
         page.write_line()
         page.write_line("All exposures on every map version, newest first:")
@@ -120,6 +125,43 @@ class _Page:
         # Control characters from a log must not steer a terminal.
         text = "".join(c for c in text if c.isprintable() or c == NBSP)
         return Text(to_ascii(text) if self._plain else text)
+
+
+def _write_sources(page: _Page, results: Results) -> None:
+    """Write what could have been seen of each source, where the map carries distances."""
+    rows = [
+        row
+        for row in results.source_rows
+        if row.map == results.newest.version
+        and (row.telescope, row.band, row.night) == (None, None, None)
+    ]
+    if not rows:
+        return
+    page.write_line()
+    page.write_line("What would have been seen, of all its probability:")
+    page.write_table(
+        ("source", "reach/Mpc", "detectable", "beyond reach", "no distance"),
+        [
+            [
+                (
+                    row.source,
+                    reach_text(row.reach_median_mpc),
+                    source_probability(row),
+                    percent(row.probability_beyond),
+                    percent(row.probability_without_distance),
+                )
+                for row in rows
+            ]
+        ],
+    )
+    for source in results.sources:
+        page.write_line(f"{source.name}: {'; '.join(filter(None, source_words(source)))}.", "dim")
+    without = percent(results.newest.probability_without_distance or 0.0, 2)
+    page.write_line(
+        "Reach is the median luminosity distance; beyond reach counts what was covered but "
+        f"missed. The map holds {without} without a distance.",
+        style="dim",
+    )
 
 
 def _selections(results: Results) -> tuple[tuple[str, ...], list[Section]]:

@@ -8,39 +8,52 @@ printed beside the number.
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+import re
+from collections.abc import Iterable, Sequence
 
-from skytally.results import Results, Settings
+from skytally.exclusion import ExclusionCurve
+from skytally.limits import SourceRow
+from skytally.results import Results, Settings, SourceInfo
 from skytally.tally import TallyRow
 from skytally.times import hours_since, iso_to_mjd
 
 __all__ = [
     "MISSING",
     "NBSP",
+    "NO_DISTANCE",
     "area_text",
+    "bright_magnitude",
     "count",
     "decimals_for",
     "depth_range",
     "distance_text",
+    "extinction_text",
     "has",
     "headline",
     "hours_text",
     "join_words",
+    "limit_rows",
     "limit_terms",
     "magnitude_text",
+    "newest_curves",
     "number_text",
     "number_word",
     "percent",
     "probability_text",
+    "reach_text",
     "row_probability",
     "since_event",
+    "source_probability",
+    "source_words",
     "to_ascii",
     "utc_text",
     "version_text",
+    "volume_text",
 ]
 
 NBSP = "\u00a0"
 MISSING = "—"
+NO_DISTANCE = "The map carries no distance."
 BRACKET_TARGET = 0.005
 # What a row's total area is tested to hold, whatever its bracket: 0.1 %.
 AREA_ACCURACY = 0.001
@@ -217,12 +230,42 @@ def magnitude_text(magnitude: float | None, decimals: int = 2) -> str:
     return f"{number_text(magnitude, decimals)}{NBSP}mag"
 
 
-def limit_terms(settings: Settings) -> str:
-    """Return what every limit must be read with: system, significance, extinction."""
-    return (
-        f"{settings.magnitude_system}, {settings.significance:g}{NBSP}σ, "
-        f"{settings.extinction.rstrip('.')}"
-    )
+def limit_rows(results: Results) -> list[TallyRow]:
+    """Return the newest map's rows by band, all telescopes, that have limits."""
+    return [
+        row
+        for row in results.rows
+        if row.map == results.newest.version
+        and row.band is not None
+        and row.telescope is None
+        and row.depth_median is not None
+    ]
+
+
+def limit_terms(settings: Settings, rows: Iterable[TallyRow] = ()) -> str:
+    """Return what every limit must be read with: system, significance, extinction.
+
+    ``rows`` are those whose limits are meant; without any with a limit the
+    campaign's setting is stated.
+    """
+    extinction = extinction_text(rows) or settings.extinction.rstrip(".")
+    return f"{settings.magnitude_system}, {settings.significance:g}{NBSP}σ, {extinction}"
+
+
+def extinction_text(rows: Iterable[TallyRow]) -> str:
+    """Say whether the limits of rows are corrected for extinction; empty without limits."""
+    limited = [row for row in rows if row.depth_median is not None]
+    states = {row.extinction for row in limited}
+    if not states:
+        return ""
+    if len(states) > 1:
+        states = {"partly corrected"}
+    text = f"{states.pop()} for Galactic extinction"
+    known = [row.extinction_median for row in limited if row.extinction_median is not None]
+    if not known:
+        return text
+    low, high = number_text(min(known), 2), number_text(max(known), 2)
+    return f"{text}, median A = {low if low == high else f'{low}–{high}'}{NBSP}mag"
 
 
 def depth_range(row: TallyRow) -> str:
@@ -231,6 +274,54 @@ def depth_range(row: TallyRow) -> str:
         return MISSING
     low, high = number_text(row.depth_min, 2), number_text(row.depth_max, 2)
     return f"{low}{NBSP}mag" if low == high else f"{low}–{high}{NBSP}mag"
+
+
+def bright_magnitude(magnitude: float, decimals: int = 1) -> str:
+    """Return an absolute magnitude rounded to the bright side.
+
+    What is ruled out at the printed value is then ruled out indeed; up to the
+    thousandth of a magnitude that the crossing itself may be off.
+    """
+    scale = 10.0**decimals
+    return number_text(math.floor((magnitude + 1e-3) * scale) / scale, decimals)
+
+
+def reach_text(distance_mpc: float | None) -> str:
+    """Return a reach in Mpc; a dash where nothing is reached."""
+    if distance_mpc is None or distance_mpc <= 0:
+        return MISSING
+    decimals = max(0, min(4, 1 - math.floor(math.log10(distance_mpc))))
+    return number_text(distance_mpc, 0 if distance_mpc >= 99.5 else decimals)
+
+
+def volume_text(volume_mpc3: float | None) -> str:
+    """Return a volume in Mpc³ to three digits, ``31,200``; a dash where there is none."""
+    if volume_mpc3 is None:
+        return MISSING
+    if volume_mpc3 <= 0:
+        return "0"
+    decimals = 2 - math.floor(math.log10(volume_mpc3))
+    return number_text(round(volume_mpc3, decimals), max(0, min(4, decimals)))
+
+
+def source_words(source: SourceInfo) -> tuple[str, str]:
+    """Split what a source assumes: how bright it is, and how it is looked for."""
+    text = source.text.removeprefix(f"{source.name}:").strip().removesuffix(".")
+    # Magnitudes come with a hyphen; a number wants a minus sign.
+    text = re.sub(r"(?<![^\s(])-(?=\d)", "−", text)
+    brightness, _, search = text.partition("; ")
+    return brightness, search
+
+
+def source_probability(row: SourceRow) -> str:
+    """Return the detectable probability of a source with its bracket."""
+    low, high = row.probability_low, row.probability_high
+    return probability_text(row.probability, low, high, 0.0, 1.0)
+
+
+def newest_curves(results: Results) -> list[ExclusionCurve]:
+    """Return what the newest map rules out: all bands together first, then band by band."""
+    return [curve for curve in results.exclusions if curve.map == results.newest.version]
 
 
 def number_word(n: int) -> str:
@@ -319,7 +410,7 @@ def headline(results: Results) -> str:
     area = area_text(total.area_deg2, total.area_low_deg2, total.area_high_deg2)
     return (
         f"{until}, {who} covered {probability} of the probability of {version} for {event}, "
-        f"with {what} over {area}{_how_deep(results)}."
+        f"with {what} over {area}{_how_deep(results)}{_ruled_out(results)}."
     )
 
 
@@ -335,17 +426,11 @@ def _until(results: Results) -> str:
 
 def _how_deep(results: Results) -> str:
     """Return the median limits; bands are named, never mixed."""
-    limits = [
-        (row.depth_median, row.band)
-        for row in results.rows
-        if row.map == results.newest.version
-        and row.band is not None
-        and row.telescope is None
-        and row.depth_median is not None
-    ]
+    rows = limit_rows(results)
+    limits = [(row.depth_median, row.band) for row in rows if row.depth_median is not None]
     if not limits:
         return "; the logs hold no limiting magnitude"
-    terms = limit_terms(results.settings)
+    terms = limit_terms(results.settings, rows)
     if len(limits) <= _BANDS_NAMED:
         named = join_words([f"{magnitude_text(m)} in {band}" for m, band in limits])
         return (
@@ -355,4 +440,25 @@ def _how_deep(results: Results) -> str:
     return (
         f", to median limits between {magnitude_text(low)} in {low_band} and "
         f"{magnitude_text(high)} in {high_band} ({terms})"
+    )
+
+
+def _ruled_out(results: Results) -> str:
+    """Return the faintest source that one band, or else all, exclude over half of everything."""
+    curves = newest_curves(results)
+    reached = [
+        (curve.magnitude_50, curve.band)
+        for curve in curves
+        if curve.magnitude_50 is not None and curve.band is not None
+    ]
+    if reached:
+        magnitude, band = max(reached)
+        where = f"in {band}"
+    elif curves and curves[0].magnitude_50 is not None:
+        magnitude, where = curves[0].magnitude_50, "in every band"
+    else:
+        return ""
+    return (
+        f"; a constant source of absolute magnitude {bright_magnitude(magnitude)} {where}, or "
+        "brighter, is ruled out over half of all probability"
     )

@@ -1,0 +1,193 @@
+"""What is left: a map version after what would have been seen is taken away."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from skytally.cosmology import Cosmology
+from skytally.covered import Coverage
+from skytally.distance import moments, moments_beyond, parameters_from_moments
+from skytally.dust import Dust
+from skytally.grouping import expand_ranges, sum_by
+from skytally.limits import Scene, SeenSource
+from skytally.skymap import DistanceLayer, SkyMap
+from skytally.sources import Source
+from skytally.space import Space
+from skytally.spans import LINE_ORDER, UNIT_SR, Ints, Spans, SpanTable
+
+__all__ = ["LeftOver", "left_over"]
+
+Floats = NDArray[np.float64]
+
+# Cells that are covered in part are cut to this order, and no finer: a cell of it
+# is 3.4 arcmin wide, below any structure that a search would be planned for.
+_DETAIL_ORDER = 10
+# The distance distribution's mean is more than √3 standard deviations, whatever
+# its parameters; a little above, they are of a moderate size.
+_LEAST_MEAN_PER_SD = 1.74
+
+
+@dataclass(frozen=True, eq=False)
+class LeftOver:
+    """A map version without what would have been seen.
+
+    Attributes
+    ----------
+    skymap : SkyMap
+        Normalised to one.
+    remaining : float
+        The chance that the source is still out there unseen: the fraction of
+        all the map's probability that is left.
+    """
+
+    skymap: SkyMap
+    remaining: float
+
+
+def left_over(
+    coverage: Coverage,
+    skymap: SkyMap,
+    source: Source | None,
+    event_mjd: float,
+    cosmology: Cosmology,
+    dust: Dust | None,
+    coefficients: Mapping[str, float],
+) -> LeftOver | None:
+    """Multiply a map by the probability of not having been seen.
+
+    Parameters
+    ----------
+    coverage : Coverage
+        What was observed.
+    skymap : SkyMap
+        The map version; sums are conserved, averaged over cells of order 10
+        where a cell was covered in part.
+    source : Source or None
+        What was looked for; None takes away whatever was covered, at every
+        distance. A map without distances leaves no other choice.
+
+    Returns
+    -------
+    LeftOver or None
+        None for a source on a map without distances.
+    """
+    fine = _refined(skymap, coverage)
+    if source is None:
+        return _without_covered(fine, coverage)
+    space = Space.of(fine, cosmology)
+    if space is None:
+        return None
+    scene = Scene.of(space, coverage.centre, coverage, dust, coefficients)
+    seen = SeenSource.of(source, scene, coverage, event_mjd)
+    taken, first, second = _taken(seen, np.ones(len(coverage.observations), dtype=bool))
+    return _rebuilt(fine, space, taken, first, second)
+
+
+def _refined(skymap: SkyMap, coverage: Coverage) -> SkyMap:
+    """Cut the cells that are covered in part to the detail order."""
+    length = skymap.stops - skymap.starts
+    covered = _covered_length(skymap, coverage)
+    part = (covered > 0) & (covered < length)
+    step = np.int64(1) << (2 * (LINE_ORDER - _DETAIL_ORDER))
+    count = np.where(part, np.maximum(length // step, 1), 1)
+    row, number = expand_ranges(np.zeros_like(count), count)
+    width = length[row] // count[row]
+    starts = skymap.starts[row] + number * width
+    layer = skymap.distance
+    if layer is not None:
+        layer = replace(
+            layer,
+            mu_mpc=layer.mu_mpc[row],
+            sigma_mpc=layer.sigma_mpc[row],
+            norm_per_mpc2=layer.norm_per_mpc2[row],
+        )
+    return replace(
+        skymap,
+        starts=starts,
+        stops=starts + width,
+        density_per_sr=skymap.density_per_sr[row],
+        order_max=max(skymap.order_max, _DETAIL_ORDER),
+        distance=layer,
+    )
+
+
+def _covered_length(skymap: SkyMap, coverage: Coverage) -> Ints:
+    """Order-29 cells inside each map cell that are covered; (cells,)."""
+    covered = Spans.from_intervals(coverage.centre.starts, coverage.centre.stops)
+    cells = SpanTable(skymap.starts, skymap.stops, np.arange(skymap.starts.size + 1))
+    inside = cells.clip(covered)
+    before = np.concatenate(([0], np.cumsum(inside.stops - inside.starts)))
+    return np.asarray(np.diff(before[inside.offsets]), dtype=np.int64)
+
+
+def _without_covered(skymap: SkyMap, coverage: Coverage) -> LeftOver:
+    share = 1.0 - _covered_length(skymap, coverage) / (skymap.stops - skymap.starts)
+    return _normalised(skymap, skymap.density_per_sr * share, skymap.distance)
+
+
+def _taken(seen: SeenSource, chosen: NDArray[np.bool_]) -> tuple[Floats, Floats, Floats]:
+    """Integrals of p, r p and r² p over what would have been seen, summed per cell."""
+    overlay = seen.scene.overlay
+    space = seen.scene.space
+    sums = np.zeros((3, space.probability.size))
+    for place, nodes, share in seen.shares(chosen):
+        position, row = seen.scene.rows_of(place)
+        known = (overlay.cell[row] >= 0) & space.known[overlay.cell[row]]
+        position, row = position[known], row[known]
+        cell = overlay.cell[row]
+        mu, sigma = space.mu_mpc[cell], space.sigma_mpc[cell]
+        before = np.array(moments_beyond(0.0, mu, sigma))
+        for node in range(nodes.shape[1]):
+            after = np.array(moments_beyond(nodes[position, node], mu, sigma))
+            part = (before - after) * share[position, node] * overlay.probability[row]
+            for power in range(3):
+                sums[power] += sum_by(cell, part[power], space.probability.size)
+            before = after
+    return sums[0], sums[1], sums[2]
+
+
+def _rebuilt(
+    skymap: SkyMap, space: Space, taken: Floats, first: Floats, second: Floats
+) -> LeftOver:
+    """Take the seen part from each cell and refit its distance to the moments that are left."""
+    layer = skymap.distance
+    assert layer is not None  # the space was made from it
+    held = space.probability
+    left = np.maximum(held - taken, 0.0)
+    left[left < 1e-12 * held] = 0.0
+    touched = np.flatnonzero((taken > 0) & (left > 0))
+    mean, sd = moments(space.mu_mpc[touched], space.sigma_mpc[touched])
+    mean_left = (held[touched] * mean - first[touched]) / left[touched]
+    square_left = (held[touched] * (mean**2 + sd**2) - second[touched]) / left[touched]
+    spread = np.sqrt(np.maximum(square_left - mean_left**2, 0.0))
+    # What is left may be narrower or, with two heaps, wider than the form can be;
+    # then its mean is kept, and a spread that the form has.
+    spread = np.clip(spread, 1e-3 * mean_left, mean_left / _LEAST_MEAN_PER_SD)
+    mu, sigma, norm = (a.copy() for a in (layer.mu_mpc, layer.sigma_mpc, layer.norm_per_mpc2))
+    mu[touched], sigma[touched], norm[touched] = parameters_from_moments(mean_left, spread)
+    size = (skymap.stops - skymap.starts) * UNIT_SR
+    return _normalised(skymap, left / size, DistanceLayer(mu, sigma, norm))
+
+
+def _normalised(skymap: SkyMap, density: Floats, layer: DistanceLayer | None) -> LeftOver:
+    size = (skymap.stops - skymap.starts) * UNIT_SR
+    remaining = float(np.sum(density * size))
+    keep: Ints = np.flatnonzero(density > 0)
+    if layer is not None:
+        layer = DistanceLayer(layer.mu_mpc[keep], layer.sigma_mpc[keep], layer.norm_per_mpc2[keep])
+    rest = replace(
+        skymap,
+        starts=skymap.starts[keep],
+        stops=skymap.stops[keep],
+        density_per_sr=density[keep] / remaining if remaining > 0 else density[keep],
+        distance=layer,
+        label=f"{skymap.label}, left over",
+        path=None,
+        sha256=None,
+        notes=(),
+    )
+    return LeftOver(rest, remaining)
