@@ -6,7 +6,6 @@ from collections.abc import Sequence
 from dataclasses import replace
 
 import numpy as np
-from skytally.audit import Finding
 from skytally.exclusion import (
     AbsoluteLimit,
     DepthHistogram,
@@ -14,6 +13,7 @@ from skytally.exclusion import (
     ExclusionCurve,
     FadingPlane,
 )
+from skytally.findings import Finding
 from skytally.limits import SourceRow
 from skytally.results import Results, SourceInfo
 from skytally.tally import TallyRow

@@ -13,13 +13,14 @@ SOURCE = Path(skytally.__file__).parent
 
 # Bottom to top. A module may import modules of its own layer or below, no two one another.
 TABLE = (
-    "errors local_files spans moc distance_integrals distance magnitudes cosmology times grouping",
+    "errors findings local_files spans moc distance_integrals distance magnitudes cosmology times "
+    "grouping",
     "shapes raster working_order skymap cameras observations volume sources dust space",
     "healpix_table skymap_circle skymap_frames skymap_table skymap_io dust_io table_io log_cells "
     "log_columns log_regions log_io image_io region_text camera_io light_curve_io campaign_faults "
     "campaign_model campaign_data campaign_sources campaign",
     "selection footprints patchwork covered field_extinction overlay",
-    "refinement depth tally audit reach limits exclusion leftover",
+    "refinement depth tally audit_maps reach limits exclusion leftover",
     "results account serialise",
     "scaffold wording figure_style projection plots limit_plots sky_chart figures limit_figures",
     "report_tables limit_tables report circular outputs terminal api",

@@ -21,7 +21,7 @@ from deep_sky import (
 )
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from skytally.audit import extinction_findings
+from skytally.audit_maps import extinction_findings
 from skytally.cosmology import Cosmology
 from skytally.covered import Coverage, TallySettings
 from skytally.dust import Dust

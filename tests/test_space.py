@@ -11,7 +11,7 @@ from astropy import units as u
 from astropy.cosmology import WMAP9, Planck18, z_at_value
 from deep_sky import distance_map, map_of
 from scipy.integrate import quad, trapezoid
-from skytally.audit import map_findings
+from skytally.audit_maps import map_findings
 from skytally.cosmology import Cosmology
 from skytally.skymap import SkyMap
 from skytally.skymap_io import read_skymap

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from skytally import __version__
-from skytally.audit import extinction_findings, map_findings
+from skytally.audit_maps import extinction_findings, map_findings
 from skytally.campaign import LoadedCampaign, Site, Telescope
 from skytally.cosmology import Cosmology
 from skytally.covered import Coverage, TallySettings

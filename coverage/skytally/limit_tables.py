@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from skytally.audit import Finding
 from skytally.exclusion import AbsoluteLimit, ExclusionCurve, FadingPlane
+from skytally.findings import Finding
 from skytally.limits import SourceRow
 from skytally.report_tables import Cell, Column, Table, capped, columns_of
 from skytally.results import MapInfo, Results

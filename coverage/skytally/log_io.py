@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from difflib import get_close_matches
 from pathlib import Path
 
@@ -39,6 +39,7 @@ __all__ = ["ImageOptions", "LogOptions", "read_images", "read_log"]
 
 # Of the values of ObsLocTAP's execution_status, the one that means it happened.
 PERFORMED = "Performed"
+EARLY = "before the event"
 EXTINCTION_LIMIT = 50.0  # magnitudes; more is another unit
 
 
@@ -188,25 +189,28 @@ class _Reading:
         self._note_duration(duration, used)
         set_aside = self._listed()
         self._refuse_if_hopeless(len(used), set_aside)
-        return LogTable(
+        early = [i for i, aside in self._aside.items() if aside[0] == EARLY]
+        whole = LogTable(
             telescope=self._telescope,
             file=str(self._path),
             sha256=sha256,
             read=self._count + len(self._table.broken),
-            row=np.array(self._table.rows, dtype=np.int64)[used],
-            exposure=_objects(self._names)[used],
-            ra_deg=ra[used],
-            dec_deg=dec[used],
-            angle_deg=angle[used],
-            start_mjd=start[used],
-            duration_s=np.nan_to_num(duration[used], nan=0.0),
-            band=_objects(band)[used],
-            depth=depth[used],
-            extinction=extinction[used],
-            region=_objects(region)[used],
+            row=np.array(self._table.rows, dtype=np.int64),
+            exposure=_objects(self._names),
+            ra_deg=ra,
+            dec_deg=dec,
+            angle_deg=angle,
+            start_mjd=start,
+            duration_s=np.nan_to_num(duration, nan=0.0),
+            band=_objects(band),
+            depth=depth,
+            extinction=extinction,
+            region=_objects(region),
             set_aside=set_aside,
             notes=tuple(self._notes),
         )
+        early_rows = whole.take(np.array(sorted(early), dtype=np.int64))
+        return replace(whole.take(used), before_event=early_rows if early else None)
 
     def _cells(self, canonical: str) -> Sequence[str]:
         """Cells of a column; all empty where the file has none."""
@@ -430,7 +434,7 @@ class _Reading:
                 f"{(limit - start[index]) * 24:.2f} h before the event; the exposure is kept "
                 "as reference only, so correct the time if it is wrong."
             )
-            self._put_aside(index, "before the event", detail, "start")
+            self._put_aside(index, EARLY, detail, "start")
 
     def _set_aside_duplicates(self, keys: Sequence[object] | zip[object]) -> None:
         first: dict[str, int] = {}

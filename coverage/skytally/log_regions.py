@@ -75,20 +75,5 @@ def resolve_regions(
         )
         for place in np.flatnonzero(bad)
     )
-    columns = {
-        name: getattr(log, name)[~bad]
-        for name in (
-            "row",
-            "exposure",
-            "ra_deg",
-            "dec_deg",
-            "angle_deg",
-            "start_mjd",
-            "duration_s",
-            "band",
-            "depth",
-            "extinction",
-            "region",
-        )
-    }
-    return replace(log, **columns, set_aside=log.set_aside + aside), shapes, inputs
+    used = log.take(np.flatnonzero(~bad))
+    return replace(used, set_aside=log.set_aside + aside), shapes, inputs

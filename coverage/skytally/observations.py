@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -10,6 +10,21 @@ from numpy.typing import NDArray
 __all__ = ["LogTable", "Observations", "SetAside", "night_of"]
 
 SECONDS_PER_DAY = 86400.0
+
+# The fields of `LogTable` that hold one value per accepted row.
+_COLUMNS = (
+    "row",
+    "exposure",
+    "ra_deg",
+    "dec_deg",
+    "angle_deg",
+    "start_mjd",
+    "duration_s",
+    "band",
+    "depth",
+    "extinction",
+    "region",
+)
 
 
 @dataclass(frozen=True)
@@ -84,6 +99,12 @@ class LogTable:
         The other rows.
     notes : tuple of str
         What the reader noticed or assumed about the file as a whole.
+    before_event : LogTable or None
+        The rows set aside as taken before the event, for the audit of clocks.
+    modified_mjd : float or None
+        When the file was last changed (UTC), None where that is not known.
+    fault : str
+        Why the log could not be read at all; empty where it could. Then it has no rows.
     """
 
     telescope: str
@@ -103,9 +124,16 @@ class LogTable:
     region: NDArray[np.object_]
     set_aside: tuple[SetAside, ...] = ()
     notes: tuple[str, ...] = ()
+    before_event: LogTable | None = None
+    modified_mjd: float | None = None
+    fault: str = ""
 
     def __len__(self) -> int:
         return int(self.row.size)
+
+    def take(self, rows: NDArray[np.int64]) -> LogTable:
+        """Keep the accepted rows at these positions; all else stays as it is."""
+        return replace(self, **{name: getattr(self, name)[rows] for name in _COLUMNS})
 
 
 @dataclass(frozen=True, eq=False)

@@ -7,7 +7,6 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from skytally.audit import Finding
 from skytally.exclusion import (
     AbsoluteLimit,
     DepthHistogram,
@@ -15,6 +14,7 @@ from skytally.exclusion import (
     ExclusionCurve,
     FadingPlane,
 )
+from skytally.findings import Finding
 from skytally.limits import SourceRow
 from skytally.skymap import SkyMap
 from skytally.spans import Spans

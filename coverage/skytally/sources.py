@@ -48,18 +48,6 @@ class Detection:
         return np.where(np.isnan(beyond), 0.0, self.plateau * expit(-beyond / self.width))
 
     @property
-    def is_step(self) -> bool:
-        """Whether detection is certain down to the limit and impossible beyond."""
-        return self.width == 0 and self.offset == 0 and self.plateau == 1
-
-    @property
-    def range_mag(self) -> tuple[float, float]:
-        """Range of m − limit over which the efficiency falls from its plateau to nothing."""
-        # expit(25) differs from 1 by 1e-11; a step needs some room on either side.
-        reach = max(25 * self.width, 0.05)
-        return self.offset - reach, self.offset + reach
-
-    @property
     def text(self) -> str:
         """The efficiency in words."""
         place = "the limit"

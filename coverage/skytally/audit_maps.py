@@ -1,44 +1,17 @@
-"""Findings: what was noticed about the inputs, what was done, and what to do."""
+"""Findings on the maps and on what they are tallied with."""
 
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
 
+from skytally.findings import Finding
 from skytally.skymap import SkyMap
 from skytally.space import Space
 
-__all__ = ["Finding", "extinction_findings", "map_findings"]
+__all__ = ["extinction_findings", "map_findings"]
 
 # Greatest relative difference between a map's header and its own cells.
 _HEADER_TOLERANCE = 1e-3
-
-
-@dataclass(frozen=True)
-class Finding:
-    """Something that a reader of the numbers must know.
-
-    Attributes
-    ----------
-    code : str
-        Stable name of the kind of finding.
-    severity : {"error", "caution", "note"}
-        The numbers cannot be right; look; good to know.
-    subject : str
-        The telescope, map version or band concerned.
-    rows : tuple of int
-        Rows of the log, if any.
-    text, done, remedy : str
-        What was seen, what the tally did about it, and what to do.
-    """
-
-    code: str
-    severity: str
-    subject: str
-    rows: tuple[int, ...]
-    text: str
-    done: str
-    remedy: str
 
 
 def map_findings(spaces: Sequence[tuple[SkyMap, Space | None]]) -> list[Finding]:
