@@ -11,9 +11,13 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pytest
 import skytally
+from astropy.table import Table
 from skytally import cli, outputs
+from skytally.account import account
+from skytally.campaign import load_campaign
 from skytally.cli import app
 from skytally.errors import CampaignError, LogError, OutputError
 from skytally.results import Results
@@ -139,9 +143,47 @@ def test_a_report_without_pdf_ends_with_three(
 
 def test_regions_writes_moc_files(campaign: Path, tmp_path: Path) -> None:
     done = run("regions", campaign, "--out", tmp_path / "out")
-    assert (done.exit_code, done.stdout) == (0, "")
+    assert done.exit_code == 0
     names = {p.name for p in (tmp_path / "out").iterdir()}
-    assert names == {"heron.fits", "plover.fits", "all.fits", "manifest.json"}
+    assert names == {"heron.fits", "plover.fits", "all.fits", "left-over", "manifest.json"}
+
+
+@pytest.mark.parametrize("version", ["1 first", "3 update"])
+def test_regions_writes_what_is_left_of_a_map(version: str, tmp_path: Path) -> None:
+    example = Path(__file__).parents[1] / "examples/lantern-7/campaign.toml"
+    done = run("regions", example, "--out", tmp_path / "out", "--map", version)
+    assert done.exit_code == 0, done.stderr
+    files = sorted(p.name for p in (tmp_path / "out/left-over").iterdir())
+    lines = done.stdout.splitlines()
+    assert version in lines[0]
+    assert "still out there unseen" in lines[0]
+    assert len(files) == len(lines) - 1 >= 1
+    results = account(load_campaign(example))
+    all_covered = results.row(map=version).probability
+    for line in lines[1:]:
+        share, name = line.split("%")[0], line.rpartition("left-over/")[2].rstrip(")")
+        # Read back by a general reader: the densities of all cells sum to one.
+        table = Table.read(tmp_path / "out/left-over" / name)
+        order = np.asarray(np.log2(table["UNIQ"] / 4) // 2, dtype=int)
+        area = 4 * np.pi / (12 * 4.0**order)
+        assert np.sum(area * table["PROBDENSITY"]) == pytest.approx(1, abs=1e-9)
+        if name == "coverage.fits.gz":
+            assert float(share) / 100 == pytest.approx(1 - all_covered, abs=0.0006)
+        else:
+            wanted = {
+                row.source: row.probability
+                for row in results.source_rows
+                if (row.map, row.telescope, row.band, row.night) == (version, None, None, None)
+            }
+            source = line.split("  as ")[1].split(" (")[0]
+            assert float(share) / 100 == pytest.approx(1 - wanted[source], abs=0.0011)
+
+
+def test_regions_refuses_an_unknown_map_version(campaign: Path, tmp_path: Path) -> None:
+    done = run("regions", campaign, "--out", tmp_path / "out", "--map", "9")
+    assert (done.exit_code, done.stdout) == (2, "")
+    assert "there is no map version '9'" in done.stderr
+    assert not (tmp_path / "out").exists()
 
 
 @pytest.mark.parametrize(

@@ -49,7 +49,7 @@ from skytally.spans import DEG2_PER_SR, Spans
 from skytally.tally import TallyRow, maps_in_force, tally_as_pointed, tally_maps
 from skytally.times import hours_since, mjd_to_iso
 
-__all__ = ["account"]
+__all__ = ["account", "lay_coverage"]
 
 Floats = NDArray[np.float64]
 
@@ -65,7 +65,22 @@ class _Depths(TypedDict):
     depth_histograms: tuple[DepthHistogram, ...]
 
 
-def account(campaign: LoadedCampaign, progress: Progress | None = None) -> Results:
+def lay_coverage(campaign: LoadedCampaign, progress: Progress | None = None) -> Coverage:
+    """Lay every footprint of a campaign on the sky and cut the patchwork.
+
+    ``progress`` is as for `account`, and is told of the first six tenths.
+    """
+    footprints = lay_footprints(campaign, _part(progress, 0.0, 0.4))
+    footprints = refine_footprints(
+        footprints, campaign.maps, campaign.settings.bracket, _part(progress, 0.4, 0.6)
+    )
+    extinction = field_extinction(footprints, campaign.dust, campaign.extinction_coefficients)
+    return Coverage.build(footprints, extinction)
+
+
+def account(
+    campaign: LoadedCampaign, progress: Progress | None = None, coverage: Coverage | None = None
+) -> Results:
     """Tally a campaign on every map version.
 
     Parameters
@@ -74,19 +89,13 @@ def account(campaign: LoadedCampaign, progress: Progress | None = None) -> Resul
         As `load_campaign` returns it.
     progress : callable, optional
         Called with a stage in words and the fraction of the whole that is done.
+    coverage : Coverage, optional
+        What `lay_coverage` made of the same campaign; made here if left out.
     """
-
-    def part(low: float, high: float) -> Progress | None:
-        if progress is None:
-            return None
-        return lambda stage, done: progress(stage, low + (high - low) * done)
-
     settings = campaign.settings
-    footprints = lay_footprints(campaign, part(0.0, 0.4))
-    footprints = refine_footprints(footprints, campaign.maps, settings.bracket, part(0.4, 0.6))
+    coverage = lay_coverage(campaign, progress) if coverage is None else coverage
+    footprints = coverage.footprints
     dust = campaign.dust, campaign.extinction_coefficients
-    extinction = field_extinction(footprints, *dust)
-    coverage = Coverage.build(footprints, extinction)
     cosmology = Cosmology.named(settings.cosmology)
     spaces = [(skymap, Space.of(skymap, cosmology)) for skymap in campaign.maps]
     tally_settings = TallySettings(
@@ -95,7 +104,7 @@ def account(campaign: LoadedCampaign, progress: Progress | None = None) -> Resul
     if progress is not None:
         progress("Tallying", 0.6)
     rows, timelines = tally_maps(coverage, spaces, tally_settings)
-    depths = _third_dimension(campaign, coverage, rows, spaces, part(0.7, 0.95))
+    depths = _third_dimension(campaign, coverage, rows, spaces, _part(progress, 0.7, 0.95))
     if progress is not None:
         progress("Tallying as pointed", 0.95)
     return Results(
@@ -107,7 +116,7 @@ def account(campaign: LoadedCampaign, progress: Progress | None = None) -> Resul
             settings.revisit_visits,
             settings.revisit_gap_minutes,
             settings.bracket,
-            _extinction_text(campaign, extinction, coverage),
+            _extinction_text(coverage),
             settings.cosmology,
         ),
         inputs=tuple(InputFile(*item) for item in campaign.inputs),
@@ -135,6 +144,13 @@ def account(campaign: LoadedCampaign, progress: Progress | None = None) -> Resul
         sources=tuple(SourceInfo(source.name, source.text) for source in campaign.sources),
         **depths,
     )
+
+
+def _part(progress: Progress | None, low: float, high: float) -> Progress | None:
+    """Let a stage report from 0 to 1 what is from low to high of the whole."""
+    if progress is None:
+        return None
+    return lambda stage, done: progress(stage, low + (high - low) * done)
 
 
 def _third_dimension(
@@ -175,10 +191,10 @@ def _third_dimension(
     return found
 
 
-def _extinction_text(campaign: LoadedCampaign, extinction: Floats, coverage: Coverage) -> str:
+def _extinction_text(coverage: Coverage) -> str:
     """Say in words whether limits are corrected for Galactic extinction."""
     limited = np.isfinite(coverage.observations.depth)
-    known = np.isfinite(extinction[limited])
+    known = np.isfinite(coverage.extinction[limited])
     if not known.any():
         return "not corrected for Galactic extinction"
     if known.all():

@@ -14,10 +14,12 @@ from astropy.time import Time
 from astropy_healpix import lonlat_to_healpix
 from mocpy import MOC
 
-from skytally.account import account
+from skytally.account import account, lay_coverage
 from skytally.campaign import LoadedCampaign, load_campaign
+from skytally.covered import Coverage
 from skytally.errors import UsageError
 from skytally.footprints import Progress
+from skytally.leftover import LeftOver, left_overs
 from skytally.moc import from_mocpy, to_mocpy
 from skytally.results import Results
 from skytally.skymap import SkyMap
@@ -86,13 +88,18 @@ class Campaign:
         """
         if progress is None:
             return self._results
-        results = account(self.loaded, progress)
-        self.__dict__["_results"] = results
+        coverage = lay_coverage(self.loaded, progress)
+        results = account(self.loaded, progress, coverage)
+        self.__dict__.update(_coverage=coverage, _results=results)
         return results
 
     @cached_property
+    def _coverage(self) -> Coverage:
+        return lay_coverage(self.loaded)
+
+    @cached_property
     def _results(self) -> Results:
-        return account(self.loaded)
+        return account(self.loaded, coverage=self._coverage)
 
     def exposures(self) -> QTable:
         """Return the accepted exposures in order of their start.
@@ -154,15 +161,24 @@ class Campaign:
         UsageError
             If there is no such version.
         """
-        if version is None:
-            return self.loaded.maps[-1]
-        for skymap in self.loaded.maps:
-            if skymap.label == version:
-                return skymap
-        raise UsageError(
-            f"there is no map version {version!r}",
-            remedy=f"Choose one of: {', '.join(self.map_versions)}.",
-        )
+        return self.loaded.map(version)
+
+    def left_over(self, map: str | None = None) -> dict[str | None, LeftOver]:
+        """Return what is left of a map version, the newest if none is named.
+
+        Returns
+        -------
+        dict
+            Under None, the map without the covered sky; under each source's
+            name, without what would have been seen of it (only where the map
+            has distances).
+
+        Raises
+        ------
+        UsageError
+            If there is no such version.
+        """
+        return left_overs(self.loaded, self._coverage, self.loaded.map(map))
 
     def probability(self, region: MOC | Spans, map: str | None = None) -> float:
         """Return the probability inside a region, on the newest map or on a named version."""

@@ -9,6 +9,7 @@ from pathlib import Path
 from skytally.cameras import Camera
 from skytally.cosmology import DEFAULT_COSMOLOGY
 from skytally.dust import Dust
+from skytally.errors import UsageError
 from skytally.observations import LogTable
 from skytally.shapes import Shape
 from skytally.skymap import SkyMap
@@ -150,3 +151,21 @@ class LoadedCampaign:
     dust: Dust | None = None
     extinction_coefficients: Mapping[str, float] = field(default_factory=dict)
     dust_path: str | None = None
+
+    def map(self, version: str | None = None) -> SkyMap:
+        """Return one map version, the newest if none is named.
+
+        Raises
+        ------
+        UsageError
+            If there is no such version; the message lists those there are.
+        """
+        if version is None:
+            return self.maps[-1]
+        for skymap in self.maps:
+            if skymap.label == version:
+                return skymap
+        raise UsageError(
+            f"there is no map version {version!r}",
+            remedy=f"Choose one of: {', '.join(repr(m.label) for m in self.maps)}.",
+        )

@@ -26,6 +26,7 @@ from skytally import __version__
 from skytally.errors import OutputError, SkytallyError, UsageError
 
 if TYPE_CHECKING:
+    from skytally.campaign import LoadedCampaign
     from skytally.footprints import Progress
     from skytally.results import Results
 
@@ -82,6 +83,10 @@ CampaignPath = Annotated[
 ]
 OutDir = Annotated[
     Path, typer.Option("--out", "-o", metavar="DIR", help="Folder to write to.", show_default=False)
+]
+MapVersion = Annotated[
+    str | None,
+    typer.Option("--map", metavar="VERSION", help="Map version; the newest if not given."),
 ]
 
 
@@ -155,10 +160,7 @@ def report(
 @app.command("tally")
 def tally(
     campaign: CampaignPath,
-    map: Annotated[
-        str | None,
-        typer.Option("--map", metavar="VERSION", help="Map version; the newest if not given."),
-    ] = None,
+    map: MapVersion = None,
     json: Annotated[bool, typer.Option("--json", help="Print JSON instead of tables.")] = False,
 ) -> None:
     """Show the numbers on the terminal."""
@@ -172,18 +174,38 @@ def tally(
 
 
 @app.command("regions")
-def regions(campaign: CampaignPath, out: OutDir) -> None:
-    """Write what each telescope covered as MOC files."""
-    from skytally.outputs import write_regions
+def regions(campaign: CampaignPath, out: OutDir, map: MapVersion = None) -> None:
+    """Write what each telescope covered as MOC files, and what is left of a map."""
+    from skytally.account import account, lay_coverage
+    from skytally.leftover import left_overs
+    from skytally.outputs import left_over_files, write_regions
+    from skytally.terminal import render_left_over
 
-    results = _tally(campaign, "tally --json lists them all")
-    written = write_regions(results, out)
+    with _progress("Reading") as progress:
+        loaded = _load(campaign)
+        skymap = loaded.map(map)
+        coverage = lay_coverage(loaded, progress)
+        results = account(loaded, progress, coverage)
+        left = left_overs(loaded, coverage, skymap)
+    _report_faults(loaded, results, "tally --json lists them all")
+    written = write_regions(results, out, left)
+    remaining = {source: one.remaining for source, one in left.items()}
+    _print(render_left_over(skymap.label, remaining, left_over_files(left), sys.stdout))
     _say(f"Wrote {len(written)} files to {out}")
 
 
 def _tally(campaign: str, rest: str) -> Results:
     """Load a campaign and account for it, with progress and with the faults of its rows."""
     from skytally.account import account
+
+    with _progress("Reading") as progress:
+        loaded = _load(campaign)
+        results = account(loaded, progress)
+    _report_faults(loaded, results, rest)
+    return results
+
+
+def _load(campaign: str) -> LoadedCampaign:
     from skytally.campaign import load_campaign
     from skytally.local_files import is_url
 
@@ -192,9 +214,11 @@ def _tally(campaign: str, rest: str) -> Results:
             f"{campaign!r} is a URL, expected the path of a file on this machine",
             remedy="Download the campaign and what it names first; nothing is fetched.",
         )
-    with _progress("Reading") as progress:
-        loaded = load_campaign(campaign)
-        results = account(loaded, progress)
+    return load_campaign(campaign)
+
+
+def _report_faults(loaded: LoadedCampaign, results: Results, rest: str) -> None:
+    """Say which rows are set aside as faulty, and what was noted."""
     faults = [
         f"{item.file}, row {item.row}: {item.detail}"
         for telescope in loaded.telescopes
@@ -203,7 +227,6 @@ def _tally(campaign: str, rest: str) -> Results:
     ]
     _list(faults, "row set aside", "rows set aside", rest)
     _list([f"Note: {note}" for note in results.notes], "note", "notes", rest)
-    return results
 
 
 def _list(lines: Sequence[str], one: str, many: str, rest: str) -> None:

@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from skytally.campaign import LoadedCampaign
 from skytally.cosmology import Cosmology
 from skytally.covered import Coverage
 from skytally.distance import moments, moments_beyond, parameters_from_moments
@@ -19,7 +20,7 @@ from skytally.sources import Source
 from skytally.space import Space
 from skytally.spans import LINE_ORDER, UNIT_SR, Ints, Spans, SpanTable
 
-__all__ = ["LeftOver", "left_over"]
+__all__ = ["LeftOver", "left_over", "left_overs"]
 
 Floats = NDArray[np.float64]
 
@@ -85,6 +86,23 @@ def left_over(
     seen = SeenSource.of(source, scene, coverage, event_mjd)
     taken, first, second = _taken(seen, np.ones(len(coverage.observations), dtype=bool))
     return _rebuilt(fine, space, taken, first, second)
+
+
+def left_overs(
+    campaign: LoadedCampaign, coverage: Coverage, skymap: SkyMap
+) -> dict[str | None, LeftOver]:
+    """Take away what was covered, under None, and what each source would have shown of itself.
+
+    Sources are left out where the map has no distances.
+    """
+    found: dict[str | None, LeftOver] = {}
+    cosmology = Cosmology.named(campaign.settings.cosmology)
+    dust = campaign.dust, campaign.extinction_coefficients
+    for source in (None, *campaign.sources):
+        left = left_over(coverage, skymap, source, campaign.event_mjd, cosmology, *dust)
+        if left is not None:
+            found[None if source is None else source.name] = left
+    return found
 
 
 def _refined(skymap: SkyMap, coverage: Coverage) -> SkyMap:

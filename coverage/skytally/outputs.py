@@ -31,13 +31,15 @@ from skytally.errors import OutputError
 from skytally.figure_style import Drawing
 from skytally.figures import draw_figures
 from skytally.footprints import Progress
+from skytally.leftover import LeftOver
 from skytally.moc import write_moc
 from skytally.report import render_html, render_pdf
 from skytally.results import Results
 from skytally.serialise import to_json, to_table
+from skytally.skymap_io import write_skymap
 from skytally.spans import Spans
 
-__all__ = ["MANIFEST_FORMAT", "file_stems", "write_outputs", "write_regions"]
+__all__ = ["MANIFEST_FORMAT", "file_stems", "left_over_files", "write_outputs", "write_regions"]
 
 MANIFEST_FORMAT = "skytally/manifest"
 MANIFEST = "manifest.json"
@@ -57,7 +59,9 @@ _LIBRARIES = (
 _REPORT_FILES = frozenset(
     {"report.html", "report.pdf", "circular.txt", "tally.json", "tally.ecsv", MANIFEST}
 )
-_REGION_FILE = re.compile(r"(regions/)?[a-z0-9][a-z0-9-]{0,79}\.fits")
+_REGION_FILE = re.compile(
+    r"((regions/)?[a-z0-9][a-z0-9-]{0,79}\.fits|left-over/[a-z0-9][a-z0-9-]{0,79}\.fits\.gz)"
+)
 # Names that a file cannot have on every system, and "all", which is the union.
 _RESERVED = frozenset(
     {"all", "con", "prn", "aux", "nul"}
@@ -127,14 +131,30 @@ def write_outputs(
     return written
 
 
-def write_regions(results: Results, out_dir: str | Path) -> tuple[Path, ...]:
-    """Write a MOC per telescope, one of all together, and the manifest.
+def write_regions(
+    results: Results, out_dir: str | Path, left: Mapping[str | None, LeftOver] | None = None
+) -> tuple[Path, ...]:
+    """Write a MOC per telescope, one of all together, what is left, and the manifest.
 
-    Arguments, result and errors as in `write_outputs`.
+    Arguments, result and errors as in `write_outputs`; ``left`` is what
+    `left_overs` returns for one map version.
     """
-    return _publish(
-        Path(out_dir), "regions", results, lambda folder: _render_regions(results, folder)
-    )
+    left = {} if left is None else left
+
+    def render(folder: Path) -> None:
+        _render_regions(results, folder)
+        if left:
+            (folder / "left-over").mkdir()
+        for source, name in left_over_files(left).items():
+            write_skymap(folder / name, left[source].skymap)
+
+    return _publish(Path(out_dir), "regions", results, render)
+
+
+def left_over_files(left: Mapping[str | None, LeftOver]) -> dict[str | None, str]:
+    """Name the file of what is left without covered sky (None) and without each source."""
+    stems = file_stems("coverage" if source is None else source for source in left)
+    return {source: f"left-over/{stem}.fits.gz" for source, stem in zip(left, stems)}
 
 
 def file_stems(names: Iterable[str]) -> tuple[str, ...]:

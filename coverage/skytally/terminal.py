@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import io
 import textwrap
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import TextIO
 
 from rich import box
@@ -33,7 +33,7 @@ from skytally.wording import (
     version_text,
 )
 
-__all__ = ["WIDTH", "render_answer", "render_tally"]
+__all__ = ["WIDTH", "render_answer", "render_left_over", "render_tally"]
 
 WIDTH = 80
 _NAME_WIDTH = 16
@@ -77,6 +77,26 @@ def render_tally(results: Results, stream: TextIO) -> str:
 
 
 Section = list[tuple[str, ...]]
+
+
+def render_left_over(
+    version: str,
+    remaining: Mapping[str | None, float],
+    files: Mapping[str | None, str],
+    stream: TextIO,
+) -> str:
+    """Return a line for each file of what is left: the chance that it is still there, unseen.
+
+    ``remaining`` and ``files`` are keyed by source, None for covered sky.
+    """
+    page = _Page(stream)
+    page.write_line(
+        f"The chance, on {version_text(version)}, that it is still out there unseen:", style="bold"
+    )
+    for source, share in remaining.items():
+        what = "wherever no footprint lies" if source is None else f"as {source}"
+        page.write_line(f"{percent(share):>7}  {what} ({files[source]})")
+    return page.text()
 
 
 class _Page:
