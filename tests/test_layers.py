@@ -20,7 +20,7 @@ TABLE = (
     "log_columns log_regions log_io image_io region_text camera_io light_curve_io campaign_faults "
     "campaign_model campaign_data campaign_sources campaign",
     "selection footprints patchwork covered field_extinction overlay",
-    "refinement depth tally audit_maps reach limits exclusion leftover",
+    "refinement depth tally sharing audit_maps reach limits exclusion leftover",
     "results account serialise",
     "scaffold wording figure_style projection plots limit_plots sky_chart figures limit_figures",
     "report_tables limit_tables report circular outputs terminal api",

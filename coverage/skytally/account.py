@@ -43,6 +43,7 @@ from skytally.results import (
     SourceInfo,
     TelescopeInfo,
 )
+from skytally.sharing import share_maps
 from skytally.skymap import SkyMap
 from skytally.space import Space
 from skytally.spans import DEG2_PER_SR, Spans
@@ -129,6 +130,7 @@ def account(
         rows=tuple(rows),
         timelines=tuple(timelines),
         as_pointed=tuple(tally_as_pointed(coverage, campaign.maps)),
+        sharing=tuple(share_maps(coverage, campaign.maps, campaign.event_mjd)),
         exposures=_exposures(coverage, campaign),
         set_aside=tuple(
             SetAsideInfo(a.telescope, a.file, a.row, a.exposure, a.reason, a.detail)

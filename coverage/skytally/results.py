@@ -16,6 +16,7 @@ from skytally.exclusion import (
 )
 from skytally.findings import Finding
 from skytally.limits import SourceRow
+from skytally.sharing import Sharing
 from skytally.skymap import SkyMap
 from skytally.spans import Spans
 from skytally.tally import AsPointed, TallyRow, Timeline
@@ -210,6 +211,7 @@ class Results:
     absolute_limits: tuple[AbsoluteLimit, ...] = ()
     distance_profiles: tuple[DistanceProfile, ...] = ()
     depth_histograms: tuple[DepthHistogram, ...] = ()
+    sharing: tuple[Sharing, ...] = ()
 
     @property
     def newest(self) -> MapInfo:

@@ -70,7 +70,7 @@ _SELECTED_BY = ("map", "telescope", "band", "night")
 # The parts of the results that belong to one map version each.
 _BY_MAP = (
     *("rows", "timelines", "source_rows", "exclusions", "fading_planes"),
-    *("absolute_limits", "distance_profiles", "depth_histograms"),
+    *("absolute_limits", "distance_profiles", "depth_histograms", "sharing"),
 )
 
 
@@ -132,6 +132,7 @@ def to_dict(results: Results) -> dict[str, Any]:
         "rows": _rows(results),
         "timelines": _plain(results.timelines),
         "as_pointed": _plain(results.as_pointed),
+        "between_telescopes": _plain(results.sharing),
         "exposures": _plain(results.exposures),
         "set_aside": _plain(results.set_aside),
         "sources": _plain(results.sources),

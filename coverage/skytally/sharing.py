@@ -1,0 +1,211 @@
+"""Between telescopes: what pairs share, what each added, and which sets covered what.
+
+Every covered place is held by exactly one set of telescopes, so all that is said
+here is a sum over such sets. Only what a telescope added also asks who was first.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from skytally.covered import Coverage
+from skytally.grouping import sum_by
+from skytally.patchwork import Patchwork
+from skytally.skymap import SkyMap
+from skytally.spans import DEG2_PER_SR, Ints
+from skytally.times import hours_since
+
+__all__ = ["Sharing", "TelescopeSet", "share_maps"]
+
+Floats = NDArray[np.float64]
+Bools = NDArray[np.bool_]
+
+# Ends this close are one moment: start plus duration, as MJD in double precision,
+# is rounded at about a microsecond.
+_MOMENT_DAYS = 1e-3 / 86400.0
+
+
+@dataclass(frozen=True)
+class TelescopeSet:
+    """Sky that exactly these telescopes covered, and no other.
+
+    Attributes
+    ----------
+    telescopes : tuple of str
+        At least one, in the order of the campaign.
+    probability : float
+        Fraction of the map's total.
+    area_deg2 : float
+        Solid angle.
+    """
+
+    telescopes: tuple[str, ...]
+    probability: float
+    area_deg2: float
+
+
+@dataclass(frozen=True)
+class Sharing:
+    """How the telescopes' coverage of one map version overlaps.
+
+    Per telescope in the order of ``telescopes``, which is that of the campaign;
+    probabilities are fractions of the map's total.
+
+    Attributes
+    ----------
+    map : str
+        The map version.
+    telescopes : tuple of str
+        All of them, those without an exposure too.
+    first_hours : tuple of (float or None)
+        From the event to the end of each telescope's first exposure that
+        covered anything; None where none did.
+    added : tuple of float
+        Probability of the sky that each was the first to complete, by the end
+        of the exposure that first covered each patch; where several completed
+        it within the same millisecond, split equally. Sums to the union.
+    unique : tuple of float
+        Probability that each covered alone, which is by definition what the
+        union loses without it.
+    credit : tuple of float
+        Each patch's probability split equally among the telescopes that
+        covered it. Sums to the union.
+    pairs, pairs_low, pairs_high : tuples of tuples of float
+        Symmetric: probability that both of a pair covered, with its bracket. On
+        the diagonal, what one telescope covered.
+    sets : tuple of TelescopeSet
+        Disjoint; the most probable first. They sum to the union.
+    """
+
+    map: str
+    telescopes: tuple[str, ...]
+    first_hours: tuple[float | None, ...]
+    added: tuple[float, ...]
+    unique: tuple[float, ...]
+    credit: tuple[float, ...]
+    pairs: tuple[tuple[float, ...], ...]
+    pairs_low: tuple[tuple[float, ...], ...]
+    pairs_high: tuple[tuple[float, ...], ...]
+    sets: tuple[TelescopeSet, ...]
+
+
+@dataclass(frozen=True, eq=False)
+class _Holders:
+    """The distinct sets of telescopes that hold the sets of a patchwork.
+
+    Attributes
+    ----------
+    held : bool array, shape (k, telescopes)
+        Which telescopes belong to each; at least one does.
+    which : int64 array, shape (sets,)
+        Row of ``held`` for each set of the patchwork.
+    """
+
+    held: Bools
+    which: Ints
+
+    @classmethod
+    def of(cls, patchwork: Patchwork, telescope: Ints, telescopes: int) -> _Holders:
+        """Look at a patchwork by the telescope, shape (footprints,), of each footprint."""
+        held = np.zeros((patchwork.sets, telescopes), dtype=bool)
+        held[patchwork.set_of_member, telescope[patchwork.members]] = True
+        packed, which = np.unique(np.packbits(held, axis=1), axis=0, return_inverse=True)
+        held = np.unpackbits(packed, axis=1, count=telescopes).astype(bool)
+        return cls(held, which.reshape(-1).astype(np.int64))
+
+    def sums(self, amount: Floats) -> Floats:
+        """Sum what each set of the patchwork is worth, shape (k,)."""
+        return sum_by(self.which, amount, self.held.shape[0])
+
+    def pairs(self, amount: Floats) -> tuple[tuple[float, ...], ...]:
+        """Sum what each pair of telescopes holds together."""
+        both = self.held.T @ (self.held * self.sums(amount)[:, None])
+        # A sum rounds as its order has it; one half stands for both.
+        both = np.triu(both) + np.triu(both, 1).T
+        return tuple(tuple(map(float, row)) for row in both)
+
+
+@dataclass(frozen=True, eq=False)
+class _Arrivals:
+    """Who completed each set of the patchwork first; one row per set and telescope.
+
+    Attributes
+    ----------
+    group, telescope : int64 arrays, shape (n,)
+        The set, and a telescope that completed it first.
+    part : float64 array, shape (n,)
+        One over the number of telescopes that did so at the same moment.
+    first_end_mjd : float64 array, shape (telescopes,)
+        End of each telescope's first exposure that covered anything; inf for none.
+    """
+
+    group: Ints
+    telescope: Ints
+    part: Floats
+    first_end_mjd: Floats
+
+    @classmethod
+    def of(cls, coverage: Coverage) -> _Arrivals:
+        o = coverage.observations
+        group, exposure = coverage.visits
+        telescope, end = o.telescope[exposure], o.end_mjd[exposure]
+        first = np.full(coverage.centre.sets, np.inf)
+        np.minimum.at(first, group, end)
+        first_end = np.full(len(o.telescopes), np.inf)
+        np.minimum.at(first_end, telescope, end)
+        early = end <= first[group] + _MOMENT_DAYS
+        pair = np.unique(group[early] * len(o.telescopes) + telescope[early])
+        group, telescope = np.divmod(pair, len(o.telescopes))
+        together = np.bincount(group, minlength=coverage.centre.sets)
+        return cls(group, telescope, 1.0 / together[group], first_end)
+
+    def added(self, probability: Floats) -> Floats:
+        """Sum what each telescope was the first to complete, shape (telescopes,)."""
+        weight = probability[self.group] * self.part
+        return sum_by(self.telescope, weight, self.first_end_mjd.size)
+
+
+def share_maps(coverage: Coverage, maps: Sequence[SkyMap], event_mjd: float) -> Iterator[Sharing]:
+    """Say for every map version how the telescopes' coverage overlaps."""
+    names = coverage.observations.telescopes
+    centre, inner, outer = (
+        _Holders.of(patchwork, coverage.footprints.telescope, len(names))
+        for patchwork in (coverage.centre, coverage.inner, coverage.outer)
+    )
+    arrivals = _Arrivals.of(coverage)
+    first_hours = tuple(
+        hours_since(float(end), event_mjd) if np.isfinite(end) else None
+        for end in arrivals.first_end_mjd
+    )
+    area_deg2 = centre.sums(coverage.centre.area_sr) * DEG2_PER_SR
+    size = centre.held.sum(axis=1)
+    for skymap in maps:
+        by_set = coverage.centre.measure(skymap.probability)
+        probability = centre.sums(by_set)
+        yield Sharing(
+            map=skymap.label,
+            telescopes=tuple(names),
+            first_hours=first_hours,
+            added=_floats(arrivals.added(by_set)),
+            unique=_floats(np.where(size == 1, probability, 0.0) @ centre.held),
+            credit=_floats((probability / size) @ centre.held),
+            pairs=centre.pairs(by_set),
+            pairs_low=inner.pairs(coverage.inner.measure(skymap.probability)),
+            pairs_high=outer.pairs(coverage.outer.measure(skymap.probability)),
+            sets=tuple(
+                TelescopeSet(
+                    tuple(name for name, held in zip(names, centre.held[row]) if held),
+                    float(probability[row]),
+                    float(area_deg2[row]),
+                )
+                for row in np.lexsort((-area_deg2, -probability))
+            ),
+        )
+
+
+def _floats(values: Floats) -> tuple[float, ...]:
+    return tuple(map(float, values))
