@@ -15,7 +15,7 @@ SOURCE = Path(skytally.__file__).parent
 TABLE = (
     "errors findings local_files spans moc distance_integrals distance magnitudes cosmology times "
     "grouping",
-    "shapes raster working_order skymap cameras observations volume sources dust space",
+    "shapes raster working_order skymap cameras observations volume sources dust space visibility",
     "healpix_table skymap_circle skymap_frames skymap_table skymap_io dust_io table_io log_cells "
     "log_columns log_regions log_io image_io region_text camera_io light_curve_io campaign_faults "
     "campaign_model campaign_data campaign_sources campaign",
