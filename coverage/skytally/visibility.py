@@ -6,10 +6,11 @@ import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
+
+from skytally.shapes import lonlat_to_vector
 
 __all__ = ["Visibility", "airmass_at", "sun_altitude", "visibility"]
 
@@ -20,6 +21,7 @@ Floats = NDArray[np.float64]
 _SUPPORT_SECONDS = 1800.0
 # So are the Sun and the Moon, the latter within 0.001 deg over an hour.
 _NODES_PER_DAY = 24.0
+_FAR_KM = 1e18
 
 
 @dataclass(frozen=True, eq=False)
@@ -82,15 +84,12 @@ def visibility(
     known = np.isfinite(ra) & np.isfinite(dec) & np.isfinite(time)
     found = np.full((4, time.size), np.nan)
     if known.any():
-        with _Sky(time[known], longitude_deg, latitude_deg, height_m).open() as sky:
-            pointing = sky.of_stars(ra[known], dec[known])
-            sun, moon = sky.of_body("sun"), sky.of_body("moon")
-        found[:, known] = (
-            _altitude(pointing),
-            _altitude(sun),
-            _angle(pointing, moon),
-            _altitude(moon),
-        )
+        when = time[known]
+        with _any_date():
+            places = [_star_places(ra[known], dec[known])]
+            places += [_body_places(name, when) for name in ("sun", "moon")]
+            star, sun, moon = _directions(places, when, (longitude_deg, latitude_deg, height_m))
+        found[:, known] = _altitude(star), _altitude(sun), _angle(star, moon), _altitude(moon)
     altitude, sun_altitude_deg, moon_distance, moon_altitude = found
     return Visibility(
         altitude, airmass_at(altitude), sun_altitude_deg, moon_distance, moon_altitude
@@ -118,8 +117,10 @@ def sun_altitude(
     known = np.isfinite(time)
     altitude = np.full(time.shape, np.nan)
     if known.any():
-        with _Sky(time[known], longitude_deg, latitude_deg, height_m).open() as sky:
-            altitude[known] = _altitude(sky.of_body("sun"))
+        when, site = time[known], (longitude_deg, latitude_deg, height_m)
+        with _any_date():
+            (sun,) = _directions([_body_places("sun", when)], when, site)
+        altitude[known] = _altitude(sun)
     return altitude
 
 
@@ -144,66 +145,62 @@ def airmass_at(altitude_deg: ArrayLike) -> Floats:
     return np.asarray(np.where(altitude < 0, np.inf, airmass))
 
 
-class _Sky:
-    """The sky over one site at n times, as unit vectors of its horizon (north, east, up)."""
+@contextmanager
+def _any_date() -> Iterator[None]:
+    """Set astropy up, for a while, so that it fetches nothing and accepts any date."""
+    from astropy import units
+    from astropy.coordinates.erfa_astrom import ErfaAstromInterpolator, erfa_astrom
+    from astropy.utils import iers
 
-    def __init__(
-        self, mjd: Floats, longitude_deg: float, latitude_deg: float, height_m: float
-    ) -> None:
-        self._mjd = mjd
-        self._site = longitude_deg, latitude_deg, height_m
+    with (
+        iers.conf.set_temp("auto_download", False),
+        iers.conf.set_temp("auto_max_age", None),
+        iers.conf.set_temp("iers_degraded_accuracy", "ignore"),
+        erfa_astrom.set(ErfaAstromInterpolator(_SUPPORT_SECONDS * units.s)),
+        warnings.catch_warnings(),
+    ):
+        # Dates beyond the tables of leap seconds and of the Earth's rotation.
+        warnings.simplefilter("ignore")
+        yield
 
-    @contextmanager
-    def open(self) -> Iterator[_Sky]:
-        """Set astropy up so that it fetches nothing and accepts any date, for a while."""
-        from astropy import units
-        from astropy.coordinates import AltAz, EarthLocation
-        from astropy.coordinates.erfa_astrom import ErfaAstromInterpolator, erfa_astrom
-        from astropy.time import Time
-        from astropy.utils import iers
 
-        longitude, latitude, height = self._site
-        with (
-            iers.conf.set_temp("auto_download", False),
-            iers.conf.set_temp("auto_max_age", None),
-            iers.conf.set_temp("iers_degraded_accuracy", "ignore"),
-            erfa_astrom.set(ErfaAstromInterpolator(_SUPPORT_SECONDS * units.s)),
-            warnings.catch_warnings(),
-        ):
-            # Dates beyond the tables of leap seconds and of the Earth's rotation.
-            warnings.simplefilter("ignore")
-            self._location = EarthLocation.from_geodetic(
-                longitude * units.deg, latitude * units.deg, height * units.m
-            )
-            self._time: Any = Time(self._mjd, format="mjd", scale="utc", location=self._location)
-            self._horizon: Any = AltAz(obstime=self._time, location=self._location)
-            yield self
+def _star_places(ra_deg: Floats, dec_deg: Floats) -> Floats:
+    """Barycentric places, shape (3, n), km, so far away that nothing has a parallax."""
+    return _FAR_KM * lonlat_to_vector(ra_deg, dec_deg).T
 
-    def of_stars(self, ra_deg: Floats, dec_deg: Floats) -> Floats:
-        """Directions, shape (3, n), of ICRS positions."""
-        from astropy import units
-        from astropy.coordinates import ICRS
 
-        return self._turned(ICRS(ra_deg * units.deg, dec_deg * units.deg))
+def _body_places(name: str, mjd: Floats) -> Floats:
+    """Barycentric places, shape (3, n), km, of the Sun or the Moon as the Earth saw them."""
+    from astropy import units
+    from astropy.coordinates import ICRS, get_body
+    from astropy.time import Time
 
-    def of_body(self, name: str) -> Floats:
-        """Directions, shape (3, n), of the Sun or the Moon as seen from the site."""
-        from astropy import units
-        from astropy.coordinates import GCRS, CartesianRepresentation, get_body
-        from astropy.time import Time
+    before = np.floor(mjd * _NODES_PER_DAY)
+    nodes = np.unique(np.concatenate((before, before + 1)))
+    times = Time(nodes / _NODES_PER_DAY, format="mjd", scale="utc")
+    # The ephemeris that comes with astropy, so that no file is needed.
+    body = get_body(name, times, ephemeris="builtin").transform_to(ICRS())
+    places = body.cartesian.xyz.to_value(units.km)
+    return np.array([np.interp(mjd * _NODES_PER_DAY, nodes, axis) for axis in places])
 
-        before = np.floor(self._mjd * _NODES_PER_DAY)
-        nodes = np.unique(np.concatenate((before, before + 1)))
-        # The ephemeris that comes with astropy, so that no file is needed.
-        times = Time(nodes / _NODES_PER_DAY, format="mjd", scale="utc")
-        places = get_body(name, times, ephemeris="builtin").cartesian.xyz.to_value(units.km)
-        where = [np.interp(self._mjd * _NODES_PER_DAY, nodes, axis) for axis in places]
-        position = CartesianRepresentation(np.array(where) * units.km)
-        return self._turned(GCRS(position, obstime=self._time))
 
-    def _turned(self, coordinates: Any) -> Floats:
-        turned = coordinates.transform_to(self._horizon).cartesian.xyz.value
-        return np.asarray(turned / np.linalg.norm(turned, axis=0), dtype=float)
+def _directions(places: list[Floats], mjd: Floats, site: tuple[float, float, float]) -> Floats:
+    """Unit vectors on the site's horizon (north, east, up), shape (k, 3, n), of k places."""
+    from astropy import units
+    from astropy.coordinates import ICRS, AltAz, CartesianRepresentation, EarthLocation
+    from astropy.time import Time
+
+    longitude, latitude, height = site
+    location = EarthLocation.from_geodetic(
+        longitude * units.deg, latitude * units.deg, height * units.m
+    )
+    # All in one go, so that the Earth's orientation is worked out once.
+    times = Time(np.tile(mjd, len(places)), format="mjd", scale="utc")
+    position = ICRS(CartesianRepresentation(np.concatenate(places, axis=1) * units.km))
+    horizon = position.transform_to(AltAz(obstime=times, location=location))
+    vector = horizon.cartesian.xyz.to_value(units.km)
+    unit = vector / np.linalg.norm(vector, axis=0)
+    return np.asarray(unit, dtype=float).reshape(3, len(places), mjd.size).swapaxes(0, 1)
 
 
 def _altitude(direction: Floats) -> Floats:
