@@ -23,7 +23,7 @@ TABLE = (
     "refinement depth tally sharing audit_maps reach limits exclusion leftover",
     "results account serialise",
     "scaffold wording figure_style projection plots limit_plots sky_chart figures limit_figures",
-    "report_tables limit_tables report circular outputs terminal api",
+    "report_tables limit_tables sharing_tables report circular outputs terminal api",
     "cli __main__",
 )
 LAYERS = {"": 0} | {name: layer for layer, names in enumerate(TABLE) for name in names.split()}

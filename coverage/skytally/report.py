@@ -20,6 +20,7 @@ from skytally.figures import draw_figures
 from skytally.limit_tables import limit_tables
 from skytally.report_tables import key_figures, tables
 from skytally.results import Results
+from skytally.sharing_tables import sharing_tables
 from skytally.wording import (
     NO_DISTANCE,
     count,
@@ -143,7 +144,7 @@ def _render(
         headline=headline(results),
         key_figures=key_figures(results),
         figures={name: (d, Markup(d.svg)) for name, d in figures.items()},
-        tables=tables(results) | limit_tables(results),
+        tables=tables(results) | sharing_tables(results) | limit_tables(results),
         terms=limit_terms(results.settings, limit_rows(results)),
         sources=[(source.name, *source_words(source)) for source in results.sources],
         no_distance=NO_DISTANCE,

@@ -74,9 +74,9 @@ class Sharing:
     credit : tuple of float
         Each patch's probability split equally among the telescopes that
         covered it. Sums to the union.
-    pairs, pairs_low, pairs_high : tuples of tuples of float
-        Symmetric: probability that both of a pair covered, with its bracket. On
-        the diagonal, what one telescope covered.
+    pairs : tuple of tuples of float
+        Probability that both of a pair covered; symmetric. On the diagonal, what
+        one telescope covered.
     sets : tuple of TelescopeSet
         Disjoint; the most probable first. They sum to the union.
     """
@@ -88,8 +88,6 @@ class Sharing:
     unique: tuple[float, ...]
     credit: tuple[float, ...]
     pairs: tuple[tuple[float, ...], ...]
-    pairs_low: tuple[tuple[float, ...], ...]
-    pairs_high: tuple[tuple[float, ...], ...]
     sets: tuple[TelescopeSet, ...]
 
 
@@ -120,13 +118,6 @@ class _Holders:
     def sums(self, amount: Floats) -> Floats:
         """Sum what each set of the patchwork is worth, shape (k,)."""
         return sum_by(self.which, amount, self.held.shape[0])
-
-    def pairs(self, amount: Floats) -> tuple[tuple[float, ...], ...]:
-        """Sum what each pair of telescopes holds together."""
-        both = self.held.T @ (self.held * self.sums(amount)[:, None])
-        # A sum rounds as its order has it; one half stands for both.
-        both = np.triu(both) + np.triu(both, 1).T
-        return tuple(tuple(map(float, row)) for row in both)
 
 
 @dataclass(frozen=True, eq=False)
@@ -172,39 +163,43 @@ class _Arrivals:
 def share_maps(coverage: Coverage, maps: Sequence[SkyMap], event_mjd: float) -> Iterator[Sharing]:
     """Say for every map version how the telescopes' coverage overlaps."""
     names = coverage.observations.telescopes
-    centre, inner, outer = (
-        _Holders.of(patchwork, coverage.footprints.telescope, len(names))
-        for patchwork in (coverage.centre, coverage.inner, coverage.outer)
-    )
+    holders = _Holders.of(coverage.centre, coverage.footprints.telescope, len(names))
     arrivals = _Arrivals.of(coverage)
     first_hours = tuple(
         hours_since(float(end), event_mjd) if np.isfinite(end) else None
         for end in arrivals.first_end_mjd
     )
-    area_deg2 = centre.sums(coverage.centre.area_sr) * DEG2_PER_SR
-    size = centre.held.sum(axis=1)
+    area_deg2 = holders.sums(coverage.centre.area_sr) * DEG2_PER_SR
+    size = holders.held.sum(axis=1)
     for skymap in maps:
         by_set = coverage.centre.measure(skymap.probability)
-        probability = centre.sums(by_set)
+        probability = holders.sums(by_set)
         yield Sharing(
             map=skymap.label,
             telescopes=tuple(names),
             first_hours=first_hours,
             added=_floats(arrivals.added(by_set)),
-            unique=_floats(np.where(size == 1, probability, 0.0) @ centre.held),
-            credit=_floats((probability / size) @ centre.held),
-            pairs=centre.pairs(by_set),
-            pairs_low=inner.pairs(coverage.inner.measure(skymap.probability)),
-            pairs_high=outer.pairs(coverage.outer.measure(skymap.probability)),
+            unique=_floats(np.where(size == 1, probability, 0.0) @ holders.held),
+            credit=_floats((probability / size) @ holders.held),
+            pairs=_pairs(holders.held, probability),
             sets=tuple(
                 TelescopeSet(
-                    tuple(name for name, held in zip(names, centre.held[row]) if held),
+                    tuple(name for name, held in zip(names, holders.held[row]) if held),
                     float(probability[row]),
                     float(area_deg2[row]),
                 )
                 for row in np.lexsort((-area_deg2, -probability))
             ),
         )
+
+
+def _pairs(held: Bools, amount: Floats) -> tuple[tuple[float, ...], ...]:
+    """Sum what each pair of telescopes holds together; amount of each set, shape (k,)."""
+    member = held.astype(np.float64)
+    both = member.T @ (member * amount[:, None])
+    # A sum rounds as its order has it; one half stands for both.
+    both = np.triu(both) + np.triu(both, 1).T
+    return tuple(_floats(row) for row in both)
 
 
 def _floats(values: Floats) -> tuple[float, ...]:
