@@ -5,6 +5,7 @@ import warnings
 import ephem
 import numpy as np
 import pytest
+from astropy.coordinates.erfa_astrom import erfa_astrom
 from astropy.utils import iers
 from skytally.visibility import airmass_at, sun_altitude, visibility
 
@@ -115,14 +116,28 @@ def test_the_airmass_belongs_to_the_altitude():
     assert seen.airmass[high] == pytest.approx(secant, rel=0.02)  # plane-parallel, common practice
 
 
+@pytest.fixture
+def offline():
+    """Keep the library itself from fetching what the test asks it for."""
+    with iers.conf.set_temp("auto_download", False), iers.conf.set_temp("auto_max_age", None):
+        yield
+
+
+@pytest.mark.usefixtures("offline")
 def test_times_far_ahead_and_long_ago_are_quiet_and_leave_the_library_as_it_was():
-    before = iers.conf.auto_download, iers.conf.auto_max_age, iers.conf.iers_degraded_accuracy
+    before = iers.earth_orientation_table.get(), erfa_astrom.get()
     with warnings.catch_warnings():
         warnings.simplefilter("error")
         seen = visibility(10.0, 20.0, [40_000.0, 62_500.0, 75_000.0], *SITES[0])
     assert np.isfinite(seen.altitude_deg).all()
-    after = iers.conf.auto_download, iers.conf.auto_max_age, iers.conf.iers_degraded_accuracy
-    assert after == before
+    assert iers.earth_orientation_table.get() is before[0]
+    assert erfa_astrom.get() is before[1]
+
+
+def test_the_settings_of_the_library_are_left_as_they_were():
+    before = iers.conf.auto_download, iers.conf.auto_max_age
+    visibility(10.0, 20.0, 62_500.0, *SITES[0])
+    assert (iers.conf.auto_download, iers.conf.auto_max_age) == before
 
 
 def test_a_missing_position_or_time_is_missing_and_an_empty_log_is_empty():

@@ -60,9 +60,9 @@ def visibility(
 ) -> Visibility:
     """Find altitude, airmass, Sun and Moon for n pointings of one site.
 
-    No file is fetched: the Earth's rotation comes from the tables installed. For times
-    beyond them UT1 may differ from what is assumed by up to 0.9 s and the poles from
-    their mean by under 1″, so directions are good to about 0.01 deg.
+    The Earth's rotation is taken to follow UTC, from which it departs by up to 0.9 s, and
+    its poles to stay where they are on average, which they do within 1″: no table of the
+    Earth's rotation is needed, and directions are good to about 0.01 deg at any date.
 
     Parameters
     ----------
@@ -152,14 +152,21 @@ def _any_date() -> Iterator[None]:
     from astropy.coordinates.erfa_astrom import ErfaAstromInterpolator, erfa_astrom
     from astropy.utils import iers
 
+    # UT1 is UTC and the poles are where they were meant to be: near enough here, the same
+    # with every edition of the tables, and no second spent on reading them.
+    angle, columns = [0.0, 0.0] * units.arcsec, ("PM_x", "PM_y", "dX_2000A", "dY_2000A")
+    steady = iers.IERS(
+        {"MJD": [-1e6, 1e6] * units.d, "UT1_UTC": [0.0, 0.0] * units.s}
+        | dict.fromkeys(columns, angle)
+    )
     with (
         iers.conf.set_temp("auto_download", False),
         iers.conf.set_temp("auto_max_age", None),
-        iers.conf.set_temp("iers_degraded_accuracy", "ignore"),
+        iers.earth_orientation_table.set(steady),
         erfa_astrom.set(ErfaAstromInterpolator(_SUPPORT_SECONDS * units.s)),
         warnings.catch_warnings(),
     ):
-        # Dates beyond the tables of leap seconds and of the Earth's rotation.
+        # Leap seconds to come are not known, and move nothing here by an arcsecond.
         warnings.simplefilter("ignore")
         yield
 
