@@ -33,6 +33,7 @@ from skytally.figures import draw_figures
 from skytally.footprints import Progress
 from skytally.leftover import LeftOver
 from skytally.moc import write_moc
+from skytally.region_files import region_to_write
 from skytally.report import render_html, render_pdf
 from skytally.results import Results
 from skytally.serialise import to_json, to_table
@@ -186,9 +187,14 @@ def _ecsv(results: Results) -> str:
 def _render_regions(results: Results, folder: Path) -> None:
     folder.mkdir(exist_ok=True)
     covered = results.sky.covered
-    for stem, spans in zip(file_stems(t.name for t in results.telescopes), covered, strict=True):
-        write_moc(spans, folder / f"{stem}.fits")
-    write_moc(Spans.empty().union(*covered), folder / "all.fits")
+    names = [t.name for t in results.telescopes]
+    regions = [
+        *zip(file_stems(names), names, covered, strict=True),
+        ("all", None, Spans.empty().union(*covered)),
+    ]
+    for stem, name, spans in regions:
+        rows = [results.row(map=m.version, telescope=name) for m in results.maps]
+        write_moc(region_to_write(spans, rows, results.sky.maps), folder / f"{stem}.fits")
 
 
 def _put(path: Path, content: str | bytes) -> None:
