@@ -24,7 +24,8 @@ TABLE = (
     "recounts explanations claim_text claims pointings readings audit_positions audit_footprints",
     "results account serialise",
     "scaffold wording figure_style projection plots limit_plots sky_chart figures limit_figures",
-    "report_tables limit_tables sharing_tables report circular region_files outputs terminal api where_text where_json",
+    "report_tables limit_tables sharing_tables report circular region_files outputs terminal api "
+    "where_text where_json",
     "cli __main__",
 )
 LAYERS = {"": 0} | {name: layer for layer, names in enumerate(TABLE) for name in names.split()}
