@@ -411,7 +411,7 @@ def brute_visits(loaded, ra, dec):
 
 def test_first_last_and_deepest_by_band_against_a_loop():
     rng = np.random.default_rng(11)
-    ra, dec = around(rng, 100, 0, 3.5, 80)
+    ra, dec = around(rng, 100, 0, 3.5, 40)
     sky = distance_map_near(100.0, 0.0)
     dust = dust_map(seed=1)
     loaded = replace(
@@ -420,7 +420,7 @@ def test_first_last_and_deepest_by_band_against_a_loop():
     answer = look_up(loaded, lay_footprints(loaded), asked(ra, dec, distance_mpc=77.0))
     e, v, d = answer.exposures, answer.visits, answer.deepest
     limits = 0
-    for index in range(80):
+    for index in range(40):
         expected = brute_visits(loaded, ra[index], dec[index])
         rows = v.exposure[v.position == index]
         told = list(zip(e.start_mjd[rows], e.telescope[rows], e.exposure[rows], e.band[rows]))
@@ -455,7 +455,7 @@ def test_first_last_and_deepest_by_band_against_a_loop():
             assert d.extinction[row] == pytest.approx(extinction, nan_ok=True)
             modulus = Distance(77 * u.Mpc).distmod.value
             assert d.absolute_own[row] == pytest.approx(limit - modulus, abs=1e-9)
-    assert limits > 60
+    assert limits > 30
     assert answer.extinction == "partly corrected"
 
 
