@@ -14,6 +14,7 @@ import pytest
 from astropy_healpix import lonlat_to_healpix
 from matplotlib import image
 from matplotlib.colors import to_rgb
+from sample_results import NAMES, sample_map, sample_results
 from skytally.figure_style import ACCENT, GREY, INK, draw, hatch_mask, new_figure, style_of
 from skytally.figures import draw_figures
 from skytally.limit_plots import (
@@ -34,11 +35,10 @@ from skytally.projection import (
 )
 from skytally.results import Results
 from skytally.sky_chart import credible_parts
+from skytally.sky_picture import Layer, paint_sky
 from skytally.skymap import SkyMap
 from skytally.spans import LINE_ORDER, Spans, cell_to_span
-
-from tests.sample_results import NAMES, sample_map, sample_results
-from tests.space_results import with_space
+from space_results import with_space
 
 FULL_SKY_DEG2 = 41252.96
 
@@ -366,6 +366,50 @@ def test_the_chart_shows_as_much_as_was_counted(results: Results) -> None:
     on_sky = picture[..., 3] > 0
     share = coloured.sum() / on_sky.sum()
     assert share * FULL_SKY_DEG2 == pytest.approx(results.row().area_deg2, rel=0.02)
+
+
+def test_pictures_mix_shade_and_inks_sample_by_sample() -> None:
+    """Each sample by hand: its share of the probability, then ink over ink (common practice)."""
+    rng = np.random.default_rng(5)
+    skymap = sample_map("1 first", 1.0)
+    row = rng.integers(0, skymap.starts.size, (17, 23))
+    position = skymap.starts[row] + rng.integers(0, 1 << 40, row.shape)
+    position[rng.random(row.shape) < 0.1] = -1
+    # A region that reaches the line's first cell must not ink what lies off the sky.
+    regions = [
+        Spans.from_cells(2, np.array([0, 191])).union(Spans.from_cells(4, rng.integers(0, 3072, n)))
+        for n in (900, 1500, 700)
+    ]
+    layers = [Layer(regions[0], "#0072B2", 1), Layer(regions[1], "#D55E00", 4)]
+    layers.append(Layer(regions[2], "#009E73", None))
+    picture = paint_sky(position, skymap, layers)
+    density, area = skymap.density_per_sr, skymap.stops - skymap.starts
+    seen = set()
+    for (y, x), place in np.ndenumerate(position):
+        assert picture[y, x, 3] == (0 if place < 0 else 255)
+        if place < 0:
+            continue
+        here = density[row[y, x]]
+        denser = density > here
+        low = np.sum(density[denser] * area[denser]) / np.sum(density * area)
+        high = np.sum((density * area)[density >= here]) / np.sum(density * area)
+        # Cells of one density come in an order of their own: any level between will do.
+        steps = {int(np.ceil(20 * (1 - level))) for level in np.linspace(low, high, 5)[1:]}
+        wanted = []
+        for step in steps:
+            part = step / 20
+            colour = np.array(to_rgb("#f1f3f5")) * (1 - part) + np.array(to_rgb("#8894a0")) * part
+            colour = np.ones(3) if step < 2 or here == 0 else colour
+            for layer, region in zip(layers, regions):
+                if not ((region.starts <= place) & (place < region.stops)).any():
+                    continue
+                seen.add(layer.hatch)
+                lined = layer.hatch is not None and hatch_mask(layer.hatch, row.shape)[y, x]
+                ink = 0.8 if layer.hatch is None else 0.85 if lined else 0.3
+                colour = ink * np.array(to_rgb(layer.colour)) + (1 - ink) * colour
+            wanted.append(255 * colour)
+        assert min(np.abs(picture[y, x, :3] - one).max() for one in wanted) < 0.51
+    assert seen == {1, 4, None}
 
 
 def test_captions_conclude_from_the_numbers(results: Results) -> None:

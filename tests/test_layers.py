@@ -20,10 +20,11 @@ TABLE = (
     "log_columns log_regions log_io image_io region_text camera_io light_curve_io campaign_faults "
     "campaign_model campaign_data campaign_sources campaign positions_io claims_io",
     "selection footprints patchwork covered field_extinction overlay held touching other_fields",
-    "refinement depth tally sharing audit_maps reach limits exclusion leftover galaxies where "
+    "refinement depth tally sharing audit_maps audit_rows audit_times audit_depth reach limits "
+    "exclusion leftover galaxies where "
     "recounts explanations claim_text claims pointings readings audit_positions audit_footprints",
     "results account serialise",
-    "scaffold wording figure_style projection plots limit_plots sky_chart figures limit_figures",
+    "scaffold wording figure_style projection plots limit_plots sky_picture sky_chart figures limit_figures",
     "report_tables limit_tables sharing_tables report circular region_files outputs terminal api "
     "where_text where_json",
     "cli __main__",

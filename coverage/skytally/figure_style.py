@@ -37,6 +37,7 @@ __all__ = [
     "TelescopeStyle",
     "draw",
     "hatch_mask",
+    "is_hatched",
     "new_figure",
     "plain_axes",
     "short_label",
@@ -129,6 +130,11 @@ def style_of(index: int) -> TelescopeStyle:
 def hatch_mask(hatch: int, shape: tuple[int, int]) -> NDArray[np.bool_]:
     """Return which samples of a grid (rows, columns) a hatch inks."""
     y, x = np.indices(shape)
+    return is_hatched(hatch, x, y)
+
+
+def is_hatched(hatch: int, x: NDArray[np.int64], y: NDArray[np.int64]) -> NDArray[np.bool_]:
+    """Return which samples, given by column and row, a hatch inks."""
     return _HATCHES[hatch](x, y)
 
 

@@ -106,16 +106,18 @@ class Window:
 
     def sample(self, columns: int) -> Ints:
         """Positions on the line of the grid's samples, shape (rows, columns); −1 off the sky."""
-        x, y = (part.ravel() for part in np.meshgrid(*self.grid(columns)))
-        position = np.full(x.size, -1, dtype=np.int64)
-        on_sky = self.on_sky(x, y)
-        lonlat = self.unproject(np.stack((x[on_sky], y[on_sky]), axis=1))
-        good = np.isfinite(lonlat).all(axis=1)
-        lon, lat = lonlat[good].T
-        position[np.flatnonzero(on_sky)[good]] = lonlat_to_healpix(
+        x, y = np.meshgrid(*self.grid(columns))
+        shown = self.on_sky(x, y)
+        lon, lat = self.unproject(np.stack((x[shown], y[shown]), axis=1)).T
+        good = np.isfinite(lon) & np.isfinite(lat)
+        if not good.all():
+            shown[shown] = good
+            lon, lat = lon[good], lat[good]
+        position = np.full(shown.shape, -1, dtype=np.int64)
+        position[shown] = lonlat_to_healpix(
             lon * u.deg, np.clip(lat, -90, 90) * u.deg, 1 << LINE_ORDER, order="nested"
         )
-        return position.reshape(-1, columns)
+        return position
 
     def on_sky(self, x: Floats, y: Floats) -> NDArray[np.bool_]:
         """Tell which plane coordinates show a direction."""

@@ -14,7 +14,6 @@ import astropy.units as u
 import numpy as np
 from astropy_healpix import healpix_to_lonlat, neighbours
 from matplotlib.axes import Axes
-from matplotlib.colors import to_rgb
 from matplotlib.figure import Figure
 from matplotlib.patches import Ellipse, Rectangle
 from numpy.typing import NDArray
@@ -27,7 +26,6 @@ from skytally.figure_style import (
     INK,
     RULE,
     WIDTH_IN,
-    hatch_mask,
     new_figure,
     short_label,
     style_of,
@@ -44,6 +42,7 @@ from skytally.projection import (
     zoom_window,
 )
 from skytally.results import Results
+from skytally.sky_picture import TAIL, Layer, paint_sky, ramp_key
 from skytally.skymap import SkyMap
 from skytally.spans import LINE_ORDER, Ints, Spans
 from skytally.wording import percent
@@ -68,10 +67,6 @@ _SMALL_ZOOM_DEG = 40.0
 _PART_ORDER = 5
 # A part of the credible region that holds less than this is no chart of its own.
 LEAST_PART = 0.15
-_RAMP_LIGHT, _RAMP_DARK = np.array(to_rgb("#f1f3f5")), np.array(to_rgb("#8894a0"))
-_RAMP_STEPS = 20
-# The last part of the probability stays white: it often fills the whole sky.
-_TAIL = 0.05
 _KEY_ROW_IN = 0.19
 _KEY_COLUMNS = 5
 
@@ -157,10 +152,11 @@ def whole_sky_figure(results: Results, parts: Sequence[Part]) -> Figure:
     height = WIDTH_IN * window.aspect
     figure = new_figure(height + key)
     axes = figure.add_axes((0, key / (height + key), 1, height / (height + key)))
-    _paint(axes, window, results, skymap, WIDTH_IN)
+    samples = _samples(window, WIDTH_IN)
+    _paint(axes, window, paint_sky(samples, skymap, _by_telescope(results)))
     _whole_sky_frame(axes, window, labels=True)
     _outlines(axes, window, results, 0.3)
-    _contours(axes, window, skymap, WIDTH_IN, labels=True)
+    _contours(axes, window, skymap, samples, labels=True)
     for zoom in _zoom_windows(parts):
         if zoom.right - zoom.left < _SMALL_ZOOM_DEG:
             frame = window.lines([zoom.unproject(zoom.corners)])
@@ -191,10 +187,11 @@ def zoom_figure(results: Results, parts: Sequence[Part]) -> Figure:
                 own / height,
             )
         )
-        _paint(axes, window, results, skymap, width)
+        samples = _samples(window, width)
+        _paint(axes, window, paint_sky(samples, skymap, _by_telescope(results)))
         _zoom_frame(axes, window)
         _outlines(axes, window, results, 0.6)
-        _contours(axes, window, skymap, width, labels=True)
+        _contours(axes, window, skymap, samples, labels=True)
         _scale_bar(axes, window)
     _draw_key(figure, results, shown, key)
     return figure
@@ -215,6 +212,8 @@ def versions_figure(results: Results) -> Figure:
     width = WIDTH_IN / columns - 0.12
     tall = width * window.aspect
     height = rows * (tall + 0.3)
+    samples = _samples(window, width)
+    everything = Layer(Spans.empty().union(*results.sky.covered), ACCENT, None)
     figure = new_figure(height)
     for place, (info, skymap) in enumerate(zip(results.maps, results.sky.maps)):
         row, column = divmod(place, columns)
@@ -222,9 +221,9 @@ def versions_figure(results: Results) -> Figure:
         axes = figure.add_axes(
             (left, 1 - (row * (tall + 0.3) + 0.22 + tall) / height, width / WIDTH_IN, tall / height)
         )
-        _paint(axes, window, results, skymap, width, merged=True)
+        _paint(axes, window, paint_sky(samples, skymap, [everything]))
         _whole_sky_frame(axes, window, labels=False)
-        _contours(axes, window, skymap, width, labels=False)
+        _contours(axes, window, skymap, samples, labels=False)
         probability = results.row(map=info.version).probability
         axes.set_title(
             f"{short_label(info.version)}: {percent(probability)} covered", fontsize=7, pad=4
@@ -246,35 +245,22 @@ def _middle_ra(skymap: SkyMap) -> float:
     )
 
 
-def _paint(
-    axes: Axes,
-    window: Window,
-    results: Results,
-    skymap: SkyMap,
-    width_in: float,
-    *,
-    merged: bool = False,
-) -> None:
-    """Lay the probability and the regions, by telescope or merged, as one picture."""
-    position = window.sample(round(width_in * _SAMPLES_PER_INCH))
-    on_sky = position >= 0
-    image = np.ones((*position.shape, 4))
-    image[..., 3] = on_sky
-    image[..., :3] = _ramp(skymap.credible_level_at(position), skymap.density_at(position))
-    covered = results.sky.covered
-    if merged:
-        layers = [(Spans.empty().union(*covered), ACCENT, np.full(position.shape, 0.8))]
-    else:
-        layers = [
-            (covered[index], style_of(index).colour, _ink(style_of(index).hatch, position.shape))
-            for index in _shown(results)
-        ]
-    for region, colour, ink in layers:
-        opacity = (ink * (region.contains(position) & on_sky))[..., None]
-        image[..., :3] = image[..., :3] * (1 - opacity) + np.array(to_rgb(colour)) * opacity
+def _by_telescope(results: Results) -> list[Layer]:
+    """Return each telescope's region with its colour and hatch."""
+    covered, shown = results.sky.covered, _shown(results)
+    return [Layer(covered[i], style_of(i).colour, style_of(i).hatch) for i in shown]
+
+
+def _samples(window: Window, width_in: float) -> Ints:
+    """Return the positions on the line that a chart of some width is drawn from."""
+    return window.sample(round(width_in * _SAMPLES_PER_INCH))
+
+
+def _paint(axes: Axes, window: Window, picture: NDArray[np.uint8]) -> None:
+    """Lay a picture of the sky over the whole axes."""
     # Bytes, and one composite: the picture compresses to a fraction of a float's.
     axes.imshow(
-        np.rint(255 * image).astype(np.uint8),
+        picture,
         extent=(window.left, window.right, window.bottom, window.top),
         origin="lower",
         interpolation="none",
@@ -287,25 +273,11 @@ def _paint(
     axes.set_yticks([])
 
 
-def _ink(hatch: int, shape: tuple[int, int]) -> Floats:
-    return np.where(hatch_mask(hatch, shape), 0.85, 0.3)
-
-
-def _ramp(level: Floats, density: Floats) -> Floats:
-    """Return colours (..., 3): one hue, each of 20 steps an equal share of the probability."""
-    share = np.where(density > 0, 1 - level, 0.0)
-    step = np.ceil(share * _RAMP_STEPS - 1e-9) / _RAMP_STEPS
-    colour = _RAMP_LIGHT + (_RAMP_DARK - _RAMP_LIGHT) * step[..., None]
-    return np.where((share > _TAIL)[..., None], colour, 1.0)
-
-
-def _contours(axes: Axes, window: Window, skymap: SkyMap, width_in: float, *, labels: bool) -> None:
-    """Draw the edges of the 50 % and 90 % regions."""
-    columns = round(width_in * _SAMPLES_PER_INCH * 0.75)
-    position = window.sample(columns)
+def _contours(axes: Axes, window: Window, skymap: SkyMap, position: Ints, *, labels: bool) -> None:
+    """Draw the edges of the 50 % and 90 % regions, found from samples of the window."""
     level = skymap.credible_level_at(position)
     level[position < 0] = 1.0
-    x, y = window.grid(columns)
+    x, y = window.grid(position.shape[1])
     for edge, width, dashes in ((0.9, 0.7, (3.5, 1.5)), (0.5, 0.9, None)):
         if not (level.min() <= edge < level.max()):
             continue
@@ -513,16 +485,14 @@ def _draw_key(figure: Figure, results: Results, shown: Sequence[int], height_in:
 
 def _draw_ramp_key(axes: Axes, y: float) -> None:
     """Explain shade, contours and the dotted line in one row."""
-    share = np.repeat((np.arange(_RAMP_STEPS, 0, -1) / _RAMP_STEPS)[None], 2, axis=0)
-    picture = _ramp(1 - share + 1e-3, np.ones_like(share))
     axes.imshow(
-        picture, extent=(0.05, 0.95, y + 0.055, y - 0.055), interpolation="none", aspect="auto"
+        ramp_key(), extent=(0.05, 0.95, y + 0.055, y - 0.055), interpolation="none", aspect="auto"
     )
     axes.add_patch(Rectangle((0.05, y - 0.055), 0.9, 0.11, fill=False, ec=RULE, lw=0.5))
     axes.text(
         1.01,
         y,
-        f"credible level, 0 % (densest) to {100 * (1 - _TAIL):.0f} %",
+        f"credible level, 0 % (densest) to {100 * (1 - TAIL):.0f} %",
         fontsize=6.5,
         va="center",
     )

@@ -1,0 +1,93 @@
+"""The picture under every chart of the sky: shades of probability, regions inked over them."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from matplotlib.colors import to_rgb
+from numpy.typing import NDArray
+
+from skytally.figure_style import is_hatched
+from skytally.skymap import SkyMap
+from skytally.spans import Ints, Spans
+
+__all__ = ["TAIL", "Layer", "paint_sky", "ramp_key"]
+
+Floats = NDArray[np.float64]
+Bytes = NDArray[np.uint8]
+
+_STEPS = 20
+# The last part of the probability stays white: it often fills the whole sky.
+TAIL = 1 / _STEPS
+# One hue from light to dark, each step an equal share of the probability. The
+# first row is for no probability at all, the second for the tail.
+_LIGHT, _DARK = np.array(to_rgb("#f1f3f5")), np.array(to_rgb("#8894a0"))
+_RAMP = _LIGHT + (_DARK - _LIGHT) * (np.arange(_STEPS + 1)[:, None] / _STEPS)
+_RAMP[:2] = 1.0
+_EVEN_INK, _HATCH_INK, _BETWEEN = 0.8, 0.85, 0.3
+
+
+@dataclass(frozen=True, eq=False)
+class Layer:
+    """A region to be inked in one colour, evenly where it has no hatch."""
+
+    region: Spans
+    colour: str
+    hatch: int | None
+
+
+def paint_sky(position: Ints, skymap: SkyMap, layers: Sequence[Layer]) -> Bytes:
+    """Paint a map version and regions, the later over the earlier.
+
+    Parameters
+    ----------
+    position : int64 array, shape (rows, columns)
+        Positions on the line; −1 off the sky.
+    skymap : SkyMap
+        What is shaded.
+    layers : sequence of Layer
+        What is laid over it.
+
+    Returns
+    -------
+    uint8 array, shape (rows, columns, 4)
+        Red, green, blue and opacity, which is 0 off the sky.
+    """
+    on_sky = position >= 0
+    shade = _shade(skymap.credible_level_at(position), skymap.density_at(position))
+    image = np.empty((*position.shape, 4), dtype=np.uint8)
+    image[..., :3] = _bytes(_RAMP)[shade]
+    image[..., 3] = 255 * on_sky
+    # Regions cover little of a chart, so only what they cover is mixed as floats.
+    inside = [layer.region.contains(position) & on_sky for layer in layers]
+    inked = np.logical_or.reduce(inside) if inside else np.zeros_like(on_sky)
+    y, x = np.nonzero(inked)
+    colour = _RAMP[shade[inked]]
+    for layer, held in zip(layers, inside):
+        opacity = (_ink(layer.hatch, x, y) * held[inked])[:, None]
+        colour = colour * (1 - opacity) + np.array(to_rgb(layer.colour)) * opacity
+    image[inked, :3] = _bytes(colour)
+    return image
+
+
+def ramp_key() -> Floats:
+    """Return the shades in order, densest first, as a picture (2, steps, 3)."""
+    return np.repeat(_RAMP[None, :0:-1], 2, axis=0)
+
+
+def _shade(level: Floats, density: Floats) -> NDArray[np.int8]:
+    """Return the row of the ramp for credible levels and densities."""
+    share = np.where(density > 0, 1 - level, 0.0)
+    return np.ceil(share * _STEPS - 1e-9).astype(np.int8)
+
+
+def _ink(hatch: int | None, x: Ints, y: Ints) -> Floats:
+    if hatch is None:
+        return np.full(x.shape, _EVEN_INK)
+    return np.where(is_hatched(hatch, x, y), _HATCH_INK, _BETWEEN)
+
+
+def _bytes(colour: Floats) -> Bytes:
+    return np.rint(255 * colour).astype(np.uint8)
