@@ -16,13 +16,15 @@ import pytest
 from campaign_builder import EVENT_MJD, campaign, log_table, telescope
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from skytally.account import account
+from skytally.account import account, lay_coverage
 from skytally.cameras import CircleCamera
+from skytally.covered import TallySettings
 from skytally.serialise import select_map, to_dict, to_json
-from skytally.sharing import Sharing, TelescopeSet
+from skytally.sharing import Sharing, TelescopeSet, share_maps
 from skytally.skymap import SkyMap
 from skytally.skymap_io import circle_skymap
 from skytally.spans import DEG2_PER_SR, Spans, cell_to_span
+from skytally.tally import tally_maps
 
 ORDER = 9  # of the pixels that are counted
 COARSE = 5  # of the maps' cells
@@ -112,6 +114,23 @@ def load(plan):
     )
 
 
+def tallied(loaded):
+    """What lies between the telescopes, and the tally's rows by map and telescope."""
+    coverage = lay_coverage(loaded)
+    rows, _ = tally_maps(
+        coverage, [(m, None) for m in loaded.maps], TallySettings(EVENT_MJD, 2, 30.0)
+    )
+    by_telescope = {
+        (row.map, row.telescope): row for row in rows if row.band is None and row.night is None
+    }
+    return list(share_maps(coverage, loaded.maps, EVENT_MJD)), by_telescope
+
+
+def shared(loaded):
+    """What lies between the telescopes, without the rest of the accounting."""
+    return list(share_maps(lay_coverage(loaded), loaded.maps, EVENT_MJD))
+
+
 def counted(plan, amount):
     """Every number of one map, pixel by pixel."""
     first_end = defaultdict(dict)  # pixel → telescope → end of its first exposure there
@@ -141,9 +160,9 @@ def counted(plan, amount):
 
 
 def check_against_the_count(plan):
-    results = account(load(plan))
-    assert [s.map for s in results.sharing] == list(plan.maps)
-    for found in results.sharing:
+    sharing = shared(load(plan))
+    assert [found.map for found in sharing] == list(plan.maps)
+    for found in sharing:
         added, unique, credit, pairs, sets = counted(plan, plan.maps[found.map])
         assert found.telescopes == plan.names
         for numbers, wanted in (
@@ -166,7 +185,7 @@ def check_against_the_count(plan):
         for name, hours in zip(plan.names, found.first_hours):
             ends = [shot.end_s for shot in plan.shots if shot.telescope == name and shot.pixels]
             assert hours == (pytest.approx(min(ends) / 3600, abs=1e-4) if ends else None)
-    return results
+    return sharing
 
 
 @pytest.mark.parametrize("seed", range(40))
@@ -178,9 +197,9 @@ def test_every_number_agrees_with_the_count(seed):
 def test_any_number_of_telescopes_agrees_with_the_count(count):
     """More than a byte or a machine word has bits."""
     plan = random_plan(count, tuple(f"Heron {number}" for number in range(count)), most=3)
-    results = check_against_the_count(plan)
-    assert max(len(one.telescopes) for one in results.sharing[0].sets) >= 4
-    assert len({name for one in results.sharing[0].sets for name in one.telescopes}) > count / 3
+    sets = check_against_the_count(plan)[0].sets
+    assert max(len(one.telescopes) for one in sets) >= 4
+    assert len({name for one in sets for name in one.telescopes}) > count / 3
 
 
 def test_the_random_campaigns_hold_what_they_should():
@@ -208,44 +227,45 @@ def test_the_random_campaigns_hold_what_they_should():
 @given(seeds)
 @settings(max_examples=25)
 def test_the_parts_sum_to_the_union_and_agree_with_the_tally(seed):
-    results = account(load(random_plan(seed)))
-    for found in results.sharing:
-        total = results.row(map=found.map)
+    sharing, rows = tallied(load(random_plan(seed)))
+    for found in sharing:
+        total = rows[found.map, None]
         for parts in (found.added, found.credit, [one.probability for one in found.sets]):
             assert sum(parts) == pytest.approx(total.probability, abs=1e-12)
         assert sum(one.area_deg2 for one in found.sets) == pytest.approx(total.area_deg2, rel=1e-12)
         for i, name in enumerate(found.telescopes):
-            row = results.row(map=found.map, telescope=name)
+            row = rows[found.map, name]
             assert found.pairs[i][i] == pytest.approx(row.probability, abs=1e-12)
             assert found.unique[i] == pytest.approx(row.probability_unique, abs=1e-12)
             assert found.credit[i] == pytest.approx(row.probability_credit, abs=1e-12)
             assert found.unique[i] <= found.added[i] + 1e-12
             assert found.added[i] <= row.probability + 1e-12
             assert found.pairs[i] == tuple(line[i] for line in found.pairs)
-            assert max(found.pairs[i]) == found.pairs[i][i]
+            assert max(found.pairs[i]) <= found.pairs[i][i] + 1e-12
         worth = [(-one.probability, -one.area_deg2) for one in found.sets]
         assert worth == sorted(worth)
 
 
 @given(seeds)
-@settings(max_examples=25)
+@settings(max_examples=10)
 def test_the_union_loses_without_a_telescope_what_it_covered_alone(seed):
     plan = random_plan(seed, BIRDS[:3])
-    whole = account(load(plan))
+    sharing, whole = tallied(load(plan))
     for index, name in enumerate(plan.names):
         rest = tuple(shot for shot in plan.shots if shot.telescope != name)
-        without = account(load(replace(plan, shots=rest)))
-        for found in whole.sharing:
-            lost = whole.row(map=found.map).probability - without.row(map=found.map).probability
-            assert found.unique[index] == pytest.approx(lost, abs=1e-12)
+        _, without = tallied(load(replace(plan, shots=rest)))
+        for found in sharing:
+            union = whole[found.map, None].probability
+            kept = without[found.map, None].probability
+            assert found.unique[index] == pytest.approx(union - kept, abs=1e-12)
 
 
 @given(seeds)
-@settings(max_examples=25)
+@settings(max_examples=15)
 def test_the_order_of_telescopes_changes_no_number(seed):
     plan = random_plan(seed)
     turned = replace(plan, names=plan.names[::-1], shots=plan.shots[::-1])
-    for one, two in zip(account(load(plan)).sharing, account(load(turned)).sharing):
+    for one, two in zip(shared(load(plan)), shared(load(turned))):
         assert two.telescopes == one.telescopes[::-1]
         assert two.first_hours == one.first_hours[::-1]
         for name in ("added", "unique", "credit"):
@@ -265,7 +285,7 @@ def test_what_comes_later_adds_nothing_where_others_were(seed):
         replace(shot, telescope="Wren", start_s=shot.start_s + 7 * DAY) for shot in plan.shots
     )
     more = replace(plan, names=(*plan.names, "Wren"), shots=plan.shots + late)
-    for one, two in zip(account(load(plan)).sharing, account(load(more)).sharing):
+    for one, two in zip(shared(load(plan)), shared(load(more))):
         assert two.added[:-1] == pytest.approx(one.added, abs=1e-12)
         assert two.added[-1] == 0
         assert sum(two.unique) == 0
@@ -282,7 +302,7 @@ def hand_made(*shots, names=("Heron", "Plover", "Avocet")):
     telescopes = [
         telescope_of(name, [s for s in shots if s.telescope == name], 0) for name in names
     ]
-    return account(campaign(telescopes, [skymap_of("1", amount, order=0)])).sharing[0]
+    return shared(campaign(telescopes, [skymap_of("1", amount, order=0)]))[0]
 
 
 def test_three_telescopes_by_hand():
@@ -401,7 +421,7 @@ def test_three_circles_in_a_row_against_closed_forms(tied):
         for name in radius
     ]
     sky = SkyMap(np.array([0]), np.array([12 << 58]), np.array([1 / (4 * np.pi)]), 0, label="1")
-    found = account(campaign(telescopes, [sky])).sharing[0]
+    found = shared(campaign(telescopes, [sky]))[0]
     own = [cap_sr(r) for r in radius.values()]
     left = lens_sr(radius["Heron"], radius["Plover"], np.radians(5.0))
     right = lens_sr(radius["Plover"], radius["Avocet"], np.radians(5.0))
