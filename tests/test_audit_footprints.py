@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 from campaign_builder import campaign, log_table, telescope
 from skytally.audit_footprints import footprint_findings
-from skytally.cameras import CircleCamera
+from skytally.cameras import CircleCamera, MosaicCamera
 from skytally.campaign import load_campaign
 from skytally.footprints import lay_footprints
 from skytally.log_io import LogOptions, read_log
@@ -118,8 +118,32 @@ def test_a_field_of_view_read_as_a_circle_is_noted(tmp_path):
     lines = ["s_ra,s_dec,s_fov,t_min,s_region", "30,0,1.5,62000,", f"30,0,1.5,62001,{SQUARE}"]
     (found,) = check([from_csv(tmp_path, lines, use_fov=True)])
     assert (found.code, found.severity, found.rows) == ("field-as-circle", "note", (2,))
-    assert "diameter" in found.text
+    assert "s_fov" in found.text
     assert check([from_csv(tmp_path, [lines[0], lines[2]], use_fov=True)]) == []
+
+
+def test_a_circle_that_the_log_gives_as_its_region_is_no_field_of_view(tmp_path):
+    lines = ["s_ra,s_dec,s_fov,t_min,s_region", "30,0,1.5,62000,circle 30.0 0.0 0.5"]
+    assert check([from_csv(tmp_path, lines, use_fov=True)]) == []
+
+
+@pytest.mark.parametrize(
+    ("camera", "stated", "expected"),
+    [
+        (CircleCamera(0.75), 1.5, False),
+        (CircleCamera(0.75), 0.75, True),  # a radius
+        (CircleCamera(0.75), 3.0, True),
+        (CircleCamera(0.75), 90.0, True),  # arcminutes
+        (MosaicCamera.rectangle(1.6, 1.2), 1.2, False),  # a side
+        (MosaicCamera.rectangle(1.6, 1.2), 2.0, False),  # the diagonal (3-4-5 triangle)
+        (MosaicCamera.rectangle(1.6, 1.2), 1.0 / 60, True),
+        (MosaicCamera.rectangle(1.6, 1.2), np.nan, False),
+    ],
+)
+def test_a_camera_of_another_size_than_the_log_states_is_doubted(camera, stated, expected):
+    log = replace(log_table("Heron", [30.0, 31.0], [0.0, 0.0]), fov_deg=np.full(2, stated))
+    found = check([telescope("Heron", camera, log)])
+    assert [(x.code, x.rows) for x in found] == [("camera-of-another-size", (2, 3))] * expected
 
 
 # --- footprints as they lie -----------------------------------------------------------------

@@ -16,7 +16,7 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 from pydantic import ValidationError
 from skytally.cameras import CircleCamera, MosaicCamera
-from skytally.campaign import CampaignSettings, ReportText, Site, load_campaign
+from skytally.campaign import AuditOptions, CampaignSettings, ReportText, Site, load_campaign
 from skytally.campaign_faults import _EXPECTED, parse_campaign
 from skytally.campaign_model import TABLES, is_region_text
 from skytally.errors import CampaignError, LogError, MapError, SkytallyError
@@ -637,15 +637,98 @@ def test_all_faults_are_reported_together(folder: Path) -> None:
 
 
 def test_a_lone_fault_of_a_file_is_raised_as_it_is(folder: Path) -> None:
-    (folder / "bad.csv").write_text("a,b\n1,2\n")
-    with pytest.raises(LogError) as caught:
-        load_campaign(write(folder, changed('log = "logs/heron.csv"', 'log = "bad.csv"')))
-    assert caught.value.file == str(folder / "bad.csv")
     (folder / "bad.fits").write_bytes(b"no map")
     text = changed("circle = { ra = 150.0, dec = -8.0, radius_90 = 2.0 }", 'file = "bad.fits"')
     with pytest.raises(MapError) as raised:
         load_campaign(write(folder, text))
     assert raised.value.file == str(folder / "bad.fits")
+
+
+def test_a_log_that_cannot_be_read_stands_without_rows(folder: Path) -> None:
+    (folder / "bad.csv").write_text("a,b\n1,2\n")
+    campaign = load_campaign(write(folder, changed('log = "logs/heron.csv"', 'log = "bad.csv"')))
+    by_name = {t.name: t.log for t in campaign.telescopes}
+    assert len(by_name["Plover"]) == by_name["Plover"].read == 0
+    assert by_name["Plover"].fault.startswith("bad.csv: ")
+    assert str(folder) not in by_name["Plover"].fault
+    assert len(by_name["Heron"]) > 0
+    assert by_name["Heron"].fault == ""
+
+
+def test_where_no_log_can_be_read_the_faults_are_raised(folder: Path) -> None:
+    for log in (folder / "logs").iterdir():
+        log.write_text("a,b\n1,2\n")
+    with pytest.raises((LogError, CampaignError)) as caught:
+        load_campaign(write(folder, GOOD))
+    assert "heron.csv" in str(caught.value)
+
+
+AUDIT = """
+[audit]
+airmass = 2.0
+silence = ["near-moon"]
+
+[[claim]]
+telescope = "all"
+quantity = "area"
+value = "12.0 deg2"
+stated_by = "A. Observer"
+
+[[claim]]
+file = "claims.csv"
+"""
+
+
+def test_the_audit_is_told_what_to_look_for(folder: Path) -> None:
+    (folder / "claims.csv").write_text("telescope,quantity,value\nHeron,exposures,12\n")
+    one = changed('name = "Heron"', 'name = "Heron"\naudit = { demote = { "sun-up" = "note" } }')
+    campaign = load_campaign(write(folder, one + AUDIT))
+    heron, plover = campaign.telescopes[0].audit, campaign.telescopes[1].audit
+    assert campaign.audit == plover == AuditOptions(2.0, 15.0, {}, frozenset({"near-moon"}))
+    assert heron == AuditOptions(2.0, 15.0, {"sun-up": "note"}, frozenset({"near-moon"}))
+    assert [(c.telescope, c.value) for c in campaign.claims] == [
+        ("all", "12.0 deg2"),
+        ("Heron", "12"),
+    ]
+    assert "claims" in {role for role, _, _ in campaign.inputs}
+
+
+@pytest.mark.parametrize(
+    ("spoilt", "words"),
+    [
+        ('silence = ["near-mon"]', ("audit.silence", "near-mon", "Did you mean near-moon?")),
+        ('demote = { "sun-up" = "error" }', ("audit.demote", "sun-up", "silence")),
+        ('demote = ["sun-up"]', ("audit.demote", "table in braces")),
+        ("airmass = 0.5", ("audit.airmass", "0.5")),
+        ("aimass = 2.0", ("audit", "aimass", "airmass")),
+    ],
+)
+def test_a_wish_that_cannot_be_met_names_its_key(
+    folder: Path, spoilt: str, words: tuple[str, ...]
+) -> None:
+    with pytest.raises(CampaignError) as caught:
+        load_campaign(write(folder, f"{GOOD}\n[audit]\n{spoilt}\n"))
+    (problem,) = caught.value.problems
+    assert not [word for word in words if word not in problem]
+
+
+@pytest.mark.parametrize(
+    ("spoilt", "words"),
+    [
+        ('telescope = "all"\nquantity = "aera"\nvalue = "1"', ("claim[1]", "aera", "area")),
+        ('telescope = "all"\nquantity = "area"', ("claim[1]", "value")),
+        ('file = "none.csv"', ("claim[1].file", "none.csv")),
+        ('telescope = "all"\nfile = "logs/heron.csv"', ("claim[1]", "of its own")),
+        ('telescope = "all"\nquantity = "area"\nvalue = 12.0', ("claim[1].value", "quotes")),
+    ],
+)
+def test_a_claim_that_cannot_be_read_names_its_table(
+    folder: Path, spoilt: str, words: tuple[str, ...]
+) -> None:
+    with pytest.raises(CampaignError) as caught:
+        load_campaign(write(folder, f"{GOOD}\n[[claim]]\n{spoilt}\n"))
+    problem = caught.value.problems[0]
+    assert not [word for word in words if word not in problem]
 
 
 def test_relative_paths_start_at_the_campaign_file(

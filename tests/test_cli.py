@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 import pytest
 import skytally
+from astropy.coordinates import SkyCoord
 from astropy.table import Table
 from skytally import cli, outputs
 from skytally.account import account
@@ -184,6 +185,58 @@ def test_regions_refuses_an_unknown_map_version(campaign: Path, tmp_path: Path) 
     assert (done.exit_code, done.stdout) == (2, "")
     assert "there is no map version '9'" in done.stderr
     assert not (tmp_path / "out").exists()
+
+
+def test_check_ends_with_one_where_it_finds_an_error(campaign: Path) -> None:
+    good = run("check", campaign)
+    assert good.exit_code == 0, good.stdout
+    assert good.stdout.startswith("Lantern 7: ")
+    assert good.stderr == ""
+    log = campaign.parent / "logs/heron.csv"
+    log.write_text("")
+    bad = run("check", campaign, "--json")
+    assert bad.exit_code == 1
+    content = json.loads(bad.stdout)
+    errors = [(f["code"], f["subject"]) for f in content["findings"] if f["severity"] == "error"]
+    assert errors == [("log-unreadable", "Heron")]
+
+
+def test_where_tells_of_a_position_and_of_a_table(campaign: Path, tmp_path: Path) -> None:
+    one = account(load_campaign(campaign)).exposures[0]
+    assert one.ra_deg is not None
+    assert one.dec_deg is not None
+    told = run("where", campaign, str(one.ra_deg), str(one.dec_deg))
+    assert told.exit_code == 0, told.stderr
+    assert one.exposure in told.stdout
+    hours = SkyCoord(one.ra_deg, one.dec_deg, unit="deg").to_string("hmsdms", sep=":").split()
+    again = run("where", campaign, *hours, "--json")
+    assert again.exit_code == 0, again.stderr
+    assert one.exposure in again.stdout
+    table = tmp_path / "places.csv"
+    table.write_text(f"name,ra,dec\nhere,{one.ra_deg},{one.dec_deg}\nthere,{one.ra_deg},89\n")
+    both = run("where", campaign, "--positions", table, "--json")
+    assert both.exit_code == 0, both.stderr
+    assert json.loads(both.stdout)["format"] == "skytally/where"
+
+
+@pytest.mark.parametrize(
+    ("arguments", "words"),
+    [
+        ((), "RA and DEC, or --positions"),
+        (("150.0",), "RA and DEC, or --positions"),
+        (("150.0", "95"), "-90 to 90"),
+        (("150.0", "-8", "--weight", "size"), "none, luminosity, mass"),
+        (("150.0", "-8", "--completeness", "1.5"), "such as 0.6"),
+        (("--positions", "absent.csv"), "absent.csv"),
+    ],
+)
+def test_where_refuses_what_it_cannot_look_up(
+    campaign: Path, arguments: tuple[str, ...], words: str
+) -> None:
+    done = run("where", campaign, *arguments)
+    assert (done.exit_code, done.stdout) == (2, "")
+    assert words in done.stderr
+    assert "Traceback" not in done.stderr
 
 
 @pytest.mark.parametrize(

@@ -15,18 +15,20 @@ SOURCE = Path(skytally.__file__).parent
 TABLE = (
     "errors findings local_files spans moc distance_integrals distance magnitudes cosmology times "
     "grouping",
-    "shapes raster working_order skymap cameras observations volume sources dust space visibility",
+    "shapes pieces raster working_order skymap cameras observations volume sources dust space "
+    "visibility",
     "healpix_table skymap_circle skymap_frames skymap_table skymap_io dust_io table_io log_cells "
     "log_columns log_regions log_io image_io region_text camera_io light_curve_io campaign_faults "
     "campaign_model campaign_data campaign_sources campaign positions_io claims_io",
     "selection footprints patchwork covered field_extinction overlay held touching other_fields",
-    "refinement depth tally sharing audit_maps audit_rows audit_times audit_depth reach limits "
-    "exclusion leftover galaxies where "
-    "recounts explanations claim_text claims pointings readings audit_positions audit_footprints",
+    "refinement depth tally sharing reach limits exclusion leftover galaxies where "
+    "recounts explanations claim_text claims pointings readings audit_maps audit_rows audit_times "
+    "audit_depth audit_positions audit_footprints audit",
     "results account serialise",
-    "scaffold wording figure_style projection plots limit_plots sky_picture sky_chart figures limit_figures",
-    "report_tables limit_tables sharing_tables report circular region_files outputs terminal api "
-    "where_text where_json",
+    "scaffold wording figure_style projection plots limit_plots sky_picture sky_chart figures "
+    "limit_figures",
+    "report_tables limit_tables sharing_tables audit_tables report circular region_files outputs "
+    "terminal api check_text where_text where_json",
     "cli __main__",
 )
 LAYERS = {"": 0} | {name: layer for layer, names in enumerate(TABLE) for name in names.split()}

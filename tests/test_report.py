@@ -16,13 +16,12 @@ from itertools import pairwise
 import numpy as np
 import pypdf
 import pytest
+from sample_results import NAMES, sample_map, sample_results
 from skytally.errors import OutputError
 from skytally.report import _fetcher, render_html, render_pdf
 from skytally.results import Results
 from skytally.wording import headline, row_probability
-
-from tests.sample_results import NAMES, sample_map, sample_results
-from tests.space_results import FINDING, SOURCES, with_space
+from space_results import FINDING, SOURCES, with_space
 
 EVIL = '<script>alert(1)</script> & "$x_1$" --> {{ 7 * 7 }}'
 ODD = {

@@ -9,9 +9,10 @@ import numpy as np
 import pytest
 from astropy import units as u
 from astropy.cosmology import WMAP9, Planck18, z_at_value
+from campaign_builder import EVENT_MJD, campaign, log_table, telescope
 from deep_sky import distance_map, map_of
 from scipy.integrate import quad, trapezoid
-from skytally.audit_maps import map_findings
+from skytally.audit_maps import map_findings, sum_findings, version_findings
 from skytally.cosmology import Cosmology
 from skytally.skymap import SkyMap
 from skytally.skymap_io import read_skymap
@@ -188,6 +189,85 @@ def test_a_header_that_disagrees_with_the_cells_is_a_finding(mean, sd, named):
         assert finding.subject == "2 update"
         assert finding.done
         assert finding.remedy
+
+
+HOUR = 1 / 24
+
+
+def versions(*issued_h, listed=None, last_h=30.0):
+    """A campaign of map versions issued so many hours after the event, None where not stated.
+
+    ``listed``: their order in the campaign file; ``last_h``: when the last exposure began.
+    """
+    skymap = distance_map()
+    maps = [
+        replace(
+            skymap,
+            label=str(i),
+            path=f"{i}.fits",
+            issued_mjd=None if hours is None else EVENT_MJD + hours * HOUR,
+        )
+        for i, hours in enumerate(issued_h, 1)
+    ]
+    start = EVENT_MJD + np.array([0.5, last_h]) * HOUR
+    heron = telescope("Heron", None, log_table("Heron", [1.0, 2.0], [0.0, 0.0], start=start))
+    order = listed or range(1, len(maps) + 1)
+    inputs = tuple(("map", f"{i}.fits", "0" * 64) for i in order)
+    return replace(campaign([heron], maps), inputs=inputs)
+
+
+def version_codes(*args, **more):
+    return [(f.code, f.severity, f.subject) for f in version_findings(versions(*args, **more))]
+
+
+def test_versions_as_they_should_be_give_no_findings():
+    assert version_codes(0.1, 3.0, 29.9) == []
+    assert version_codes(None) == []
+    assert version_codes(0.1, None, 3.0) == []
+    assert version_findings(campaign([], [])) == []
+
+
+@pytest.mark.parametrize(("hours", "severity"), [(-0.1, "caution"), (-0.2, "error")])
+def test_a_version_issued_before_the_event(hours, severity):
+    """Some alerts are sent minutes ahead of the event (common practice), none hours."""
+    assert version_codes(hours, 3.0) == [("map-before-event", severity, "1")]
+
+
+def test_versions_in_another_order_than_issued():
+    """Loaded in order of issue; the inputs stand as the campaign file lists them."""
+    assert version_codes(0.1, 3.0, 9.0, listed=(2, 1, 3)) == [("map-order", "caution", "3")]
+    (finding,) = version_findings(versions(0.1, 3.0, 9.0, listed=(1, 3, 2)))
+    assert "lists 3 before" in finding.text
+    # Without all times of issue they stay in the file's order, and 3 is taken for the newest.
+    assert version_codes(9.0, None, 3.0) == [("map-order", "caution", "3")]
+
+
+def test_a_version_that_nobody_followed_is_a_note():
+    assert version_codes(0.1, 3.0, 42.0) == [("map-after-exposures", "note", "3")]
+    (finding,) = version_findings(versions(0.1, 42.0))
+    assert "12.0 h after" in finding.text
+    assert version_codes(0.1, 31.0, 42.0)[0] == ("map-after-exposures", "note", "2")
+    empty = replace(versions(0.1, 42.0), telescopes=())
+    assert version_findings(empty) == []
+
+
+@pytest.mark.parametrize(
+    ("total", "severities"),
+    [
+        (1.0, []),
+        (1.0 + 2e-6, []),  # the rounding of float32 cells
+        (0.9999, ["note"]),
+        (1.00002, ["note"]),
+        (1.0051, ["caution"]),
+        (0.992, ["caution"]),
+    ],
+)
+def test_a_file_that_does_not_sum_to_one(total, severities):
+    found = sum_findings([(replace(distance_map(), label="2 arc"), total)])
+    assert [f.severity for f in found] == severities
+    for finding in found:
+        assert (finding.code, finding.subject) == ("map-not-normalised", "2 arc")
+        assert f"{total:.6g}" in finding.text
 
 
 def test_without_distance_there_is_no_space():

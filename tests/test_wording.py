@@ -8,6 +8,7 @@ from dataclasses import replace
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+from sample_results import sample_results
 from skytally.wording import (
     NBSP,
     area_text,
@@ -32,8 +33,6 @@ from skytally.wording import (
 )
 from small_results import small_results, small_row
 from space_results import SOURCES, with_space
-
-from tests.sample_results import sample_results
 
 fractions = st.floats(0, 1)
 

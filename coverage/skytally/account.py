@@ -10,8 +10,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from skytally import __version__
-from skytally.audit_maps import extinction_findings, map_findings
+from skytally.audit import audit
 from skytally.campaign import LoadedCampaign, Site, Telescope
+from skytally.claims import check_claims
 from skytally.cosmology import Cosmology
 from skytally.covered import Coverage, TallySettings
 from skytally.exclusion import (
@@ -26,7 +27,7 @@ from skytally.exclusion import (
     exclusion_curves,
     fading_plane,
 )
-from skytally.field_extinction import bands_without_coefficient, field_extinction
+from skytally.field_extinction import field_extinction
 from skytally.footprints import Footprints, Progress, lay_footprints
 from skytally.limits import Scene, SeenSource, SourceRow, tally_scenes
 from skytally.refinement import refine_footprints
@@ -96,7 +97,6 @@ def account(
     settings = campaign.settings
     coverage = lay_coverage(campaign, progress) if coverage is None else coverage
     footprints = coverage.footprints
-    dust = campaign.dust, campaign.extinction_coefficients
     cosmology = Cosmology.named(settings.cosmology)
     spaces = [(skymap, Space.of(skymap, cosmology)) for skymap in campaign.maps]
     tally_settings = TallySettings(
@@ -108,6 +108,7 @@ def account(
     depths = _third_dimension(campaign, coverage, rows, spaces, _part(progress, 0.7, 0.95))
     if progress is not None:
         progress("Tallying as pointed", 0.95)
+    findings, silenced = audit(campaign, coverage, spaces)
     return Results(
         software=f"skytally {__version__}",
         event=Event(campaign.event_name, mjd_to_iso(campaign.event_mjd), campaign.event_mjd),
@@ -139,10 +140,9 @@ def account(
         ),
         notes=_notes(campaign),
         sky=SkyData(campaign.maps, _covered(footprints), footprints.outlines),
-        findings=(
-            *map_findings(spaces),
-            *extinction_findings(bands_without_coefficient(footprints, *dust)),
-        ),
+        findings=findings,
+        silenced=silenced,
+        claims=tuple(check_claims(campaign.claims, campaign, coverage, rows)),
         sources=tuple(SourceInfo(source.name, source.text) for source in campaign.sources),
         **depths,
     )
@@ -269,6 +269,7 @@ def _log_count(telescope: Telescope) -> LogCount:
         len(log),
         len(log.set_aside),
         tuple(sorted(Counter(a.reason for a in log.set_aside).items())),
+        log.fault,
     )
 
 

@@ -11,7 +11,7 @@ from skytally.audit_rows import counted, row_words
 from skytally.campaign_data import LoadedCampaign, Telescope
 from skytally.findings import Finding, Severity
 from skytally.footprints import Footprints
-from skytally.pointings import angle_to_nearest, coarse_region, pointings_of
+from skytally.pointings import angle_to_nearest, camera_reach_deg, coarse_region, pointings_of
 from skytally.shapes import AllOf, AnyOf, NotIn, Polygon, Shape, lonlat_to_vector
 from skytally.skymap import Measure
 from skytally.spans import DEG2_PER_SR, FULL_SKY_SR
@@ -25,6 +25,7 @@ _AS_LOGGED = "The numbers are as logged."
 # What `Polygon` says of edges that cross.
 _CROSSED = "(a bow-tie)"
 _MAP_LEVEL = 0.999
+_SIZE_SLACK = 1.4
 
 
 def footprint_findings(campaign: LoadedCampaign, footprints: Footprints) -> list[Finding]:
@@ -47,6 +48,7 @@ def footprint_findings(campaign: LoadedCampaign, footprints: Footprints) -> list
         found += _crossed(telescope)
         found += _both_windings(telescope)
         found += _circles(telescope)
+        found += _other_size(telescope)
     found += _vast(campaign, footprints)
     return found + _off_the_map(campaign, footprints)
 
@@ -139,31 +141,57 @@ def _is_clockwise(polygon: Polygon) -> bool:
 
 
 def _circles(telescope: Telescope) -> list[Finding]:
-    """Note fields that are circles about the pointing for want of a camera."""
+    """Note fields that are circles of a stated diameter for want of a camera."""
     log = telescope.log
-    if telescope.camera is not None:
+    if telescope.camera is not None or log.fov_deg is None:
         return []
-    chosen = np.array(
-        [
-            text.startswith(f"circle {ra!s} {dec!s} ")
-            for text, ra, dec in zip(log.region, log.ra_deg, log.dec_deg, strict=True)
-        ],
-        dtype=bool,
-    )
-    if not chosen.any():
+    own = [
+        text == f"circle {ra!s} {dec!s} {fov / 2!s}"
+        for text, ra, dec, fov in zip(log.region, log.ra_deg, log.dec_deg, log.fov_deg, strict=True)
+    ]
+    rows = log.row[np.array(own, dtype=bool)]
+    if not rows.size:
         return []
-    rows = log.row[chosen]
     return [
         _finding(
             "field-as-circle",
             "note",
             telescope,
             rows,
-            f"The fields of {row_words(rows.tolist())} are circles about the pointing. A field of "
-            "view (s_fov) is the diameter of such a circle, which a camera that is not round "
-            "does not fill.",
+            f"For want of a camera or a region, the fields of {row_words(rows.tolist())} are "
+            "circles of the field of view that the log states (s_fov), which a camera that is "
+            "not round does not fill.",
             "Give the camera, or regions, if the field is not round.",
             "The whole circle counts as covered.",
+        )
+    ]
+
+
+def _other_size(telescope: Telescope) -> list[Finding]:
+    """Report a camera that is much smaller or larger than the field that the log states."""
+    log, camera = telescope.log, telescope.camera
+    if camera is None or log.fov_deg is None:
+        return []
+    round_deg = 2 * float(np.sqrt(camera.area_deg2 / np.pi))
+    across_deg = 2 * camera_reach_deg(camera)
+    # A stated size may be a side, a diagonal or a diameter.
+    other = (log.fov_deg < round_deg / _SIZE_SLACK) | (log.fov_deg > across_deg * _SIZE_SLACK)
+    other &= (log.region == "").astype(bool)
+    if not other.any():
+        return []
+    rows, stated = log.row[other], log.fov_deg[other]
+    extent = f"{stated.min():.3g}" + (f" to {stated.max():.3g}" if np.ptp(stated) > 0 else "")
+    return [
+        _finding(
+            "camera-of-another-size",
+            "caution",
+            telescope,
+            rows,
+            f"The log states fields {extent} deg across in {row_words(rows.tolist())}; the "
+            f"camera ({telescope.camera_text}) is {across_deg:.3g} deg across, and its area is "
+            f"that of a circle of {round_deg:.3g} deg.",
+            "See which of the two is right: the stated size is a diameter in degrees.",
+            "The camera counts, not the stated size.",
         )
     ]
 

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Callable
+import os
+from collections.abc import Callable, Sequence
 from dataclasses import replace
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
@@ -14,6 +15,7 @@ import numpy as np
 from skytally.camera_io import read_mosaic
 from skytally.cameras import Camera, CircleCamera, MosaicCamera
 from skytally.campaign_data import (
+    AuditOptions,
     CampaignSettings,
     LoadedCampaign,
     ReportText,
@@ -22,8 +24,10 @@ from skytally.campaign_data import (
 )
 from skytally.campaign_faults import Entry, key_path, parse_campaign
 from skytally.campaign_model import (
+    AuditTable,
     CameraTable,
     CircleCameraTable,
+    ClaimTable,
     DepthTable,
     ExtinctionTable,
     ImagesTable,
@@ -38,6 +42,7 @@ from skytally.campaign_model import (
     is_region_text,
 )
 from skytally.campaign_sources import build_source, extinction_notes, source_notes
+from skytally.claims_io import Claim, parse_claim, read_claims
 from skytally.dust import Dust
 from skytally.dust_io import read_dust
 from skytally.errors import CampaignError, InputError, SkytallyError
@@ -54,6 +59,7 @@ from skytally.skymap_io import circle_skymap, read_skymap
 from skytally.sources import Source
 
 __all__ = [
+    "AuditOptions",
     "CampaignSettings",
     "LoadedCampaign",
     "ReportText",
@@ -82,7 +88,8 @@ def load_campaign(path: str | Path) -> LoadedCampaign:
     path = Path(path)
     parsed = parse_campaign(path)
     event_mjd = None if parsed.event is None else _mjd(parsed.event.time)
-    loader = _Loader(path.parent, event_mjd, parsed.settings)
+    audit = parsed.audit or AuditTable()
+    loader = _Loader(path.parent, event_mjd, parsed.settings, audit)
     loader.problems.extend(parsed.problems)
     loader.inputs.append(("campaign", path.name, parsed.sha256))
     maps = [loader.map_version(entry) for entry in parsed.maps]
@@ -90,7 +97,8 @@ def load_campaign(path: str | Path) -> LoadedCampaign:
     extinction = parsed.extinction or ExtinctionTable()
     dust = loader.dust(extinction)
     sources = [loader.source(entry) for entry in parsed.sources]
-    loader.raise_faults(path)
+    claims = [claim for entry in parsed.claims for claim in loader.claims(entry)]
+    loader.raise_faults(path, telescopes)
     if parsed.event is None or event_mjd is None or parsed.settings is None:
         raise AssertionError("a table is missing and no fault was listed")
     found = tuple(m for m in maps if m is not None)
@@ -113,27 +121,44 @@ def load_campaign(path: str | Path) -> LoadedCampaign:
         dust=dust,
         extinction_coefficients=extinction.coefficients,
         dust_path=extinction.map,
+        audit=_audit(audit),
+        claims=tuple(claims),
     )
 
 
 class _Loader:
     """Loads what a campaign names and gathers faults, notes and input files."""
 
-    def __init__(self, base: Path, event_mjd: float | None, settings: SettingsTable | None) -> None:
+    def __init__(
+        self,
+        base: Path,
+        event_mjd: float | None,
+        settings: SettingsTable | None,
+        audit: AuditTable,
+    ) -> None:
         self.base = base
         self.event_mjd = event_mjd
         self.settings = settings
+        self.whole_audit = audit
         self.problems: list[str] = []
         self.errors: list[SkytallyError] = []
         self.inputs: list[tuple[str, str, str]] = []
         self.notes: list[str] = []
+        self.unread: list[SkytallyError] = []
 
-    def raise_faults(self, path: Path) -> None:
-        """Raise a lone fault of a file as it is, otherwise one error that lists all."""
-        if len(self.errors) == 1 and not self.problems:
-            raise self.errors[0]
-        if self.problems or self.errors:
-            raise CampaignError([*self.problems, *map(str, self.errors)], file=path)
+    def raise_faults(self, path: Path, telescopes: Sequence[Telescope | None]) -> None:
+        """Raise a lone fault of a file as it is, otherwise one error that lists all.
+
+        A log that cannot be read is passed over where another telescope's can.
+        """
+        one_read = any(t is not None and not t.log.fault for t in telescopes)
+        if one_read and not self.problems and not self.errors:
+            return
+        errors = [*self.errors, *self.unread]
+        if len(errors) == 1 and not self.problems:
+            raise errors[0]
+        if self.problems or errors:
+            raise CampaignError([*self.problems, *map(str, errors)], file=path)
 
     def attempt(self, read: Callable[[], Result], file: str) -> Result | None:
         """Return what a reader returns; None, with the fault kept, where it fails."""
@@ -195,6 +220,8 @@ class _Loader:
         """Load one telescope: log, camera, mask and searchable region."""
         table = entry.table
         log, regions = self._log(table)
+        if log is not None:
+            log = self._dated(table, log)
         camera = self._camera(table.camera)
         mask = [self._region(text) for text in table.mask or ()]
         searchable = None
@@ -202,7 +229,7 @@ class _Loader:
             searchable = self.file("searchable", table.searchable, read_moc)
         if log is None:
             return None
-        if entry.whole:
+        if entry.whole and not log.fault:
             self._need_regions(entry, log)
             self._need_offsets(entry, log)
         self._note_unused(table, log)
@@ -219,6 +246,8 @@ class _Loader:
             mask=tuple(m for m in mask if m is not None),
             searchable=searchable,
             regions=regions,
+            audit=_audit(self.whole_audit, table.audit),
+            default_depth=table.defaults.depth,
         )
 
     def dust(self, table: ExtinctionTable) -> Dust | None:
@@ -242,8 +271,41 @@ class _Loader:
         system = "AB" if self.settings is None else self.settings.magnitude_system
         return build_source(table, curves, system)
 
+    def claims(self, entry: Entry[ClaimTable]) -> tuple[Claim, ...]:
+        """Load one claim, or a file of them."""
+        table = entry.table
+        stated = table.model_dump(exclude_none=True)
+        place = key_path(("claim", entry.number - 1), (), stated)
+        if table.file is not None:
+            if len(stated) > 1:
+                self.problems.append(
+                    f"{place}: a file and a claim in one table. Give each a [[claim]] of its own."
+                )
+            return self.file("claims", table.file, read_claims) or ()
+        try:
+            return (parse_claim(stated),)
+        except InputError as fault:
+            self.problems.append(f"{place}: {fault}")
+        return ()
+
     def _log(self, table: TelescopeTable) -> tuple[LogTable | None, dict[str, Shape]]:
-        """Load a log or images, and the regions that the rows bring."""
+        """Load a log or images, and the regions that the rows bring.
+
+        A log that cannot be read stands as one without rows, so that it does
+        not stop the others.
+        """
+        before = len(self.errors)
+        log, regions = self._read_log(table)
+        if log is None and len(self.errors) > before:
+            fault = self.errors.pop()
+            self.unread.append(fault)
+            file = table.log.file if table.log is not None else ""
+            if table.images is not None:
+                file = table.images.files
+            log = LogTable.unread(table.name, file, self._without_base(str(fault)))
+        return log, regions
+
+    def _read_log(self, table: TelescopeTable) -> tuple[LogTable | None, dict[str, Shape]]:
         if table.log is not None:
             name = table.log.file
             options = _log_options(table, table.log, self.event_mjd)
@@ -266,6 +328,17 @@ class _Loader:
                 "check the event's time and the reasons of the rows."
             )
         return log, regions
+
+    def _without_base(self, text: str) -> str:
+        """Name files as the campaign does, not as this machine does."""
+        return text if self.base == Path() else text.replace(f"{self.base}{os.sep}", "")
+
+    def _dated(self, table: TelescopeTable, log: LogTable) -> LogTable:
+        """Note when the log's file was last changed."""
+        if table.log is None or log.fault:
+            return log
+        changed = datetime.fromtimestamp((self.base / table.log.file).stat().st_mtime, UTC)
+        return replace(log, modified_mjd=_mjd(changed))
 
     def _named(self, log: LogTable) -> LogTable:
         """Name the log and its rows' files as the campaign does, not as this machine does."""
@@ -427,6 +500,19 @@ def _settings(table: SettingsTable) -> CampaignSettings:
         table.bracket,
         table.cosmology,
     )
+
+
+def _audit(*tables: AuditTable) -> AuditOptions:
+    """Merge tables of what to look for, the more particular ones later."""
+    options = AuditOptions()
+    for table in tables:
+        options = AuditOptions(
+            options.airmass if table.airmass is None else table.airmass,
+            options.moon_deg if table.moon is None else table.moon,
+            {**options.demote, **table.demote},
+            options.silence | set(table.silence),
+        )
+    return options
 
 
 def _report(table: ReportTable) -> ReportText:

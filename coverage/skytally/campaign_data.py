@@ -7,16 +7,18 @@ from dataclasses import dataclass, field
 from pathlib import Path
 
 from skytally.cameras import Camera
+from skytally.claims_io import Claim
 from skytally.cosmology import DEFAULT_COSMOLOGY
 from skytally.dust import Dust
 from skytally.errors import UsageError
+from skytally.findings import Severity
 from skytally.observations import LogTable
 from skytally.shapes import Shape
 from skytally.skymap import SkyMap
 from skytally.sources import Source
 from skytally.spans import Spans
 
-__all__ = ["CampaignSettings", "LoadedCampaign", "ReportText", "Site", "Telescope"]
+__all__ = ["AuditOptions", "CampaignSettings", "LoadedCampaign", "ReportText", "Site", "Telescope"]
 
 
 @dataclass(frozen=True)
@@ -56,6 +58,28 @@ class CampaignSettings:
 
 
 @dataclass(frozen=True)
+class AuditOptions:
+    """What the audit of one telescope looks for, and how loudly it speaks.
+
+    Attributes
+    ----------
+    airmass : float
+        Airmass above which a pointing is doubted.
+    moon_deg : float
+        Distance from the Moon, in degrees, below which it is noted.
+    demote : mapping of code to severity
+        Findings to be given a milder severity.
+    silence : frozenset of str
+        Codes of findings that are only counted.
+    """
+
+    airmass: float = 3.0
+    moon_deg: float = 15.0
+    demote: Mapping[str, Severity] = field(default_factory=dict)
+    silence: frozenset[str] = frozenset()
+
+
+@dataclass(frozen=True)
 class ReportText:
     """Who signs the report: authors, their affiliations, acknowledgements."""
 
@@ -90,6 +114,10 @@ class Telescope:
         Every footprint is cut to it; None for no cut.
     regions : mapping of str to Shape
         The shape of every distinct region cell of the log.
+    audit : AuditOptions
+        What the audit looks for.
+    default_depth : float or None
+        The limit that the campaign gives to rows without one.
     """
 
     name: str
@@ -103,6 +131,8 @@ class Telescope:
     mask: tuple[Shape, ...] = ()
     searchable: Spans | None = None
     regions: Mapping[str, Shape] = field(default_factory=dict)
+    audit: AuditOptions = AuditOptions()
+    default_depth: float | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -136,6 +166,10 @@ class LoadedCampaign:
         The user's own A_b / E(B−V) per band, before the published ones.
     dust_path : str or None
         The dust map as the campaign names it.
+    audit : AuditOptions
+        For findings that concern no single telescope.
+    claims : tuple of Claim
+        What others have stated.
     """
 
     path: Path
@@ -151,6 +185,8 @@ class LoadedCampaign:
     dust: Dust | None = None
     extinction_coefficients: Mapping[str, float] = field(default_factory=dict)
     dust_path: str | None = None
+    audit: AuditOptions = AuditOptions()
+    claims: tuple[Claim, ...] = ()
 
     def map(self, version: str | None = None) -> SkyMap:
         """Return one map version, the newest if none is named.

@@ -23,6 +23,8 @@ from pydantic_core import ErrorDetails
 
 from skytally.campaign_model import (
     TABLES,
+    AuditTable,
+    ClaimTable,
     EventTable,
     ExtinctionTable,
     MapTable,
@@ -48,13 +50,15 @@ _SINGLE = {
     "settings": "settings",
     "extinction": "map and coefficients",
     "report": "authors and thanks",
+    "audit": "airmass, moon, demote and silence",
 }
 _LISTED = {
     "map": "version and file",
     "telescope": "name, camera and log",
     "source": "name and magnitude",
+    "claim": "telescope, quantity and value",
 }
-_OPTIONAL = ("source",)
+_OPTIONAL = ("source", "claim")
 
 # What was expected, by the kind of fault; {…} is filled from the key's own limits.
 _EXPECTED = {
@@ -134,9 +138,11 @@ class ParsedCampaign:
     settings: SettingsTable | None
     extinction: ExtinctionTable | None
     report: ReportTable | None
+    audit: AuditTable | None
     maps: tuple[Entry[MapTable], ...]
     telescopes: tuple[Entry[TelescopeTable], ...]
     sources: tuple[Entry[SourceTable], ...]
+    claims: tuple[Entry[ClaimTable], ...]
     problems: tuple[str, ...]
 
 
@@ -179,9 +185,11 @@ def parse_campaign(path: Path) -> ParsedCampaign:
         single(SettingsTable, "settings"),
         single(ExtinctionTable, "extinction"),
         single(ReportTable, "report"),
+        single(AuditTable, "audit"),
         listed(MapTable, "map"),
         listed(TelescopeTable, "telescope"),
         listed(SourceTable, "source"),
+        listed(ClaimTable, "claim"),
         (),
     )
     problems.extend(_duplicates(raw, "map", "version"))

@@ -25,12 +25,15 @@ from pydantic_core import PydanticCustomError
 
 from skytally.cosmology import DEFAULT_COSMOLOGY, known_cosmologies
 from skytally.errors import RegionError
+from skytally.findings import CODES, SEVERITIES, Severity
 from skytally.region_text import parse_region
 
 __all__ = [
     "TABLES",
+    "AuditTable",
     "CameraTable",
     "CircleCameraTable",
+    "ClaimTable",
     "DefaultsTable",
     "DepthTable",
     "DetectionTable",
@@ -337,6 +340,62 @@ class LogFileTable(Table):
     decimal: Literal[".", ","] | None = Field(default=None, description="the decimal sign")
 
 
+def _codes(value: object) -> tuple[str, ...]:
+    """Check a list of codes of findings."""
+    if not isinstance(value, list | tuple) or not all(isinstance(code, str) for code in value):
+        raise _refusal('a list of codes in quotes, such as ["moon-near"]')
+    for code in value:
+        if code not in CODES:
+            near = get_close_matches(code, CODES, 1)
+            hint = f"Did you mean {near[0]}? " if near else ""
+            raise _refusal(
+                f"codes of findings, and {code!r:.40} is none",
+                f"{hint}skytally check prints the code of each finding.",
+            )
+    return tuple(value)
+
+
+def _demoted(value: object) -> dict[str, Severity]:
+    """Check a table of a milder severity for each code."""
+    if not isinstance(value, dict):
+        raise _refusal('a table in braces, such as { "low-airmass" = "note" }')
+    for code, severity in zip(_codes(list(value)), value.values()):
+        if severity not in SEVERITIES[1:]:
+            raise _refusal(f'"caution" or "note" for {code}', "To drop it, put it into silence.")
+    return value
+
+
+class AuditTable(Table):
+    """``[audit]`` and ``[[telescope]] audit``: what the audit is to look for, and how loudly."""
+
+    airmass: float | None = Field(
+        default=None, gt=1, le=40, description="the airmass above which a pointing is doubted"
+    )
+    moon: float | None = Field(
+        default=None, ge=0, le=180, description="the degrees from the Moon that are noted"
+    )
+    demote: Annotated[dict[str, Severity], PlainValidator(_demoted)] = Field(
+        default={}, description='{ "airmass-high" = "note" }'
+    )
+    silence: Annotated[tuple[str, ...], PlainValidator(_codes)] = Field(
+        default=(), description='["moon-near"]'
+    )
+
+
+class ClaimTable(Table):
+    """``[[claim]]``: a number that somebody has stated, or a file of them."""
+
+    file: LocalFile | None = Field(default=None, description="a table of claims")
+    telescope: str | None = Field(default=None, description='a telescope\'s name, or "all"')
+    map: str | None = Field(default=None, description="the map version; the newest if not given")
+    band: str | None = Field(default=None, description="the band in quotes")
+    night: str | None = Field(default=None, description='the night in quotes: "2031-03-14"')
+    quantity: str | None = Field(default=None, description='what is stated: "probability"')
+    value: str | None = Field(default=None, description='the value in quotes: "43.5 %"')
+    stated_by: str | None = Field(default=None, description="who states it, in quotes")
+    where: str | None = Field(default=None, description="where it is stated, in quotes")
+
+
 class ImagesTable(Table):
     """``[[telescope]] images``."""
 
@@ -404,6 +463,7 @@ class TelescopeTable(Table):
         Field(default=None, description="a MOC file, or a list of region texts and MOC files")
     )
     searchable: LocalFile | None = Field(default=None, description="a MOC file")
+    audit: AuditTable = Field(default=AuditTable(), description="{ airmass = 3.0, moon = 15.0 }")
 
 
 class ExtinctionTable(Table):
@@ -483,6 +543,8 @@ TABLES: dict[tuple[str, ...], type[Table]] = {
     ("settings", "revisit"): RevisitTable,
     ("extinction",): ExtinctionTable,
     ("report",): ReportTable,
+    ("audit",): AuditTable,
+    ("claim",): ClaimTable,
     ("map",): MapTable,
     ("map", "circle"): MapCircleTable,
     ("source",): SourceTable,
@@ -497,4 +559,5 @@ TABLES: dict[tuple[str, ...], type[Table]] = {
     ("telescope", "images"): ImagesTable,
     ("telescope", "defaults"): DefaultsTable,
     ("telescope", "depth"): DepthTable,
+    ("telescope", "audit"): AuditTable,
 }

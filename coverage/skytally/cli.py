@@ -32,6 +32,7 @@ if TYPE_CHECKING:
 
 __all__ = ["app", "main"]
 
+EXIT_ERRORS_FOUND = 1
 EXIT_INPUT = 2
 EXIT_UNEXPECTED = 70  # EX_SOFTWARE of sysexits.h
 EXIT_INTERRUPTED = 130
@@ -42,8 +43,9 @@ SECONDS_BEFORE_BAR = 1.0
 
 _HELP = "Account for completed observations of an event with an uncertain position."
 _EPILOG = (
-    "Exit codes: 0 done; 2 bad input or usage; 3 an output could not be made; "
-    "70 a fault of skytally itself; 130 stopped by Ctrl-C."
+    "Exit codes: 0 done; 1 done, but check found errors or a log could not be read; "
+    "2 bad input or usage; 3 an output could not be made; 70 a fault of skytally itself; "
+    "130 stopped by Ctrl-C."
 )
 
 
@@ -155,6 +157,7 @@ def report(
         written = write_outputs(results, out, progress)
     _print(to_json(results) if json else render_answer(results, sys.stdout))
     _say(f"Wrote {len(written)} files to {out}")
+    _leave_if_unread(results)
 
 
 @app.command("tally")
@@ -171,6 +174,7 @@ def tally(
     if map is not None:
         results = select_map(results, map)
     _print(to_json(results) if json else render_tally(results, sys.stdout))
+    _leave_if_unread(results)
 
 
 @app.command("regions")
@@ -192,17 +196,101 @@ def regions(campaign: CampaignPath, out: OutDir, map: MapVersion = None) -> None
     remaining = {source: one.remaining for source, one in left.items()}
     _print(render_left_over(skymap.label, remaining, left_over_files(left), sys.stdout))
     _say(f"Wrote {len(written)} files to {out}")
+    _leave_if_unread(results)
+
+
+@app.command("check")
+def check(
+    campaign: CampaignPath,
+    json: Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")] = False,
+) -> None:
+    """Say what in the logs, the maps and the stated numbers does not hold."""
+    from skytally.check_text import render_check, to_check_json
+
+    _, results = _account(campaign)
+    _print(to_check_json(results) if json else render_check(results, sys.stdout))
+    if any(finding.severity == "error" for finding in results.findings):
+        raise typer.Exit(EXIT_ERRORS_FOUND)
+
+
+@app.command("where", context_settings={"ignore_unknown_options": True})  # -31:04 is no option
+def where(
+    campaign: CampaignPath,
+    ra: Annotated[
+        str | None,
+        typer.Argument(metavar="RA", help="Degrees, or hours as 10:21:43.2.", show_default=False),
+    ] = None,
+    dec: Annotated[
+        str | None,
+        typer.Argument(metavar="DEC", help="Degrees, or as -31:04:12.", show_default=False),
+    ] = None,
+    positions: Annotated[
+        Path | None,
+        typer.Option(
+            "--positions",
+            metavar="FILE",
+            help="Table of positions (name, ra, dec), or of galaxies with distances to be ranked.",
+        ),
+    ] = None,
+    weight: Annotated[
+        str | None,
+        typer.Option(
+            "--weight",
+            metavar="BY",
+            help="What galaxies weigh beside probability per volume: none, luminosity or mass.",
+        ),
+    ] = None,
+    completeness: Annotated[
+        float | None,
+        typer.Option(
+            "--completeness",
+            metavar="C",
+            help="Share of all galaxies' weight that the table holds, 0 to 1.",
+        ),
+    ] = None,
+    json: Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")] = False,
+) -> None:
+    """Say which exposures saw a position, how deep, and how probable it is."""
+    from skytally.cosmology import Cosmology
+    from skytally.footprints import lay_footprints
+    from skytally.positions_io import parse_position, read_positions
+    from skytally.where import INDEX_ORDER, choose_ranking, look_up
+    from skytally.where_json import where_to_json
+    from skytally.where_text import render_where
+
+    if (ra is None or dec is None) == (positions is None):
+        raise UsageError(
+            "expected one position, or a table of them",
+            remedy="Give RA and DEC, or --positions FILE.",
+        )
+    with _progress("Reading") as progress:
+        loaded = _load(campaign)
+        if positions is not None:
+            cosmology = Cosmology.named(loaded.settings.cosmology)
+            asked = read_positions(positions, cosmology)
+        else:
+            assert ra is not None
+            assert dec is not None
+            asked = parse_position(ra, dec)
+        ranking = choose_ranking(loaded, asked, weight, completeness)
+        order = INDEX_ORDER if ranking is None else None
+        answer = look_up(loaded, lay_footprints(loaded, progress, order), asked, ranking)
+    _print(where_to_json(answer) if json else render_where(answer, sys.stdout))
 
 
 def _tally(campaign: str, rest: str) -> Results:
     """Load a campaign and account for it, with progress and with the faults of its rows."""
+    loaded, results = _account(campaign)
+    _report_faults(loaded, results, rest)
+    return results
+
+
+def _account(campaign: str) -> tuple[LoadedCampaign, Results]:
     from skytally.account import account
 
     with _progress("Reading") as progress:
         loaded = _load(campaign)
-        results = account(loaded, progress)
-    _report_faults(loaded, results, rest)
-    return results
+        return loaded, account(loaded, progress)
 
 
 def _load(campaign: str) -> LoadedCampaign:
@@ -218,7 +306,10 @@ def _load(campaign: str) -> LoadedCampaign:
 
 
 def _report_faults(loaded: LoadedCampaign, results: Results, rest: str) -> None:
-    """Say which rows are set aside as faulty, and what was noted."""
+    """Say which logs could not be read, which rows are set aside as faulty, and what was noted."""
+    for log in results.logs:
+        if log.fault:
+            _say(f"Error: {log.fault} The answer is without {log.telescope}.")
     faults = [
         f"{item.file}, row {item.row}: {item.detail}"
         for telescope in loaded.telescopes
@@ -227,6 +318,12 @@ def _report_faults(loaded: LoadedCampaign, results: Results, rest: str) -> None:
     ]
     _list(faults, "row set aside", "rows set aside", rest)
     _list([f"Note: {note}" for note in results.notes], "note", "notes", rest)
+
+
+def _leave_if_unread(results: Results) -> None:
+    """End with the code that says so if the answer is without a telescope's log."""
+    if any(log.fault for log in results.logs):
+        raise typer.Exit(EXIT_ERRORS_FOUND)
 
 
 def _list(lines: Sequence[str], one: str, many: str, rest: str) -> None:

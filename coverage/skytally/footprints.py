@@ -17,6 +17,7 @@ from skytally.raster import (
     Pieces,
     Raster,
     pieces_of_shape,
+    rasterise,
     rasterise_shape,
     stack_rasters,
 )
@@ -83,11 +84,15 @@ class _Laid:
     outlines: tuple[Floats, ...]
 
 
-def lay_footprints(campaign: LoadedCampaign, progress: Progress | None = None) -> Footprints:
+def lay_footprints(
+    campaign: LoadedCampaign, progress: Progress | None = None, order: int | None = None
+) -> Footprints:
     """Gather the exposures, lay every distinct footprint, and rasterise it.
 
     The working order of each footprint is chosen so that its own area and that
-    of every band and night of its telescope keep to a stated error.
+    of every band and night of its telescope keep to a stated error, unless one
+    ``order`` for all is given: then the raster is an index to the footprints
+    and no measure of them.
     """
     bands, nights = _names(campaign)
     rasters, pieces, per_footprint, owners = [], [], [], []
@@ -100,7 +105,7 @@ def lay_footprints(campaign: LoadedCampaign, progress: Progress | None = None) -
         band = np.array([bands.index(b or UNSTATED_BAND) for b in telescope.log.band], dtype=int)
         night = _night(telescope)
         clip = _clips(telescope)
-        rasters.append(clip_raster(_rasterise(laid, band, night), clip))
+        rasters.append(clip_raster(_rasterise(laid, band, night, order), clip))
         clips.append(clip)
         everything = np.arange(len(laid.pieces))
         pieces.append(laid.pieces.take(everything, laid.pieces.owner + first))
@@ -275,20 +280,28 @@ def _outline(shape: Circle | Polygon) -> Floats:
     return ring
 
 
-def _rasterise(laid: _Laid, band: Ints, night: Ints) -> Raster:
-    """Rasterise one telescope's footprints, each at its own working order."""
+def _rasterise(laid: _Laid, band: Ints, night: Ints, order: int | None) -> Raster:
+    """Rasterise one telescope's footprints, each at its own working order or all at one."""
     rows = [laid.footprint[kind == one] for kind in (band, night) for one in np.unique(kind)]
     simple = np.unique(laid.pieces.owner)
     pieces = laid.pieces.take(
         np.arange(len(laid.pieces)), np.searchsorted(simple, laid.pieces.owner)
     )
     groups = [np.searchsorted(simple, row[np.isin(row, simple)]) for row in rows]
-    parts = [rasterise_to_target(pieces, simple.size, groups)]
+    parts = [
+        rasterise_to_target(pieces, simple.size, groups)
+        if order is None
+        else rasterise(pieces, simple.size, order)
+    ]
     owners = [simple]
     other = [np.unique(row[~np.isin(row, simple)]) for row in rows]
     for owner, shape in laid.other.items():
         companions = min(row.size for row in other if owner in row)
-        parts.append(rasterise_shape_to_target(shape, companions))
+        parts.append(
+            rasterise_shape_to_target(shape, companions)
+            if order is None
+            else rasterise_shape(shape, order)
+        )
         owners.append(np.array([owner]))
     return stack_rasters(parts).take(np.argsort(np.concatenate(owners)))
 

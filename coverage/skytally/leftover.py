@@ -207,5 +207,6 @@ def _normalised(skymap: SkyMap, density: Floats, layer: DistanceLayer | None) ->
         path=None,
         sha256=None,
         notes=(),
+        file_sum=None,
     )
     return LeftOver(rest, remaining)

@@ -3,9 +3,8 @@
 from __future__ import annotations
 
 from skytally.exclusion import AbsoluteLimit, ExclusionCurve, FadingPlane
-from skytally.findings import Finding
 from skytally.limits import SourceRow
-from skytally.report_tables import Cell, Column, Table, capped, columns_of
+from skytally.report_tables import Cell, Table, capped, columns_of
 from skytally.results import MapInfo, Results
 from skytally.tally import TallyRow
 from skytally.wording import (
@@ -42,7 +41,6 @@ def limit_tables(results: Results) -> dict[str, Table]:
         _absolute_limits(results),
         _exclusion(results),
         _fading(results),
-        _findings(results),
     )
     return {table.name: capped(table) for table in made}
 
@@ -434,33 +432,3 @@ def _fading_rows(
         for row in range(0, len(plane.fade_per_day), _FADING_ROWS)
     )
     return rows, tuple(plane.peak[c] for c in columns)
-
-
-def _findings(results: Results) -> Table:
-    def where(finding: Finding) -> str:
-        if not finding.rows:
-            return ""
-        shown = ", ".join(map(str, finding.rows[:12]))
-        more = f" and {len(finding.rows) - 12} more" if len(finding.rows) > 12 else ""
-        return f"row{'' if len(finding.rows) == 1 else 's'} {shown}{more}"
-
-    return Table(
-        "findings",
-        "Findings, the gravest first",
-        tuple(Column(t, numeric=False) for t in ("severity", "of", "seen", "done", "to do")),
-        tuple(
-            (
-                Cell(finding.severity),
-                Cell(finding.subject, where(finding)),
-                Cell(finding.text),
-                Cell(finding.done),
-                Cell(finding.remedy),
-            )
-            for finding in _by_severity(results.findings)
-        ),
-    )
-
-
-def _by_severity(findings: tuple[Finding, ...]) -> list[Finding]:
-    order = ("error", "caution", "note")
-    return sorted(findings, key=lambda f: order.index(f.severity) if f.severity in order else 3)

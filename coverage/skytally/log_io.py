@@ -181,8 +181,7 @@ class _Reading:
         band = [_text(x) or self._options.band or "" for x in self._cells("band")]
         depth = self._magnitude("depth", self._options.depth)
         extinction = self._extinction()
-        if self._options.use_fov:
-            self._add_fields_of_view(region, ra, dec)
+        fov = self._fields_of_view(region, ra, dec)
         self._set_aside_early(start)
         self._set_aside_duplicates(zip(start, ra, dec, angle, band, region, strict=True))
         used = np.array([i for i in range(self._count) if i not in self._aside], dtype=np.int64)
@@ -206,6 +205,7 @@ class _Reading:
             depth=depth,
             extinction=extinction,
             region=_objects(region),
+            fov_deg=fov,
             set_aside=set_aside,
             notes=tuple(self._notes),
         )
@@ -412,16 +412,20 @@ class _Reading:
         self._put_aside_cells("extinction", dict.fromkeys(wrong, fault))
         return values
 
-    def _add_fields_of_view(
+    def _fields_of_view(
         self, region: list[str], ra: NDArray[np.float64], dec: NDArray[np.float64]
-    ) -> None:
-        """Give rows without region a circle; `s_fov` is a diameter (ObsCore 1.1, 3.3.1.3)."""
+    ) -> NDArray[np.float64] | None:
+        """Stated diameters (ObsCore 1.1, 3.3.1.3); rows without region may get a circle of it."""
+        if "fov" not in self._at:
+            return None
         unit = self._unit("fov", UNIT_DEGREES, "degrees")
         fov, faults = read_cells(self._cells("fov"), lambda x: read_angle(x, unit, self._comma))
-        for index in np.flatnonzero(np.isfinite(ra) & (fov > 0)):
-            if not region[index]:
-                region[index] = f"circle {ra[index]!s} {dec[index]!s} {fov[index] / 2!s}"
-        self._put_aside_cells("fov", {i: x for i, x in faults.items() if not region[i]})
+        if self._options.use_fov:
+            for index in np.flatnonzero(np.isfinite(ra) & (fov > 0)):
+                if not region[index]:
+                    region[index] = f"circle {ra[index]!s} {dec[index]!s} {fov[index] / 2!s}"
+            self._put_aside_cells("fov", {i: x for i, x in faults.items() if not region[i]})
+        return fov
 
     def _set_aside_early(self, start: NDArray[np.float64]) -> None:
         limit = self._options.not_before_mjd

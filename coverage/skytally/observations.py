@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -25,6 +26,10 @@ _COLUMNS = (
     "extinction",
     "region",
 )
+_KINDS: dict[str, type] = {
+    "row": np.int64,
+    **dict.fromkeys(("exposure", "band", "region"), np.object_),
+}
 
 
 @dataclass(frozen=True)
@@ -99,6 +104,9 @@ class LogTable:
         The other rows.
     notes : tuple of str
         What the reader noticed or assumed about the file as a whole.
+    fov_deg : float64 array or None
+        Diameter of the field as the log states it (degrees), NaN where it does not;
+        None where the log has no such column.
     before_event : LogTable or None
         The rows set aside as taken before the event, for the audit of clocks.
     modified_mjd : float or None
@@ -124,6 +132,7 @@ class LogTable:
     region: NDArray[np.object_]
     set_aside: tuple[SetAside, ...] = ()
     notes: tuple[str, ...] = ()
+    fov_deg: NDArray[np.float64] | None = None
     before_event: LogTable | None = None
     modified_mjd: float | None = None
     fault: str = ""
@@ -131,9 +140,19 @@ class LogTable:
     def __len__(self) -> int:
         return int(self.row.size)
 
+    @classmethod
+    def unread(cls, telescope: str, file: str, fault: str) -> LogTable:
+        """Stand for a log that could not be read at all."""
+        none: dict[str, Any] = {
+            name: np.empty(0, dtype=_KINDS.get(name, np.float64)) for name in _COLUMNS
+        }
+        return cls(telescope=telescope, file=file, sha256="", read=0, fault=fault, **none)
+
     def take(self, rows: NDArray[np.int64]) -> LogTable:
         """Keep the accepted rows at these positions; all else stays as it is."""
-        return replace(self, **{name: getattr(self, name)[rows] for name in _COLUMNS})
+        fov = None if self.fov_deg is None else self.fov_deg[rows]
+        columns = {name: getattr(self, name)[rows] for name in _COLUMNS}
+        return replace(self, fov_deg=fov, **columns)
 
 
 @dataclass(frozen=True, eq=False)

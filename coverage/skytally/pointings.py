@@ -10,7 +10,7 @@ from astropy_healpix import healpix_to_lonlat, healpix_to_xyz
 from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
-from skytally.cameras import CircleCamera
+from skytally.cameras import Camera, CircleCamera
 from skytally.campaign_data import Telescope
 from skytally.observations import SECONDS_PER_DAY, LogTable
 from skytally.raster import cell_radius_rad
@@ -21,6 +21,7 @@ from skytally.spans import LINE_ORDER, Ints, Spans, cell_to_span, spans_to_cells
 __all__ = [
     "Pointings",
     "angle_to_nearest",
+    "camera_reach_deg",
     "coarse_region",
     "middle_mjd",
     "pointings_of",
@@ -60,7 +61,7 @@ class Pointings:
 def pointings_of(telescope: Telescope) -> Pointings:
     """Find where a telescope's accepted exposures were pointed, in the order of its log."""
     log = telescope.log
-    radius = np.full(len(log), _camera_reach_deg(telescope))
+    radius = np.full(len(log), camera_reach_deg(telescope.camera))
     ra, dec = log.ra_deg.copy(), log.dec_deg.copy()
     known: dict[str, tuple[float, float, float]] = {}
     for place in np.flatnonzero(log.region != ""):
@@ -76,9 +77,8 @@ def middle_mjd(log: LogTable) -> Floats:
     return log.start_mjd + log.duration_s / (2 * SECONDS_PER_DAY)
 
 
-def _camera_reach_deg(telescope: Telescope) -> float:
+def camera_reach_deg(camera: Camera | None) -> float:
     """Angle from the pointing to the farthest point of a camera's field; 0 without a camera."""
-    camera = telescope.camera
     if camera is None:
         return 0.0
     if isinstance(camera, CircleCamera):

@@ -14,6 +14,7 @@ import matplotlib
 from jinja2 import Environment, FunctionLoader, StrictUndefined
 from markupsafe import Markup
 
+from skytally.audit_tables import audit_tables
 from skytally.errors import OutputError
 from skytally.figure_style import Drawing, swatch_svg
 from skytally.figures import draw_figures
@@ -144,7 +145,10 @@ def _render(
         headline=headline(results),
         key_figures=key_figures(results),
         figures={name: (d, Markup(d.svg)) for name, d in figures.items()},
-        tables=tables(results) | sharing_tables(results) | limit_tables(results),
+        tables=tables(results)
+        | sharing_tables(results)
+        | limit_tables(results)
+        | audit_tables(results),
         terms=limit_terms(results.settings, limit_rows(results)),
         sources=[(source.name, *source_words(source)) for source in results.sources],
         no_distance=NO_DISTANCE,

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 
-from skytally.results import Results
+from skytally.results import LogCount, Results
 from skytally.tally import AsPointed, TallyRow, Timeline
 from skytally.wording import (
     MISSING,
@@ -346,6 +346,12 @@ def _as_pointed(results: Results) -> Table:
     )
 
 
+def _why_aside(log: LogCount) -> str:
+    if log.fault:
+        return "the log could not be read"
+    return ", ".join(f"{number_text(n)} {why}" for why, n in log.reasons) or MISSING
+
+
 def _logs(results: Results) -> Table:
     logs = results.logs
     return Table(
@@ -363,7 +369,7 @@ def _logs(results: Results) -> Table:
                 Cell(number_text(log.read)),
                 Cell(number_text(log.used)),
                 Cell(number_text(log.set_aside)),
-                Cell(", ".join(f"{number_text(n)} {why}" for why, n in log.reasons) or MISSING),
+                Cell(_why_aside(log)),
             )
             for log in logs
         ),

@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from skytally.claims import ClaimVerdict
 from skytally.exclusion import (
     AbsoluteLimit,
     DepthHistogram,
@@ -104,7 +105,10 @@ class TelescopeInfo:
 
 @dataclass(frozen=True)
 class LogCount:
-    """Reconciliation of one log: read = used + set_aside, the latter by reason."""
+    """Reconciliation of one log: read = used + set_aside, the latter by reason.
+
+    ``fault`` says why the log could not be read at all; empty where it could.
+    """
 
     telescope: str
     file: str
@@ -112,6 +116,7 @@ class LogCount:
     used: int
     set_aside: int
     reasons: tuple[tuple[str, int], ...]
+    fault: str = ""
 
 
 @dataclass(frozen=True)
@@ -204,6 +209,8 @@ class Results:
     notes: tuple[str, ...]
     sky: SkyData = field(repr=False, compare=False)
     findings: tuple[Finding, ...] = ()
+    silenced: tuple[Finding, ...] = ()
+    claims: tuple[ClaimVerdict, ...] = ()
     sources: tuple[SourceInfo, ...] = ()
     source_rows: tuple[SourceRow, ...] = ()
     exclusions: tuple[ExclusionCurve, ...] = ()

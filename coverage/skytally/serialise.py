@@ -101,12 +101,12 @@ def select_map(results: Results, version: str) -> Results:
     )
 
 
-def _plain(value: Any) -> Any:
+def to_plain(value: Any) -> Any:
     """Reduce to what JSON knows; dataclasses become dictionaries in field order."""
     if is_dataclass(value):
-        return {f.name: _plain(getattr(value, f.name)) for f in fields(value)}
+        return {f.name: to_plain(getattr(value, f.name)) for f in fields(value)}
     if isinstance(value, tuple | list):
-        return [_plain(item) for item in value]
+        return [to_plain(item) for item in value]
     if isinstance(value, np.generic):
         return value.item()
     return value
@@ -118,30 +118,32 @@ def to_dict(results: Results) -> dict[str, Any]:
     The geometry (``Results.sky``) is left out: the regions have files of
     their own.
     """
-    logs = [{**_plain(log), "reasons": dict(log.reasons)} for log in results.logs]
+    logs = [{**to_plain(log), "reasons": dict(log.reasons)} for log in results.logs]
     return {
         "format": FORMAT,
         "format_version": FORMAT_VERSION,
         "software": results.software,
-        "inputs": _plain(results.inputs),
-        "event": _plain(results.event),
-        "settings": _plain(results.settings),
-        "maps": _plain(results.maps),
-        "telescopes": _plain(results.telescopes),
+        "inputs": to_plain(results.inputs),
+        "event": to_plain(results.event),
+        "settings": to_plain(results.settings),
+        "maps": to_plain(results.maps),
+        "telescopes": to_plain(results.telescopes),
         "logs": logs,
         "rows": _rows(results),
-        "timelines": _plain(results.timelines),
-        "as_pointed": _plain(results.as_pointed),
-        "between_telescopes": _plain(results.sharing),
-        "exposures": _plain(results.exposures),
-        "set_aside": _plain(results.set_aside),
-        "sources": _plain(results.sources),
-        "exclusion": _plain(results.exclusions),
-        "fading": _plain(results.fading_planes),
-        "absolute_limits": _plain(results.absolute_limits),
-        "distance_profiles": _plain(results.distance_profiles),
-        "depth_histograms": _plain(results.depth_histograms),
-        "findings": _plain(results.findings),
+        "timelines": to_plain(results.timelines),
+        "as_pointed": to_plain(results.as_pointed),
+        "between_telescopes": to_plain(results.sharing),
+        "exposures": to_plain(results.exposures),
+        "set_aside": to_plain(results.set_aside),
+        "sources": to_plain(results.sources),
+        "exclusion": to_plain(results.exclusions),
+        "fading": to_plain(results.fading_planes),
+        "absolute_limits": to_plain(results.absolute_limits),
+        "distance_profiles": to_plain(results.distance_profiles),
+        "depth_histograms": to_plain(results.depth_histograms),
+        "findings": to_plain(results.findings),
+        "silenced": to_plain(results.silenced),
+        "claims": to_plain(results.claims),
         "notes": list(results.notes),
     }
 
@@ -150,11 +152,12 @@ def _rows(results: Results) -> list[dict[str, Any]]:
     """Return the tidy rows, each with what it could have seen of every source."""
     seen: dict[tuple[Any, ...], list[dict[str, Any]]] = {}
     for row in results.source_rows:
-        numbers = _plain(row)
+        numbers = to_plain(row)
         key = tuple(numbers.pop(name) for name in _SELECTED_BY)
         seen.setdefault(key, []).append(numbers)
     return [
-        {**_plain(row), "sources": seen.get((row.map, *row.selection), [])} for row in results.rows
+        {**to_plain(row), "sources": seen.get((row.map, *row.selection), [])}
+        for row in results.rows
     ]
 
 

@@ -124,6 +124,8 @@ class SkyMap:
         The file it came from; None for a circle given in the campaign.
     notes : tuple of str
         What the reader changed or noticed: normalised, resampled, …
+    file_sum : float or None
+        What the probability summed to in the file; None without a file.
     """
 
     starts: Ints
@@ -136,6 +138,7 @@ class SkyMap:
     path: str | None = None
     sha256: str | None = None
     notes: tuple[str, ...] = field(default=())
+    file_sum: float | None = None
 
     @cached_property
     def probability(self) -> Measure:

@@ -56,7 +56,7 @@ def read_skymap(
         data, path, size_limit_bytes=size_limit_bytes, error=MapError, must_begin=b"SIMPLE"
     )
     cells = read_cells(open_fits(whole, path, error=MapError), path)
-    total = _checked_sum(cells, path)
+    total = file_sum = _checked_sum(cells, path)
     notes = list(cells.notes)
     if abs(total - 1) > 1e-9:
         notes.append(f"The probability summed to {total:.7g}; it was normalised to 1.")
@@ -80,6 +80,7 @@ def read_skymap(
         path=str(path),
         sha256=sha256,
         notes=tuple(notes),
+        file_sum=file_sum,
     )
 
 

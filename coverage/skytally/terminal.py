@@ -33,7 +33,7 @@ from skytally.wording import (
     version_text,
 )
 
-__all__ = ["WIDTH", "render_answer", "render_left_over", "render_tally"]
+__all__ = ["WIDTH", "Page", "render_answer", "render_left_over", "render_tally"]
 
 WIDTH = 80
 _NAME_WIDTH = 16
@@ -41,7 +41,7 @@ _NAME_WIDTH = 16
 
 def render_answer(results: Results, stream: TextIO) -> str:
     """Return the headline alone as text for a stream."""
-    page = _Page(stream)
+    page = Page(stream)
     page.write_line(headline(results), style="bold")
     return page.text()
 
@@ -52,7 +52,7 @@ def render_tally(results: Results, stream: TextIO) -> str:
     Bold and dim only where the stream is a terminal, 7-bit characters where
     it cannot show others.
     """
-    page = _Page(stream)
+    page = Page(stream)
     page.write_line(headline(results), style="bold")
     if results.row().exposures:
         page.write_line()
@@ -89,7 +89,7 @@ def render_left_over(
 
     ``remaining`` and ``files`` are keyed by source, None for covered sky.
     """
-    page = _Page(stream)
+    page = Page(stream)
     page.write_line(
         f"The chance, on {version_text(version)}, that it is still out there unseen:", style="bold"
     )
@@ -99,7 +99,7 @@ def render_left_over(
     return page.text()
 
 
-class _Page:
+class Page:
     """Lines and tables held back, drawn for the stream that they are meant for."""
 
     def __init__(self, stream: TextIO) -> None:
@@ -113,10 +113,23 @@ class _Page:
             highlight=False,
         )
 
-    def write_line(self, text: str = "", style: str = "") -> None:
-        """Write a paragraph; rich would part a number from its unit."""
-        for line in textwrap.wrap(text, WIDTH, break_on_hyphens=False) or [""]:
-            self._console.print(self._shown(line), style=style, soft_wrap=True)
+    def write_line(
+        self, text: str = "", style: str = "", *, indent: str = "", hanging: str = ""
+    ) -> None:
+        """Write a paragraph, its later lines behind ``hanging``.
+
+        Rich itself would part a number from its unit.
+        """
+        plain = self._shown(text).plain
+        lines = textwrap.wrap(
+            plain,
+            WIDTH,
+            initial_indent=indent,
+            subsequent_indent=hanging,
+            break_on_hyphens=False,
+        )
+        for line in lines or [""]:
+            self._console.print(Text(line), style=style, soft_wrap=True)
 
     def write_table(self, head: tuple[str, ...], sections: Sequence[Section]) -> None:
         """Write a table: names to the left and cut when long, numbers to the right."""
@@ -147,7 +160,7 @@ class _Page:
         return Text(to_ascii(text) if self._plain else text)
 
 
-def _write_sources(page: _Page, results: Results) -> None:
+def _write_sources(page: Page, results: Results) -> None:
     """Write what could have been seen of each source, where the map carries distances."""
     rows = [
         row

@@ -17,7 +17,7 @@ from skytally.cosmology import Cosmology
 from skytally.distance import density, moments
 from skytally.errors import UsageError
 from skytally.footprints import Footprints
-from skytally.galaxies import Ranking, RankingChoice, check_choice, rank_galaxies
+from skytally.galaxies import Ranking, RankingChoice, Weight, check_choice, rank_galaxies
 from skytally.grouping import expand_ranges
 from skytally.held import PAIRS_LIMIT, Held, cell_order_of, find_held, line_of, region_texts
 from skytally.magnitudes import absolute_limit, extinction_coefficient
@@ -29,17 +29,23 @@ from skytally.space import Space
 from skytally.spans import DEG2_PER_SR, Ints
 
 __all__ = [
+    "INDEX_ORDER",
     "DeepestLimits",
     "HeldExposures",
     "OnMap",
     "VisitTable",
     "WhereAnswer",
+    "choose_ranking",
     "look_up",
 ]
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
 Objects = NDArray[np.object_]
+
+# Without a ranking the raster only tells which footprints may hold a position; the
+# shapes themselves decide. From order 8 to 10 it answers the same, and fastest here.
+INDEX_ORDER = 9
 
 _ARCSEC_PER_RAD = float(np.degrees(1.0)) * 3600.0
 
@@ -218,6 +224,35 @@ class WhereAnswer:
     rankings: tuple[Ranking, ...]
     extinction: str
     searchable: tuple[str, ...]
+
+
+def choose_ranking(
+    campaign: LoadedCampaign,
+    positions: Positions,
+    weight: str | None = None,
+    completeness: float | None = None,
+) -> RankingChoice | None:
+    """Choose how to rank positions: as asked, or else by volume wherever distances allow.
+
+    Raises
+    ------
+    UsageError
+        If there is no such weight, or the completeness is no fraction.
+    """
+    if weight is not None and weight not in {one.value for one in Weight}:
+        raise UsageError(
+            f"there is no weight {weight!r}", remedy=f"Choose one of: {', '.join(Weight)}."
+        )
+    if completeness is not None and not 0 < completeness <= 1:
+        raise UsageError(
+            f"a completeness of {completeness:g}, expected above 0 and up to 1",
+            remedy="Give the share of the weight that the table holds, such as 0.6.",
+        )
+    rankable = any(skymap.distance is not None for skymap in campaign.maps)
+    rankable = rankable and bool(np.isfinite(positions.distance_mpc).any())
+    if weight is None and completeness is None and not rankable:
+        return None
+    return RankingChoice(Weight(weight or Weight.NONE), completeness)
 
 
 def look_up(

@@ -386,7 +386,21 @@ def version_text(version: str) -> str:
 
 
 def headline(results: Results) -> str:
-    """Return the one plain sentence with the answer, on the newest map version."""
+    """Return the one plain sentence with the answer, on the newest map version.
+
+    Where a log could not be read, the sentence begins with that.
+    """
+    unread = [log.telescope for log in results.logs if log.fault]
+    answer = _answer(results)
+    if not unread:
+        return answer
+    whose = "whose logs" if len(unread) > 1 else "whose log"
+    return (
+        f"Without {join_words(unread)}, {whose} could not be read: {answer[0].lower()}{answer[1:]}"
+    )
+
+
+def _answer(results: Results) -> str:
     event = results.event.name
     total = results.row()
     if total.exposures == 0:
