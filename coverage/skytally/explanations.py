@@ -7,7 +7,7 @@ only raise a number are not tried on one that is too low.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass
 from functools import cached_property, partial
 from typing import Literal
@@ -15,7 +15,8 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
-from skytally.campaign_data import LoadedCampaign
+from skytally.cameras import MosaicCamera
+from skytally.campaign_data import LoadedCampaign, Telescope
 from skytally.claims_io import Quantity, Stated
 from skytally.covered import Coverage
 from skytally.other_fields import OtherField, OtherFields
@@ -38,21 +39,13 @@ _CELL_ACCURACY = 3e-4
 # Rounding of sums and of days.
 _ROUNDING = 1e-9
 
-_TWICE = "so that what several cover counts several times"
-_SUM = f"adding up the exposures, {_TWICE}"
+_OVERLAP = "with no regard to overlap"
+_SUM = f"adding up the exposures {_OVERLAP}"
 _FLAT = "taking degrees of right ascension as degrees on the sky in the fields' area"
-_GAPS = "leaving in the gaps between detectors and what is masked"
-_FIELDS: dict[OtherField, tuple[str, Direction, str]] = {
-    OtherField.RECTANGLE: ("gaps", "up", _GAPS),
-    OtherField.OUTLINE: ("gaps", "up", _GAPS),
-    OtherField.CIRCLE: ("circle", "up", "taking each field as the circle through its corners"),
-    OtherField.NARROW: (
-        "degrees-of-ra",
-        "any",
-        "laying the fields' widths as degrees of right ascension, not multiplied by the cosine "
-        "of the declination",
-    ),
-}
+_CIRCLE = "taking each field as the circle through its corners"
+_NARROW = (
+    "laying the fields' widths as degrees of right ascension without the cosine of the declination"
+)
 
 
 @dataclass(frozen=True)
@@ -163,7 +156,7 @@ class Explainer:
             )
             found = _fitting(question, self._single(recount))
             found += self._touching(question, recount)
-            found = found or _fitting(question, _double(recount))
+            found = found or _fitting(question, self._double(recount))
         found.sort(key=lambda one: abs(one.value - question.stated.number))
         closest: dict[str, Explanation] = {}
         for one in found:  # variants of one way are one explanation
@@ -183,16 +176,34 @@ class Explainer:
             text = "dividing what is covered of the 90 % region by all that the region holds"
             yield _Way("region-normalised", "any", text, recount.normalised)
         yield _Way("exposures-summed", "up", _SUM, recount.exposures_summed)
-        text = f"adding up the distinct fields, {_TWICE}"
+        text = f"adding up the distinct fields {_OVERLAP}"
         yield _Way("fields-summed", "up", text, recount.fields_summed)
-        text = f"adding up the telescopes, {_TWICE}"
+        text = f"adding up the telescopes {_OVERLAP}"
         yield _Way("telescopes-summed", "up", text, recount.telescopes_summed)
-        for kind, (code, direction, text) in _FIELDS.items():
-            narrower = kind is OtherField.NARROW and recount.quantity is Quantity.AREA
-            towards: Direction = "down" if narrower else direction
+        for kind, code, direction, text in self._other_fields(recount):
             count, rough = (partial(recount.laid, kind, rough=one) for one in (False, True))
-            yield _Way(code, towards, text, count, rough)
+            yield _Way(code, direction, text, count, rough)
         yield _Way("flat-area", "up", _FLAT, recount.flat)
+
+    def _double(self, recount: Recount) -> Iterator[_Way]:
+        """Fields laid otherwise, and all exposures added up: so many times the area of one."""
+        for kind, code, direction, text in self._other_fields(recount):
+            both = f"{text} and {_SUM}"
+            count, rough = (partial(recount.laid_summed, kind, rough=one) for one in (False, True))
+            # Adding up raises what narrow fields lower.
+            towards: Direction = "any" if direction == "down" else direction
+            yield _Way(f"{code}-summed", towards, both, count, rough)
+        yield _Way("flat-area-summed", "up", f"{_FLAT} and {_SUM}", recount.flat_summed)
+
+    def _other_fields(self, recount: Recount) -> Iterator[tuple[OtherField, str, Direction, str]]:
+        """Fields laid otherwise: which, under what code, where they move the number, and words."""
+        gaps = _gaps_text([self.campaign.telescopes[index] for index in recount.telescopes])
+        yield OtherField.RECTANGLE, "gaps", "up", gaps
+        yield OtherField.OUTLINE, "gaps", "up", gaps
+        yield OtherField.CIRCLE, "circle", "up", _CIRCLE
+        # A narrow field is smaller, but may hold another part of the map.
+        narrower: Direction = "down" if recount.quantity is Quantity.AREA else "any"
+        yield OtherField.NARROW, "degrees-of-ra", narrower, _NARROW
 
     def _touching(self, question: Question, recount: Recount) -> list[Explanation]:
         """Find the order at which whole cells that touch a field yield the number.
@@ -292,13 +303,15 @@ def _fitting(question: Question, ways: Iterable[_Way]) -> list[Explanation]:
     return found
 
 
-def _double(recount: Recount) -> Iterator[_Way]:
-    """Fields laid otherwise, and all exposures added up: so many times the area of one."""
-    for kind, (code, direction, text) in _FIELDS.items():
-        both = f"{text}, and {_SUM}"
-        count, rough = (partial(recount.laid_summed, kind, rough=one) for one in (False, True))
-        yield _Way(f"{code}-summed", direction, both, count, rough)
-    yield _Way("flat-area-summed", "up", f"{_FLAT}, and {_SUM}", recount.flat_summed)
+def _gaps_text(telescopes: Sequence[Telescope]) -> str:
+    """Words for fields without the gaps and masks that these telescopes have."""
+    gapped = any(
+        t.camera is None or (isinstance(t.camera, MosaicCamera) and len(t.camera.corners) > 1)
+        for t in telescopes
+    )
+    left_in = ["the gaps between detectors"] if gapped else []
+    left_in += ["what is masked"] if any(t.mask for t in telescopes) else []
+    return f"leaving in {' and '.join(left_in) or 'what lies within the outline of a field'}"
 
 
 def _median(depths: list[NDArray[np.float64]]) -> float | None:

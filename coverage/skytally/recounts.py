@@ -114,7 +114,7 @@ class Recount:
         return measure_of(self.quantity, self.skymap)
 
     @cached_property
-    def _telescopes(self) -> list[int]:
+    def telescopes(self) -> list[int]:
         """Telescopes that took any of the exposures."""
         return [
             int(index) for index in np.unique(self.coverage.observations.telescope[self.chosen])
@@ -147,11 +147,11 @@ class Recount:
     def telescopes_summed(self) -> float | None:
         """Add up the telescopes' unions; None for one telescope."""
         taken = self.coverage.observations.telescope
-        if len(self._telescopes) < 2:
+        if len(self.telescopes) < 2:
             return None
         return sum(
             self.amounts.of(self.quantity, self.skymap, self.chosen & (taken == index))[0]
-            for index in self._telescopes
+            for index in self.telescopes
         )
 
     def laid(self, kind: OtherField, *, rough: bool = False) -> float | None:
@@ -174,7 +174,7 @@ class Recount:
 
     def _tables(self, kind: OtherField, rough: bool) -> list[tuple[int, SpanTable]] | None:
         """Fields of each telescope laid otherwise; None where that changes nothing."""
-        found = [(index, self.fields.of(kind, index, rough)) for index in self._telescopes]
+        found = [(index, self.fields.of(kind, index, rough)) for index in self.telescopes]
         if all(table is None for _, table in found):
             return None
         return [(i, self.fields.as_laid(i) if t is None else t) for i, t in found]
