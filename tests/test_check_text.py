@@ -60,6 +60,7 @@ def test_findings_stand_in_groups_the_gravest_first() -> None:
     assert "Plover [ra-in-hours], rows 2, 3, 4" in text
     assert "and 26 more" in text
     assert "To do: Set ra_unit" in text
+    assert "  all, probability (A. Observer, circular 12)\n" in plain
     assert "Differs. Stated are 61 %" in plain
 
 

@@ -6,6 +6,7 @@ import json
 from dataclasses import asdict
 from typing import TextIO
 
+from skytally.claims import ClaimVerdict
 from skytally.findings import SEVERITIES, Finding, Severity
 from skytally.results import Results
 from skytally.serialise import to_plain
@@ -43,8 +44,10 @@ def render_check(results: Results, stream: TextIO) -> str:
         page.write_line()
         page.write_line("CLAIMS: what was stated, and what the logs give", style="bold")
         for verdict in results.claims:
+            page.write_line()
+            page.write_line(_of(verdict), indent="  ", hanging=_INDENT)
             text = f"{str(verdict.verdict).capitalize()}. {verdict.text}"
-            page.write_line(text, indent="  ", hanging=_INDENT)
+            page.write_line(text, indent=_INDENT, hanging=_INDENT)
     if results.silenced:
         page.write_line()
         page.write_line("SILENCED by the campaign", style="bold")
@@ -82,6 +85,15 @@ def _summary(results: Results) -> str:
         f"{results.event.name}: {found} in {count('row', read)} "
         f"({used} used, {read - used} set aside) of {count('log', len(results.logs))}."
     )
+
+
+def _of(verdict: ClaimVerdict) -> str:
+    """Say whose number it is, of what, and where it was stated."""
+    claim = verdict.claim
+    parts = (claim.telescope, str(claim.quantity), claim.band, claim.night)
+    source = ", ".join(part for part in (claim.stated_by, claim.where) if part)
+    what = ", ".join(part for part in parts if part)
+    return f"{what} ({source})" if source else what
 
 
 def _write_finding(page: Page, finding: Finding) -> None:

@@ -406,6 +406,18 @@ def ember_light_curve():
     return "\n".join(lines) + "\n"
 
 
+# What the teams have announced; some of it was counted in another way than the tally counts.
+CLAIMS = """# what was stated in the first circulars, to be checked
+telescope,map,quantity,value,stated_by,where
+all,3 update,probability,81 %,the coordinators,circular 7
+all,,area,454 deg2,the coordinators,circular 7
+Heron,,first_start,2031-03-14T05:49Z,the Heron team,circular 1
+Heron,,area,411 deg2,the Heron team,circular 3
+Plover,,exposures,46,the Plover team,circular 4
+Avocet,3 update,probability,32 %,the Avocet team,circular 5
+"""
+
+
 def main(folder):
     for name in ("maps", "logs", "cameras", "sources"):
         (folder / name).mkdir(parents=True, exist_ok=True)
@@ -430,6 +442,7 @@ def main(folder):
     for name, text in logs.items():
         (folder / "logs" / name).write_text(text, encoding="utf-8", newline="\n")
     (folder / "cameras/heron.csv").write_text(heron_camera(), encoding="utf-8", newline="\n")
+    (folder / "claims.csv").write_text(CLAIMS, encoding="utf-8", newline="\n")
 
 
 if __name__ == "__main__":
