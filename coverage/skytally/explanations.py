@@ -33,7 +33,8 @@ Direction = Literal["up", "down", "any"]
 _COARSEST, _FINEST = 4, 12
 # Relative error that areas and probabilities found here may have, beside the stated digits.
 _ACCURACY = 1e-3
-_ROUGHLY = 0.1
+# Errors of rough counts; a probability may hang on a few of the fields.
+_ROUGH_AREA, _ROUGH_PROBABILITY = 0.04, 0.1
 # The same of whole cells, which only differ by how closely touching is tested.
 _CELL_ACCURACY = 3e-4
 # Rounding of sums and of days.
@@ -290,12 +291,13 @@ class Explainer:
 def _fitting(question: Question, ways: Iterable[_Way]) -> list[Explanation]:
     """Carry out the ways that can move the number as asked; keep those that yield it."""
     against = "down" if question.stated.number > question.own else "up"
+    roughly = _ROUGH_AREA if question.quantity.is_area else _ROUGH_PROBABILITY
     found = []
     for way in ways:
         if way.direction == against:
             continue
         guess = None if way.rough is None else way.rough()
-        if guess is not None and question.falls(guess, _ROUGHLY) != 0:
+        if guess is not None and question.falls(guess, roughly) != 0:
             continue
         value = way.count()
         if value is not None and question.falls(value) == 0:
