@@ -144,6 +144,7 @@ def account(
         silenced=silenced,
         claims=tuple(check_claims(campaign.claims, campaign, coverage, rows)),
         sources=tuple(SourceInfo(source.name, source.text) for source in campaign.sources),
+        report=campaign.report,
         **depths,
     )
 
@@ -300,6 +301,7 @@ def _exposures(coverage: Coverage, campaign: LoadedCampaign) -> tuple[ExposureIn
             map_in_force=None if force[i] < 0 else campaign.maps[force[i]].label,
             probability_in_force=None if force[i] < 0 else float(worth[force[i]][o.footprint[i]]),
             probability_newest=float(worth[-1][o.footprint[i]]),
+            night=o.nights[o.night[i]],
         )
         for i in range(len(o))
     )

@@ -2,22 +2,19 @@
 
 from __future__ import annotations
 
-import base64
 import hashlib
 from collections.abc import Mapping
-from functools import cache
-from importlib.resources import files
 from pathlib import Path
 from typing import Any
 
 import matplotlib
-from jinja2 import Environment, FunctionLoader, StrictUndefined
 from markupsafe import Markup
 
 from skytally.audit_tables import audit_tables
 from skytally.errors import OutputError
 from skytally.figure_style import Drawing, swatch_svg
 from skytally.figures import draw_figures
+from skytally.house_style import Functions, HouseStyle, own_template
 from skytally.limit_tables import limit_tables
 from skytally.report_tables import key_figures, tables
 from skytally.results import Results
@@ -46,7 +43,11 @@ _FONTS = frozenset(
 )
 
 
-def render_html(results: Results, figures: Mapping[str, Drawing] | None = None) -> str:
+def render_html(
+    results: Results,
+    figures: Mapping[str, Drawing] | None = None,
+    style: HouseStyle | None = None,
+) -> str:
     """Return the report as one HTML page that needs nothing else, not even a network.
 
     Parameters
@@ -56,21 +57,34 @@ def render_html(results: Results, figures: Mapping[str, Drawing] | None = None) 
     figures : mapping, optional
         What `draw_figures` returned, if both forms are made and it need not be
         done twice.
+    style : HouseStyle, optional
+        Templates that override ours.
+
+    Raises
+    ------
+    InputError
+        If one of these templates fails.
     """
-    return _render(results, figures, "screen.css", paper=False)
+    return _render(results, figures, style, "screen.css", paper=False)
 
 
-def render_pdf(results: Results, figures: Mapping[str, Drawing] | None = None) -> bytes:
+def render_pdf(
+    results: Results,
+    figures: Mapping[str, Drawing] | None = None,
+    style: HouseStyle | None = None,
+) -> bytes:
     """Return the report as a PDF document with its own fonts; parameters as in `render_html`.
 
     The bytes depend on the results alone if ``SOURCE_DATE_EPOCH`` is set.
 
     Raises
     ------
+    InputError
+        If a template of ``style`` fails.
     OutputError
         If the text layout library that WeasyPrint needs is not installed.
     """
-    page = _render(results, figures, "print.css", paper=True)
+    page = _render(results, figures, style, "print.css", paper=True)
     # Imported here: without Pango the import itself fails, and then everything
     # but the PDF must still work.
     try:
@@ -111,37 +125,19 @@ def _fetcher() -> Any:
     return OwnFilesOnly(allowed_protocols=("data",))
 
 
-def _template(name: str) -> str:
-    """Return the text of one of our templates or style sheets, wherever it is installed."""
-    return (files("skytally.templates") / name).read_text(encoding="utf-8")
-
-
-@cache
-def _environment() -> Environment:
-    """Return the template environment: everything escaped, nothing undefined."""
-    environment = Environment(
-        loader=FunctionLoader(_template),
-        autoescape=True,
-        undefined=StrictUndefined,
-        trim_blocks=True,
-        lstrip_blocks=True,
-    )
-    environment.filters.update(utc=utc_text, percent=percent)
-    environment.globals.update(count=count, swatch=lambda index: Markup(swatch_svg(index)))
-    return environment
-
-
 def _render(
-    results: Results, figures: Mapping[str, Drawing] | None, sheet: str, *, paper: bool
+    results: Results,
+    figures: Mapping[str, Drawing] | None,
+    style: HouseStyle | None,
+    sheet: str,
+    *,
+    paper: bool,
 ) -> str:
     figures = draw_figures(results) if figures is None else figures
-    style = _template(sheet)
-    template = _environment().get_template("report.html.j2")
-    return template.render(
+    context = dict(
         results=results,
         paper=paper,
-        style=Markup(f"\n{style}"),
-        style_hash=base64.b64encode(hashlib.sha256(f"\n{style}".encode()).digest()).decode(),
+        style=Markup(f"\n{own_template(sheet)}"),
         headline=headline(results),
         key_figures=key_figures(results),
         figures={name: (d, Markup(d.svg)) for name, d in figures.items()},
@@ -154,3 +150,6 @@ def _render(
         no_distance=NO_DISTANCE,
         newest=version_text(results.newest.version),
     )
+    filters: Functions = {"utc": utc_text, "percent": percent}
+    functions: Functions = {"count": count, "swatch": lambda index: Markup(swatch_svg(index))}
+    return (style or HouseStyle()).render(context, filters, functions)

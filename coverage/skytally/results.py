@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from skytally.campaign_data import ReportText
 from skytally.claims import ClaimVerdict
 from skytally.exclusion import (
     AbsoluteLimit,
@@ -149,6 +150,7 @@ class ExposureInfo:
     map_in_force: str | None
     probability_in_force: float | None
     probability_newest: float
+    night: str | None = None
 
 
 @dataclass(frozen=True)
@@ -219,6 +221,7 @@ class Results:
     distance_profiles: tuple[DistanceProfile, ...] = ()
     depth_histograms: tuple[DepthHistogram, ...] = ()
     sharing: tuple[Sharing, ...] = ()
+    report: ReportText = field(default_factory=ReportText)
 
     @property
     def newest(self) -> MapInfo:
