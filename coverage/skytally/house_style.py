@@ -28,13 +28,14 @@ from jinja2.exceptions import (
 from jinja2.runtime import BlockReference, LoopContext, Macro
 from jinja2.sandbox import ImmutableSandboxedEnvironment
 from jinja2.utils import Cycler, Joiner
+from markupsafe import Markup
 
 from skytally.errors import InputError
+from skytally.figure_style import swatch_svg
 from skytally.results import Results
+from skytally.wording import count, percent, utc_text
 
-__all__ = ["Functions", "HouseStyle", "own_template"]
-
-Functions = Mapping[str, Callable[..., Any]]
+__all__ = ["HouseStyle", "own_template"]
 
 REPORT = "report.html.j2"
 # Whatever the folder holds, names that begin so are ours.
@@ -97,12 +98,7 @@ class HouseStyle:
             sandbox.get_template(REPORT)
         return style
 
-    def render(
-        self,
-        context: Mapping[str, Any],
-        filters: Functions,
-        functions: Functions,
-    ) -> str:
+    def render(self, context: Mapping[str, Any]) -> str:
         """Render the report.
 
         Raises
@@ -111,8 +107,6 @@ class HouseStyle:
             If a template of the folder fails; it names file and line.
         """
         with self._sandbox() as sandbox:
-            sandbox.filters.update(filters)
-            sandbox.globals.update(functions)
             return sandbox.get_template(REPORT).render(context)
 
     @contextmanager
@@ -199,8 +193,8 @@ class _Sandbox(ImmutableSandboxedEnvironment):
             lstrip_blocks=True,
         )
         del self.globals["lipsum"]  # It makes text without end.
-        self.globals["digest"] = _digest
-        self.filters["_counted"] = self._counted
+        self.globals.update(digest=_digest, count=count, swatch=_swatch)
+        self.filters.update(utc=utc_text, percent=percent, _counted=self._counted)
         self._steps = 0
         self._read: dict[str, _Heritage] = {}
         self._reading: list[str] = []
@@ -262,12 +256,8 @@ class _Sandbox(ImmutableSandboxedEnvironment):
         for block in _outermost_blocks(tree):
             if block.name not in inherited:
                 near = get_close_matches(block.name, inherited, 1)
-                hint = (
-                    f"did you mean {near[0]!r}?"
-                    if near
-                    else f"it has {', '.join(sorted(inherited))}"
-                )
-                raise fault(f"{base} has no block {block.name!r}; {hint}", block.lineno)
+                known = f"the nearest is {near[0]!r}" if near else f"it has {_listed(inherited)}"
+                raise fault(f"{base} has no block {block.name!r}; {known}", block.lineno)
         return _Heritage(root, inherited | own)
 
     def _counted(self, items: Iterable[Any]) -> Iterator[Any]:
@@ -283,9 +273,17 @@ class _Sandbox(ImmutableSandboxedEnvironment):
             )
 
 
+def _swatch(index: int) -> Markup:
+    return Markup(swatch_svg(index))
+
+
 def _digest(text: str) -> str:
     """Return the SHA-256 of text as a content security policy states it."""
     return base64.b64encode(hashlib.sha256(str(text).encode()).digest()).decode()
+
+
+def _listed(names: Iterable[str]) -> str:
+    return ", ".join(sorted(names))
 
 
 def _outermost_blocks(node: nodes.Node) -> Iterator[nodes.Block]:

@@ -12,22 +12,19 @@ from markupsafe import Markup
 
 from skytally.audit_tables import audit_tables
 from skytally.errors import OutputError
-from skytally.figure_style import Drawing, swatch_svg
+from skytally.figure_style import Drawing
 from skytally.figures import draw_figures
-from skytally.house_style import Functions, HouseStyle, own_template
+from skytally.house_style import HouseStyle, own_template
 from skytally.limit_tables import limit_tables
 from skytally.report_tables import key_figures, tables
 from skytally.results import Results
 from skytally.sharing_tables import sharing_tables
 from skytally.wording import (
     NO_DISTANCE,
-    count,
     headline,
     limit_rows,
     limit_terms,
-    percent,
     source_words,
-    utc_text,
     version_text,
 )
 
@@ -150,6 +147,4 @@ def _render(
         no_distance=NO_DISTANCE,
         newest=version_text(results.newest.version),
     )
-    filters: Functions = {"utc": utc_text, "percent": percent}
-    functions: Functions = {"count": count, "swatch": lambda index: Markup(swatch_svg(index))}
-    return (style or HouseStyle()).render(context, filters, functions)
+    return (style or HouseStyle()).render(context)
