@@ -149,7 +149,8 @@ def test_the_numbers_are_those_of_the_results() -> None:
         "Heron, g: 20.90-21.40 mag, median 21.25 mag (2 exposures)",
         "Plover, r: no limits in the log (1 exposure)",
         "AB, 5 sigma, not corrected for Galactic extinction",
-        "The logs hold 5 rows: 3 used, 2 set aside (1 not accepted and 1 unreadable).",
+        "The logs of Heron and Plover are included. They hold 5 rows: 3 used, 2 set aside "
+        "(1 not accepted and 1 unreadable).",
     ):
         assert shown(wanted) in shown(text)
     assert text.index("33.33 %") < text.index("16.67 %"), "the newest version comes first"
@@ -168,7 +169,10 @@ def test_nothing_covered_is_said_in_words() -> None:
     assert "none of the probability" in render_circular(off_the_map())
     text = " ".join(render_circular(nothing()).split())
     assert "No exposure of Lantern 7 could be used" in text
-    assert "The logs hold 1 row: 0 used, 1 set aside (1 before the event)." in text
+    assert (
+        "The log of Heron is included. It holds 1 row: 0 used, 1 set aside (1 before the event)."
+        in text
+    )
 
 
 def test_one_version_is_not_called_the_newest() -> None:

@@ -2,14 +2,19 @@
 
 from __future__ import annotations
 
-import textwrap
-import unicodedata
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Iterator
+from dataclasses import replace
+from typing import Literal
 
+from skytally.circular_tables import exposure_tables, part_of
+from skytally.circular_text import WIDTH, bullets, paragraph, worded
 from skytally.exclusion import AbsoluteLimit
+from skytally.findings import CODES, Finding
 from skytally.limits import SourceRow
-from skytally.results import ExposureInfo, MapInfo, Results, SourceInfo, TelescopeInfo
+from skytally.one_telescope import only_telescope
+from skytally.results import MapInfo, Results, SourceInfo, TelescopeInfo
 from skytally.tally import TallyRow
+from skytally.times import hours_since, iso_to_mjd
 from skytally.wording import (
     MISSING,
     NBSP,
@@ -32,36 +37,14 @@ from skytally.wording import (
     since_event,
     source_probability,
     source_words,
-    to_ascii,
     utc_text,
     version_text,
 )
 
-__all__ = ["WIDTH", "render_circular"]
+__all__ = ["WIDTH", "Form", "render_circular"]
 
-WIDTH = 72
-LISTED_EXPOSURES = 30
-
-# Stands for a no-break space until the lines are broken; no text holds it.
-_GLUE = "\x00"
-_BAND_WIDTH = 10
-# Letters that no decomposition takes apart.
-_LETTERS = {
-    "ß": "ss",
-    "Æ": "Ae",
-    "æ": "ae",
-    "Œ": "Oe",
-    "œ": "oe",
-    "Ø": "O",
-    "ø": "o",
-    "Ł": "L",
-    "ł": "l",
-    "Đ": "D",
-    "đ": "d",
-    "ı": "i",
-    "Þ": "Th",
-    "þ": "th",
-}
+# Telescopes or errors that a sentence names one by one; of more, the number is given.
+_NAMED = 8
 
 _CAUTION = (
     "Covered means that an exposure included the position, not that a source there would have "
@@ -70,19 +53,37 @@ _CAUTION = (
 )
 
 
-def render_circular(results: Results) -> str:
-    """Return the circular for a campaign; every line ends with a newline."""
+Form = Literal["long", "short"]
+
+
+def render_circular(results: Results, form: Form = "long", telescope: str | None = None) -> str:
+    """Return the circular for a campaign; every line ends with a newline.
+
+    Parameters
+    ----------
+    results : Results
+        What to tell.
+    form : {"long", "short"}
+        Everything, or the answer with what it must be read with.
+    telescope : str, optional
+        One telescope's part alone, and what it is of the whole; all if left out.
+
+    Raises
+    ------
+    UsageError
+        If there is no telescope of that name.
+    """
+    told = results if telescope is None else only_telescope(results, telescope)
+    parts = _long(told, results) if form == "long" else _short(told, results)
     blocks = [
-        _paragraph(_title(results)),
-        _paragraph(headline(results)),
-        *_observations(results),
-        *_probability(results),
-        *_depth(results),
-        *_distance(results),
-        _paragraph(_rows_read(results)),
-        *_table(results),
-        _paragraph(_CAUTION),
-        _paragraph(
+        paragraph(_title(told, telescope)),
+        *_signed(results),
+        paragraph(_answer(told, telescope)),
+        *_errors(told),
+        *parts,
+        paragraph(_CAUTION),
+        *_thanks(results),
+        paragraph(
             f"Numbers by {results.software}; areas and probabilities are those of the union of "
             "all footprints, so that nothing counts twice."
         ),
@@ -90,33 +91,140 @@ def render_circular(results: Results) -> str:
     return "\n\n".join("\n".join(block) for block in blocks) + "\n"
 
 
-def _title(results: Results) -> str:
+def _long(told: Results, results: Results) -> Iterator[list[str]]:
+    yield from _observations(told)
+    yield from _probability(told)
+    yield from _together(told, results)
+    yield from _depth(told)
+    yield from _distance(told)
+    yield paragraph(_rows_read(told))
+    yield from exposure_tables(told)
+
+
+def _short(told: Results, results: Results) -> Iterator[list[str]]:
+    used = [t for t in told.telescopes if t.exposures]
+    if used:
+        named = [_in_short(t) for t in used[:_NAMED]]
+        if len(used) > _NAMED:
+            named.append(count("other telescope", len(used) - _NAMED))
+        yield paragraph(
+            f"{_when(told)} {'They are' if told.row().exposures > 1 else 'It is'} "
+            f"by {join_words(named)}."
+        )
+    yield from _together(told, results)
+    yield paragraph(_rows_read(told))
+
+
+def _in_short(telescope: TelescopeInfo) -> str:
+    bands = f" in {join_words(telescope.bands)}" if telescope.bands else ""
+    return f"{telescope.name} ({count('exposure', telescope.exposures)}{bands})"
+
+
+def _title(results: Results, telescope: str | None) -> str:
     used = [t for t in results.telescopes if t.exposures]
-    return f"{results.event.name}: coverage by {count('telescope', len(used), words=True)}"
+    if not used:
+        who = f" by {telescope}" if telescope else ""
+        return f"{results.event.name}: no coverage{who}"
+    who = telescope or count("telescope", len(used), words=True)
+    return f"{results.event.name}: coverage by {who}"
+
+
+def _signed(results: Results) -> Iterator[list[str]]:
+    """Who signs, and where they work; nothing if the campaign does not say."""
+    report = results.report
+    lines = []
+    if report.authors:
+        lines += paragraph(join_words([_one_line(name) for name in report.authors]))
+    for affiliation in report.affiliations:
+        lines += paragraph(_one_line(affiliation), rest="  ")
+    if lines:
+        yield lines
+
+
+def _thanks(results: Results) -> Iterator[list[str]]:
+    thanks = _one_line(results.report.thanks)
+    if thanks:
+        yield paragraph(thanks)
+
+
+def _one_line(text: str) -> str:
+    return " ".join(text.split())
+
+
+def _answer(results: Results, telescope: str | None) -> str:
+    if telescope is None:
+        return headline(results)
+    # That this one log could not be read is said by itself.
+    logs = tuple(replace(log, fault="") for log in results.logs)
+    return headline(replace(results, logs=logs), telescope)
+
+
+def _errors(results: Results) -> Iterator[list[str]]:
+    """Say which logs could not be read, and what cannot be right."""
+    unread = [log.telescope for log in results.logs if log.fault]
+    if unread:
+        logs, have = ("log", "its") if len(unread) == 1 else ("logs", "their")
+        yield paragraph(
+            f"The {logs} of {join_words(unread)} could not be read, so {have} exposures are in no "
+            "number."
+        )
+    faults = [
+        _error(finding, results)
+        for finding in results.findings
+        if finding.severity == "error" and finding.code != "log-unreadable"
+    ]
+    if len(faults) == 1:
+        yield paragraph(f"The audit found an error {faults[0]}")
+    elif faults:
+        shown = faults[:_NAMED]
+        if len(faults) > _NAMED:
+            shown.append(f"and {count('more error', len(faults) - _NAMED)}, listed in the report.")
+        yield bullets(f"The audit found {count('error', len(faults), words=True)}:", shown)
+
+
+def _error(finding: Finding, results: Results) -> str:
+    """Say where an error is, what it is and what the tally did, after “an error”."""
+    if any(t.name == finding.subject for t in results.telescopes):
+        where = f"in the log of {finding.subject}"
+    elif any(m.version == finding.subject for m in results.maps):
+        where = f"in {version_text(finding.subject)}"
+    else:
+        where = f"concerning {finding.subject}"
+    rows = f" ({count('row', len(finding.rows))})" if finding.rows else ""
+    return f"{where}: {CODES.get(finding.code, finding.code)}{rows}. {finding.done}"
+
+
+def _when(results: Results) -> str:
+    """When the first exposure began and the last one ended."""
+    first = min(results.exposures, key=lambda e: e.hours)
+    began = f"began at {utc_text(first.start)}, {since_event(first.hours)}"
+    end = results.row().last_end
+    if len(results.exposures) == 1:
+        return f"The only exposure {began}, and ended at {utc_text(end)}."
+    ended = hours_since(iso_to_mjd(end), results.event.time_mjd) if end else None
+    later = "" if ended is None else f", {hours_text(ended)} after it"
+    if ended is not None and ended < 0:
+        later = f", {since_event(ended)}"
+    return f"The first exposure {began}; the last ended at {utc_text(end)}{later}."
 
 
 def _observations(results: Results) -> Iterator[list[str]]:
     """When the event was, and what each telescope did."""
     event = results.event
     text = f"The time of {event.name} is {utc_text(event.time, seconds=True)}."
-    if results.exposures:
-        first = min(results.exposures, key=lambda e: e.hours)
-        text += (
-            f" The first exposure began at {utc_text(first.start)}, {since_event(first.hours)};"
-            f" the last ended at {utc_text(results.row().last_end)}."
-        )
-    yield _paragraph(text)
+    yield paragraph(f"{text} {_when(results)}" if results.exposures else text)
     lines = [_telescope(results, t) for t in results.telescopes if t.exposures]
     if lines:
-        head = f"Instruments, and what each covers of {version_text(results.newest.version)}:"
-        yield _list(head, lines)
+        what = "Instruments, and what each covers" if len(lines) > 1 else "Instrument, and coverage"
+        yield bullets(f"{what} of {version_text(results.newest.version)}:", lines)
 
 
 def _telescope(results: Results, telescope: TelescopeInfo) -> str:
     bands = f" in {join_words(telescope.bands)}" if telescope.bands else ""
+    site = f"; site at {telescope.site}" if telescope.site and len(results.telescopes) == 1 else ""
     covered = _of_probability(results, results.row(telescope=telescope.name))
     return (
-        f"{telescope.name} ({telescope.camera}): "
+        f"{telescope.name} ({telescope.camera}{site}): "
         f"{count('exposure', telescope.exposures)}{bands}, {covered}"
     )
 
@@ -129,7 +237,7 @@ def _probability(results: Results) -> Iterator[list[str]]:
     newest, *others = reversed(results.maps)
     area = area_text(total.area_deg2, total.area_low_deg2, total.area_high_deg2, bracket=True)
     age = "newest" if others else "only"
-    yield _paragraph(
+    yield paragraph(
         f"The {age} map version is {_described(newest)}. "
         f"All footprints together cover {area}, {_in_region(newest, total)}."
     )
@@ -138,7 +246,29 @@ def _probability(results: Results) -> Iterator[list[str]]:
         lines = [
             f"{_described(m)}: {_of_probability(results, results.row(m.version))}" for m in others
         ]
-        yield _list(f"On the earlier map {versions} the same exposures cover:", lines)
+        yield bullets(f"On the earlier map {versions} the same exposures cover:", lines)
+
+
+def _together(told: Results, results: Results) -> Iterator[list[str]]:
+    """What one telescope's coverage is of the whole; nothing where all are told of."""
+    own, whole = told.row(), results.row()
+    others = [t for t in results.telescopes if t.exposures and t not in told.telescopes]
+    if not others or not own.exposures or whole.probability <= 0:
+        return
+    alone = _of_alone(own)
+    names = join_words([t.name for t in others])
+    everyone = count("telescope", len(others) + 1, words=True)
+    yield paragraph(
+        f"{alone} With the {'log' if len(others) == 1 else 'logs'} of {names} included, the "
+        f"{everyone} cover {_of_probability(results, whole)}."
+    )
+
+
+def _of_alone(own: TallyRow) -> str:
+    if own.probability_unique <= 0:
+        return "All that it covers, others cover too."
+    part = worded(part_of(own.probability_unique, own))
+    return f"No other telescope of this tally covers {part} of the probability."
 
 
 def _described(info: MapInfo) -> str:
@@ -153,14 +283,14 @@ def _described(info: MapInfo) -> str:
 def _of_probability(results: Results, row: TallyRow) -> str:
     if row.probability <= 0:
         return "none of the probability"
-    return f"{_worded(row_probability(row, results.settings))} of the probability"
+    return f"{worded(row_probability(row, results.settings))} of the probability"
 
 
 def _in_region(info: MapInfo, row: TallyRow) -> str:
     if row.area_in_90_deg2 <= 0:
         return f"none of it in the 90{NBSP}% region"
     inside = area_text(row.area_in_90_deg2, row.area_in_90_deg2, row.area_in_90_deg2)
-    part = _worded(percent(row.area_in_90_deg2 / info.area_90_deg2))
+    part = worded(percent(row.area_in_90_deg2 / info.area_90_deg2))
     return f"with {inside} in the 90{NBSP}% region, which is {part} of its area"
 
 
@@ -175,10 +305,10 @@ def _depth(results: Results) -> Iterator[list[str]]:
     if not rows:
         return
     if not known:
-        yield _paragraph("The logs give no limiting magnitudes.")
+        yield paragraph("The logs give no limiting magnitudes.")
         return
     mixed = len({row.extinction for row in known}) > 1
-    yield _list(
+    yield bullets(
         f"Limiting magnitudes ({limit_terms(results.settings, rows)}):",
         [_limits(row) + (f", {extinction_text([row])}" if mixed else "") for row in rows],
     )
@@ -197,8 +327,10 @@ def _limits(row: TallyRow) -> str:
 def _distance(results: Results) -> Iterator[list[str]]:
     """What would have been seen of each source, and the absolute limits at the map's distance."""
     newest = results.newest
+    if not results.row().exposures:
+        return
     if newest.distance_mean_mpc is None:
-        yield _paragraph(NO_DISTANCE)
+        yield paragraph(NO_DISTANCE)
         return
     seen = {
         row.source: row
@@ -207,7 +339,7 @@ def _distance(results: Results) -> Iterator[list[str]]:
     }
     for source in results.sources:
         if source.name in seen:
-            yield _paragraph(_source(source, seen[source.name], results))
+            yield paragraph(_source(source, seen[source.name], results))
     yield from _absolute(results)
 
 
@@ -219,15 +351,15 @@ def _source(source: SourceInfo, row: SourceRow, results: Results) -> str:
     if row.probability <= 0:
         return f"{who} would have been detected over none of the probability of {on}."
     text = (
-        f"{who} would have been detected over {_worded(source_probability(row))} of the "
+        f"{who} would have been detected over {worded(source_probability(row))} of the "
         f"probability of {on}"
     )
     lost = []
     if row.probability_beyond > 0:
-        part = _worded(percent(row.probability_beyond))
+        part = worded(percent(row.probability_beyond))
         lost.append(f"{part} was covered but lies beyond reach or was missed")
     if row.probability_without_distance > 0:
-        part = _worded(percent(row.probability_without_distance))
+        part = worded(percent(row.probability_without_distance))
         lost.append(f"{part} was covered where the map gives no distance")
     text += f"; of the rest, {join_words(lost)}." if lost else "."
     if row.reach_median_mpc:
@@ -244,7 +376,7 @@ def _absolute(results: Results) -> Iterator[list[str]]:
     distance = distance_text(info.distance_mean_mpc, info.distance_sd_mpc)
     mixed = len({one.extinction is None for one in limits}) > 1
     terms = limit_terms(results.settings, limit_rows(results))
-    yield _list(
+    yield bullets(
         f"Median limits as absolute magnitudes at the map's distance of {distance}, with the "
         f"values one standard deviation nearer and farther ({terms}, no K-correction):",
         [_absolute_limit(one, mixed=mixed) for one in limits],
@@ -263,121 +395,31 @@ def _absolute_limit(one: AbsoluteLimit, *, mixed: bool) -> str:
 
 
 def _rows_read(results: Results) -> str:
-    """Return the sum of what was read, used and set aside, with the reasons."""
+    """Say whose logs are included, and the sum of what was read, used and set aside."""
+    kept = [log.telescope for log in results.logs if not log.fault]
+    if not kept:
+        return "No log could be read." if results.logs else "No log was given."
+    included = (
+        f"{'The log' if len(kept) == 1 else 'The logs'} of {join_words(kept)} "
+        f"{'is' if len(kept) == 1 else 'are'} included."
+    )
+    return f"{included} {_sum_of_rows(results, 'It' if len(kept) == 1 else 'They')}"
+
+
+def _sum_of_rows(results: Results, they: str) -> str:
+    hold = "holds" if they == "It" else "hold"
     read = sum(log.read for log in results.logs)
     aside = sum(log.set_aside for log in results.logs)
     if read == 0:
-        return "The logs hold no rows."
+        return f"{they} {hold} no rows."
     if aside == 0:
-        return f"The logs hold {count('row', read)}; none was set aside."
+        return f"{they} {hold} {count('row', read)}; none was set aside."
     reasons: dict[str, int] = {}
     for log in results.logs:
         for reason, number in log.reasons:
             reasons[reason] = reasons.get(reason, 0) + number
     why = join_words([f"{number_text(number)} {reason}" for reason, number in reasons.items()])
     return (
-        f"The logs hold {count('row', read)}: {number_text(read - aside)} used, "
+        f"{they} {hold} {count('row', read)}: {number_text(read - aside)} used, "
         f"{number_text(aside)} set aside ({why})."
     )
-
-
-def _table(results: Results) -> Iterator[list[str]]:
-    """Every exposure where they are few, the sums of each night where they are many."""
-    if not results.exposures:
-        return
-    if len(results.exposures) > LISTED_EXPOSURES:
-        yield from _night_table(results)
-        return
-    corrected = any(row.extinction != "not corrected" for row in limit_rows(results))
-    logged = " (limits not corrected for Galactic extinction)" if corrected else ""
-    for telescope in results.telescopes:
-        mine = [e for e in results.exposures if e.telescope == telescope.name]
-        if mine:
-            yield [
-                *_paragraph(f"Exposures by {telescope.name}{logged}:"),
-                *_columns(
-                    ("UTC start", "t-t0/h", "Band", "RA/deg", "Dec/deg", "Limit"),
-                    [_exposure(e) for e in mine],
-                    "<><>>>",
-                ),
-            ]
-
-
-def _exposure(e: ExposureInfo) -> tuple[str, ...]:
-    return (
-        utc_text(e.start, seconds=True).removesuffix(f"{NBSP}UTC"),
-        hours_text(e.hours).removesuffix(f"{NBSP}h"),
-        _latin(e.band or MISSING)[:_BAND_WIDTH],
-        MISSING if e.ra_deg is None else number_text(e.ra_deg, 4),
-        MISSING if e.dec_deg is None else number_text(e.dec_deg, 4),
-        MISSING if e.depth is None else number_text(e.depth, 2),
-    )
-
-
-def _night_table(results: Results) -> Iterator[list[str]]:
-    rows = [r for r in results.rows if r.map == results.newest.version and r.night is not None]
-    if not rows:
-        return
-    cells = [
-        (
-            str(row.night),
-            number_text(row.exposures),
-            area_text(row.area_deg2, row.area_low_deg2, row.area_high_deg2),
-            row_probability(row, results.settings),
-        )
-        for row in rows
-    ]
-    yield [
-        *_paragraph(f"By night, on {version_text(results.newest.version)}:"),
-        *_columns(("Night", "Exposures", "Area", "Probability"), cells, "<>>>"),
-    ]
-
-
-def _columns(head: Sequence[str], rows: Iterable[Sequence[str]], align: str) -> list[str]:
-    """Return a fixed-width table, as wide as its content."""
-    table = [[_latin(cell).replace(_GLUE, " ") for cell in row] for row in (head, *rows)]
-    widths = [max(len(row[i]) for row in table) for i in range(len(head))]
-    return [
-        "  ".join(f"{cell:{side}{width}}" for cell, side, width in zip(row, align, widths)).rstrip()
-        for row in table
-    ]
-
-
-def _list(head: str, items: Iterable[str]) -> list[str]:
-    lines = _paragraph(head)
-    for item in items:
-        lines += _paragraph(item, first="- ", rest="  ")
-    return lines
-
-
-def _paragraph(text: str, first: str = "", rest: str = "") -> list[str]:
-    """Break text into lines of 7-bit characters; numbers stay with their units."""
-    lines = textwrap.wrap(
-        _latin(text),
-        WIDTH,
-        initial_indent=first,
-        subsequent_indent=rest,
-        break_on_hyphens=False,
-    )
-    return [line.replace(_GLUE, " ") for line in lines]
-
-
-def _latin(text: str) -> str:
-    """Return 7-bit text: the same words where there is a way to write them, marks dropped."""
-    glued = "".join(c for c in text if c.isprintable() or c == NBSP).replace(NBSP, _GLUE)
-    return "".join(c if c.isascii() else _letter(c) for c in glued)
-
-
-def _letter(character: str) -> str:
-    plain = to_ascii(character)
-    if plain != "?":
-        return plain
-    if character in _LETTERS:
-        return _LETTERS[character]
-    parts = unicodedata.normalize("NFKD", character)
-    return "".join(c for c in parts if c.isascii()) or "?"
-
-
-def _worded(text: str) -> str:
-    """Write a bound in words, as a sentence wants it."""
-    return text.replace(f"<{NBSP}", "less than ").replace(f">{NBSP}", "more than ")

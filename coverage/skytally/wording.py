@@ -385,13 +385,14 @@ def version_text(version: str) -> str:
     return f"map version “{version}”"
 
 
-def headline(results: Results) -> str:
+def headline(results: Results, telescope: str | None = None) -> str:
     """Return the one plain sentence with the answer, on the newest map version.
 
-    Where a log could not be read, the sentence begins with that.
+    Where a log could not be read, the sentence begins with that. ``telescope`` is
+    whom to name if the results are one telescope's.
     """
     unread = [log.telescope for log in results.logs if log.fault]
-    answer = _answer(results)
+    answer = _answer(results, telescope)
     if not unread:
         return answer
     whose = "whose logs" if len(unread) > 1 else "whose log"
@@ -400,19 +401,21 @@ def headline(results: Results) -> str:
     )
 
 
-def _answer(results: Results) -> str:
+def _answer(results: Results, telescope: str | None) -> str:
     event = results.event.name
     total = results.row()
     if total.exposures == 0:
+        by = f" by {telescope}" if telescope else ""
+        logs = "log" if len(results.logs) == 1 else "logs"
         return (
-            f"No exposure of {event} could be used, so nothing is covered and nothing is "
-            f"constrained: every row of the logs was set aside."
+            f"No exposure of {event}{by} could be used, so nothing is covered and nothing is "
+            f"constrained: every row of the {logs} was set aside."
             if any(log.read for log in results.logs)
-            else f"No exposure of {event} was given, so nothing is covered."
+            else f"No exposure of {event}{by} was given, so nothing is covered."
         )
     used = sum(t.exposures > 0 for t in results.telescopes)
     until = _until(results)
-    who = f"{count('telescope', used, words=True)} {has(used)}"
+    who = f"{telescope or count('telescope', used, words=True)} {has(used)}"
     what = f"{count('exposure', total.exposures)}"
     version = version_text(results.newest.version)
     if total.probability <= 0:
