@@ -119,12 +119,26 @@ def test_a_limit_that_stands_out_is_named(change, words):
 
 def test_a_limit_of_a_long_exposure_is_judged_by_its_time():
     """22.75 mag is 1.25 mag deeper than 60 s give, and just what 600 s give."""
-    log = night(bands=("r",), scatter=0.03, times=(60.0, 600.0))
+    log = night(bands=("r",), scatter=0.03, times=(60.0,) * 3 + (600.0,) * 2)
     assert depth_findings(of_logs(log)) == []
     short = int(np.flatnonzero((log.duration_s == 60) & (np.arange(60) > 10))[0])
     deep = with_depth(log, [short], 21.5 + 1.25 + 2.0)
     (finding,) = depth_findings(of_logs(deep))
     assert (finding.code, finding.rows) == ("depth-outlier", (short + 2,))
+
+
+@pytest.mark.parametrize("slope", [0.0, 1.25, 2.5])
+def test_a_few_long_exposures_follow_their_own_law(slope):
+    """A fifth of 1500 s among 60 s: up to 3.5 mag deeper, and as it should be."""
+    log = night(80, bands=("r",), slope=slope, times=(60.0,) * 9 + (1500.0,), seed=9)
+    assert 8 < (log.duration_s == 1500).sum() < 20
+    assert depth_findings(of_logs(log)) == []
+
+
+def test_a_dark_hour_and_a_fickle_site_are_in_order():
+    calm = night(scatter=0.01)
+    assert depth_findings(of_logs(with_depth(calm, [30], calm.depth[30] + 1.3))) == []
+    assert depth_findings(of_logs(night(200, scatter=0.7))) == []
 
 
 def test_each_telescope_and_band_is_judged_by_itself():

@@ -219,6 +219,10 @@ def series(gap_s, duration_s, n=50, *, step_arcsec=0.0, band="r", **more):
         # Back to back, written to the whole second: some starts seem closer than they were.
         rounded(series(1.5, 1.4), seconds=1.0),
         rounded(series(1.5, 1.4), seconds=1.0, cut=True),
+        # Several in one minute, written to the minute; the mount trembles.
+        rounded(series(20.0, 15.0, step_arcsec=0.5), seconds=60.0, cut=True),
+        # Too far apart for rounding, whatever the times.
+        series(0.5, 45.0, n=2, step_arcsec=4.0),
         # Exposure times unknown, names of their own.
         series(1.2, 0.0),
         # Two channels at once.

@@ -119,7 +119,10 @@ def test_no_overhead_at_all_is_in_order():
     start = EVENT_MJD + 0.1 + np.arange(200) * 60.0 * SECOND
     log = log_table("Heron", np.full(200, 150.0), np.linspace(0, 9, 200), start=start)
     jitter = np.random.default_rng(2).normal(0, 0.3, 200) * SECOND
-    for one in (log, replace(log, start_mjd=start + jitter), to_step(log, 1.0, cut=True)):
+    # Exposure times are nominal: half a second in a hundred is not theirs to tell.
+    fine = replace(log, start_mjd=start + jitter)
+    nominal = replace(fine, duration_s=np.full(200, 60.3))
+    for one in (log, fine, nominal, to_step(log, 1.0, cut=True)):
         assert found(one) == []
 
 
@@ -132,6 +135,9 @@ def test_an_exposure_that_outlasts_the_next_start(step):
     assert finding.rows == (14, 15)
     assert "row 14 lasts 300 s" in finding.text
     assert "1 exposure still runs" in finding.text
+    gap = (clean.start_mjd[13] - clean.start_mjd[12]) * 86400
+    slight = with_value(clean, "duration_s", 12, gap + 8.0)
+    assert codes(slight) == [("exposures-overlap", "error")]
 
 
 def test_a_start_that_falls_into_another_exposure():
@@ -163,6 +169,7 @@ def test_a_camera_of_several_channels_is_a_note():
     log = replace(
         base.take(rows),
         row=np.arange(90) + 2,
+        ra_deg=base.ra_deg[rows] + np.tile([0.0, 0.01, -0.02], 30),
         band=np.tile(np.array(["g", "r", "z"], dtype=object), 30),
     )
     (finding,) = found(log)
@@ -174,9 +181,10 @@ def test_a_camera_of_several_channels_is_a_note():
     assert ("exposures-overlap", "error") in codes(spoilt)
 
 
-def test_channels_with_exposure_times_of_their_own_are_a_note():
+@pytest.mark.parametrize("lead_s", [0.0, 5.0])
+def test_channels_with_exposure_times_of_their_own_are_a_note(lead_s):
     """Two short exposures in one band while the other channel takes a long one."""
-    start = EVENT_MJD + 0.1 + (np.arange(20)[:, None] * 260 + np.array([0, 0, 120])) * SECOND
+    start = EVENT_MJD + 0.1 + (np.arange(20)[:, None] * 260 + np.array([lead_s, 0, 120])) * SECOND
     log = log_table(
         "Heron",
         np.repeat(np.linspace(140, 160, 20), 3),
@@ -196,6 +204,15 @@ def test_one_slip_across_a_change_of_filter_is_no_camera_of_channels():
     assert codes(with_value(place, "duration_s", 19, 900.0)) == [("exposures-overlap", "error")]
 
 
+def test_one_pair_of_channels_that_start_as_one_is_a_note():
+    log = sequence(40, band=np.array(["g", "r"] * 20, dtype=object))
+    for column in ("ra_deg", "dec_deg", "start_mjd"):
+        log = with_value(log, column, 21, getattr(log, column)[20])
+    (finding,) = found(log)
+    assert (finding.code, finding.severity) == ("exposures-simultaneous", "note")
+    assert finding.rows == (22, 23)
+
+
 def test_other_fields_in_other_bands_at_once_are_an_error():
     """A mount points one way at a time, whatever the band."""
     log = sequence(40, band=np.array(["g", "r"] * 20, dtype=object))
@@ -212,6 +229,9 @@ def test_detectors_in_rows_of_their_own_are_a_note():
     region = [f"CIRCLE ICRS {150 + i} {j} 0.2" for i in range(10) for j in range(4)]
     log = replace(log, region=np.array(region, dtype=object))
     assert codes(log) == [("exposures-simultaneous", "note")]
+    # The longest of the rows is what the next exposure waits for.
+    long = with_value(log, "duration_s", 15, 400.0)
+    assert ("exposures-overlap", "error") in codes(long)
     # Where a single start was copied down by mistake, it is an error.
     slip = with_value(base, "start_mjd", 5, base.start_mjd[4])
     assert codes(slip) == [("exposures-overlap", "error")]
@@ -435,6 +455,15 @@ def test_a_shift_of_which_less_than_half_shows_is_something_to_look_at():
     assert (finding.code, finding.severity) == ("clock-shifted", "caution")
 
 
+def test_a_shift_that_hardly_shows_is_no_matter_of_the_clock():
+    """One hour: the last few rows in daylight, as a late twilight or a slip would be."""
+    site = SITES[7]
+    late = moved(dark_night(site, after=0.6), 1)
+    sun, altitude = almanac(site, late.start_mjd, late.ra_deg, late.dec_deg)
+    assert 0 < ((sun > -6) | (altitude < -2)).sum() < 10
+    assert found(late, site=site) == []
+
+
 def test_what_no_shift_mends_is_no_matter_of_the_clock():
     """Days and nights alike: times that were never of exposures."""
     log = dark_night(SITES[7])
@@ -460,6 +489,18 @@ def test_regions_are_judged_by_their_centres_and_vast_ones_by_the_sun_alone(radi
     clean = by_regions(dark_night(site, after=0.6), radius)
     assert found(clean, site=site) == []
     assert codes(moved(clean, 9), site=site) == [("clock-shifted", "error")]
+
+
+def test_reference_in_local_time_is_moved_with_the_rest():
+    """No hour brings rows of two days before past the event; they need not come past it."""
+    site = SITES[7]
+    night = dark_night(site, after=0.6)
+    past = replace(night, start_mjd=night.start_mjd - 4.0 * 0.99727)  # sidereal days
+    log = replace(moved(night, 7), before_event=moved(past, 7))
+    (finding,) = found(log, site=site)
+    assert (finding.code, finding.severity) == ("clock-shifted", "error")
+    assert "7 h earlier" in finding.text
+    assert "of 100 are in the dark" in finding.text
 
 
 def test_a_region_below_the_horizon_tells_of_the_clock_by_night():
@@ -516,6 +557,26 @@ def test_a_western_log_in_local_time_falls_before_the_event(tmp_path):
     assert of_campaign(loaded, "clock-shifted") == []
 
 
+def test_dark_rows_that_all_precede_the_event_are_something_to_look_at(tmp_path):
+    """The end of a night in local time is still dark: only the event tells."""
+    site = SITES[-6]
+    night = dark_night(site)
+    night = night.take(np.flatnonzero(night.start_mjd > night.start_mjd[-1] - 2.5 * HOUR))
+    event = datetime(1858, 11, 17) + timedelta(days=float(night.start_mjd[0]) - 0.5 * HOUR)
+    local = moved(night, -6)
+    assert (almanac(site, local.start_mjd, 330.0, -10.0)[0] < -12).all()
+    files = {"Heron": csv(local), "Plover": ["o1,150,-8,2032-01-01T00:00:00,30,r"]}
+    time = f"{event:%Y-%m-%dT%H:%M:%SZ}"
+    (finding,) = of_campaign(
+        load(tmp_path, files, time=time, site=site_text(site)), "clock-shifted"
+    )
+    assert finding.severity == "caution"
+    assert "in the hours before the event" in finding.text
+    assert f"6 h later, {len(night)} of {len(night)}" in finding.text
+    # Five hours would leave the first half hour before the event.
+    assert "+5" not in finding.text
+
+
 def test_reference_of_other_nights_is_judged_by_the_sky_alone():
     site = SITES[-6]
     night = dark_night(site)
@@ -560,6 +621,8 @@ def nights(days, month=3):
         ((5, 6, 7), 3, "2031-03-04T05:21:08Z", (5, 6, 7)),
         # Only days up to the twelfth change over; the others stay.
         ((11, 12, 13, 14), 3, "2031-03-10T05:21:08Z", (11, 12)),
+        # A month on, with nobody else to say that the campaign was over.
+        ((4,), 3, "2031-03-03T05:21:08Z", (4,)),
         # They land before the event and are set aside.
         ((4, 5), 9, "2031-09-03T05:21:08Z", (4, 5)),
     ],
@@ -589,6 +652,28 @@ def test_reference_days_before_the_event_is_no_exchanged_date(tmp_path):
     assert of_campaign(loaded, "day-month-swapped") == []
 
 
+def test_a_few_days_of_reference_before_many_nights_are_no_exchanged_dates(tmp_path):
+    rows = nights((2,)) + nights(range(13, 32)) + nights(range(13, 21), month=4)
+    loaded = load(tmp_path, {"Heron": rows}, time="2031-03-04T05:21:08Z")
+    assert of_campaign(loaded, "day-month-swapped") == []
+
+
+def test_a_slip_in_some_dates_is_not_the_way_the_log_is_written(tmp_path):
+    """Other days up to the twelfth are right as they stand."""
+    rows = nights((5, 6, 7, 8, 9)) + swapped(nights((10,)))
+    loaded = load(tmp_path, {"Heron": rows}, time="2031-03-04T05:21:08Z")
+    (finding,) = time_findings(loaded)
+    assert (finding.code, finding.rows) == ("start-long-after", (17, 18, 19))
+
+
+def test_a_log_does_not_vouch_for_itself(tmp_path):
+    """Twenty-four days after everybody else: no pause, but by its own word alone."""
+    logs = {"Heron": swapped(nights((4,))), "Plover": nights((5, 10))}
+    loaded = load(tmp_path, logs, time="2031-03-03T05:21:08Z")
+    (finding,) = time_findings(loaded)
+    assert (finding.code, finding.subject) == ("day-month-swapped", "Heron")
+
+
 def test_other_telescopes_say_how_long_the_campaign_was(tmp_path):
     """A month later is in order when others were still observing."""
     late = nights((3,), month=4)
@@ -610,3 +695,12 @@ def test_dates_impossible_as_logged_and_possible_exchanged_are_an_error(tmp_path
     assert time_findings(load(tmp_path, {"Heron": rows}, **text)) == []
     finding = time_findings(load(tmp_path, {"Heron": swapped(rows)}, **text))[0]
     assert (finding.code, finding.severity) == ("day-month-swapped", "error")
+    # A month later the night is much the same, and as logged all could be.
+    night = dark_night(
+        site, after=(datetime(2031, 2, 3) - zero).days + 0.4 - EVENT_MJD, field=150.0
+    )
+    rows = csv(night.take(np.arange(12)))
+    text["time"] = "2031-02-02T05:21:08Z"
+    assert all("2031-02-03" in row for row in rows)
+    finding = time_findings(load(tmp_path, {"Heron": swapped(rows)}, **text))[0]
+    assert (finding.code, finding.severity) == ("day-month-swapped", "caution")

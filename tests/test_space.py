@@ -239,6 +239,10 @@ def test_versions_in_another_order_than_issued():
     (finding,) = version_findings(versions(0.1, 3.0, 9.0, listed=(1, 3, 2)))
     assert "lists 3 before" in finding.text
     # Without all times of issue they stay in the file's order, and 3 is taken for the newest.
+    # One file for two versions has no place of its own.
+    again = versions(0.1, 3.0, 9.0)
+    maps = (*again.maps[:2], replace(again.maps[2], path="1.fits"))
+    assert version_findings(replace(again, maps=maps, inputs=again.inputs[:2])) == []
     assert version_codes(9.0, None, 3.0) == [("map-order", "caution", "3")]
 
 

@@ -172,9 +172,10 @@ def _deviations(depth: Floats, duration_s: Floats) -> tuple[Floats, Bools]:
     for slope in _TIME_SLOPES:
         scaled = depth - slope * time
         residual = scaled - np.median(scaled)
-        laws.append((float(np.median(np.abs(residual))), residual))
-    mad, residual = min(laws, key=lambda law: law[0])
-    allowed = _OUTLIER_SIGMAS * _SIGMA_OF_MAD * mad
+        # The mean, as exposures of another length may be few.
+        laws.append((float(np.abs(residual).mean()), residual))
+    _, residual = min(laws, key=lambda law: law[0])
+    allowed = _OUTLIER_SIGMAS * _SIGMA_OF_MAD * float(np.median(np.abs(residual)))
     deep = residual > max(allowed, _TOO_DEEP_MAG)
     return residual, deep | (residual < -max(allowed, _TOO_SHALLOW_MAG))
 
