@@ -23,6 +23,9 @@ EVERYTHING = {
     "report.html",
     "report.pdf",
     "circular.txt",
+    "circular-short.txt",
+    "circulars/heron.txt",
+    "circulars/plover.txt",
     "tally.json",
     "tally.ecsv",
     "manifest.json",
@@ -36,9 +39,9 @@ EVERYTHING = {
 def _quick_renderers(monkeypatch: pytest.MonkeyPatch) -> None:
     """The renderers have tests of their own; here only the files matter."""
     monkeypatch.setattr(
-        outputs, "render_html", lambda results, figures: f"<p>{results.event.name}</p>\n"
+        outputs, "render_html", lambda results, figures, style: f"<p>{results.event.name}</p>\n"
     )
-    monkeypatch.setattr(outputs, "render_pdf", lambda results, figures: b"%PDF-")
+    monkeypatch.setattr(outputs, "render_pdf", lambda results, figures, style: b"%PDF-")
     monkeypatch.setattr(outputs, "draw_figures", lambda results: {})
 
 
@@ -97,7 +100,10 @@ def test_our_own_files_are_replaced_stale_ones_go_and_foreign_ones_stay(tmp_path
     event = replace(small_results().event, name="Lantern 8")
     write_outputs(renamed(small_results(event=event), "Heron", "Dunlin"), night)
     found = tree(night)
-    changed = EVERYTHING - {"regions/plover.fits"} | {"regions/dunlin.fits"}
+    changed = (EVERYTHING - {"regions/plover.fits", "circulars/plover.txt"}) | {
+        "regions/dunlin.fits",
+        "circulars/dunlin.txt",
+    }
     assert found.keys() == changed | {"notes.txt", "regions/mine.fits"}
     assert found["report.html"] == b"<p>Lantern 8</p>\n"
     assert (found["notes.txt"], found["regions/mine.fits"]) == (b"mine", b"mine too")
@@ -169,7 +175,7 @@ def test_a_failed_rendering_changes_nothing(
         write_outputs(small_results(), night)
     before = tree(tmp_path)
 
-    def fail(results: Results, figures: object) -> str:
+    def fail(results: Results, figures: object, style: object) -> str:
         raise RuntimeError("broken template")
 
     monkeypatch.setattr(outputs, "render_html", fail)
@@ -185,7 +191,7 @@ def test_without_a_pdf_the_rest_is_written_and_no_old_pdf_stays(
 ) -> None:
     write_outputs(small_results(), tmp_path)
 
-    def fail(results: Results, figures: object) -> bytes:
+    def fail(results: Results, figures: object, style: object) -> bytes:
         raise OutputError("the PDF could not be made", remedy="Install libpango-1.0-0.")
 
     monkeypatch.setattr(outputs, "render_pdf", fail)

@@ -21,6 +21,7 @@ from skytally.wording import (
     NO_DISTANCE,
     area_text,
     count,
+    decimals_for,
     depth_range,
     distance_text,
     extinction_text,
@@ -107,10 +108,8 @@ def _short(told: Results, results: Results) -> Iterator[list[str]]:
         named = [_in_short(t) for t in used[:_NAMED]]
         if len(used) > _NAMED:
             named.append(count("other telescope", len(used) - _NAMED))
-        yield paragraph(
-            f"{_when(told)} {'They are' if told.row().exposures > 1 else 'It is'} "
-            f"by {join_words(named)}."
-        )
+        they = "The exposures are" if told.row().exposures > 1 else "It was taken"
+        yield paragraph(f"{_when(told)} {they} by {join_words(named)}.")
     yield from _together(told, results)
     yield paragraph(_rows_read(told))
 
@@ -255,7 +254,7 @@ def _together(told: Results, results: Results) -> Iterator[list[str]]:
     others = [t for t in results.telescopes if t.exposures and t not in told.telescopes]
     if not others or not own.exposures or whole.probability <= 0:
         return
-    alone = _of_alone(own)
+    alone = _of_alone(own, told)
     names = join_words([t.name for t in others])
     everyone = count("telescope", len(others) + 1, words=True)
     yield paragraph(
@@ -264,11 +263,12 @@ def _together(told: Results, results: Results) -> Iterator[list[str]]:
     )
 
 
-def _of_alone(own: TallyRow) -> str:
+def _of_alone(own: TallyRow, told: Results) -> str:
+    name = told.telescopes[0].name
     if own.probability_unique <= 0:
-        return "All that it covers, others cover too."
-    part = worded(part_of(own.probability_unique, own))
-    return f"No other telescope of this tally covers {part} of the probability."
+        return f"None of the probability is covered by {name} alone."
+    part = worded(part_of(own.probability_unique, own, told.settings))
+    return f"Of the probability, {part} is covered by {name} alone."
 
 
 def _described(info: MapInfo) -> str:
@@ -354,12 +354,13 @@ def _source(source: SourceInfo, row: SourceRow, results: Results) -> str:
         f"{who} would have been detected over {worded(source_probability(row))} of the "
         f"probability of {on}"
     )
+    decimals = decimals_for(50 * (row.probability_high - row.probability_low), most=1)
     lost = []
     if row.probability_beyond > 0:
-        part = worded(percent(row.probability_beyond))
+        part = worded(percent(row.probability_beyond, decimals))
         lost.append(f"{part} was covered but lies beyond reach or was missed")
     if row.probability_without_distance > 0:
-        part = worded(percent(row.probability_without_distance))
+        part = worded(percent(row.probability_without_distance, decimals))
         lost.append(f"{part} was covered where the map gives no distance")
     text += f"; of the rest, {join_words(lost)}." if lost else "."
     if row.reach_median_mpc:

@@ -6,7 +6,7 @@ from bisect import bisect_right
 from collections.abc import Iterator
 
 from skytally.circular_text import columns, latin, paragraph
-from skytally.results import ExposureInfo, Results
+from skytally.results import ExposureInfo, Results, Settings
 from skytally.tally import TallyRow
 from skytally.times import hours_since, iso_to_mjd
 from skytally.wording import (
@@ -106,7 +106,7 @@ def _running_table(results: Results) -> list[str]:
                 _hours(min(e.hours for e in mine)),
                 _hours(end),
                 area_text(area, area, area),
-                part_of(probability, total),
+                part_of(probability, total, results.settings),
             )
         )
     head = ("Night", "Exposures", "From/h", "To/h", "Area so far", "Prob. so far")
@@ -127,7 +127,9 @@ def _reached(results: Results, hours: float) -> tuple[float, float]:
     return 0.0, 0.0
 
 
-def part_of(fraction: float, row: TallyRow) -> str:
+def part_of(fraction: float, row: TallyRow, settings: Settings) -> str:
     """Return part of a row's probability, to the digits at which the row's own is known."""
     width = row.probability_high - row.probability_low
-    return percent(fraction, decimals_for(50 * width, most=1))
+    estimated = width > settings.bracket_target and row.probability_error > 0
+    uncertainty = row.probability_error if estimated else width / 2
+    return percent(fraction, decimals_for(100 * uncertainty, most=1))

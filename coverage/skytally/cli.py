@@ -146,15 +146,25 @@ def report(
     campaign: CampaignPath,
     out: OutDir,
     json: Annotated[bool, typer.Option("--json", help="Print tally.json as well.")] = False,
+    templates: Annotated[
+        Path | None,
+        typer.Option(
+            "--templates",
+            metavar="DIR",
+            help="Folder whose report.html.j2 overrides blocks of the report.",
+        ),
+    ] = None,
 ) -> None:
     """Write the report and its data files (the main job)."""
+    from skytally.house_style import HouseStyle
     from skytally.outputs import write_outputs
     from skytally.serialise import to_json
     from skytally.terminal import render_answer
 
+    style = None if templates is None else HouseStyle.read(templates)
     results = _tally(campaign, "report.html lists them all")
     with _progress("Writing") as progress:
-        written = write_outputs(results, out, progress)
+        written = write_outputs(results, out, progress, style)
     _print(to_json(results) if json else render_answer(results, sys.stdout))
     _say(f"Wrote {len(written)} files to {out}")
     _leave_if_unread(results)

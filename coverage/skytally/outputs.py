@@ -31,6 +31,7 @@ from skytally.errors import OutputError
 from skytally.figure_style import Drawing
 from skytally.figures import draw_figures
 from skytally.footprints import Progress
+from skytally.house_style import HouseStyle
 from skytally.leftover import LeftOver
 from skytally.moc import write_moc
 from skytally.region_files import region_to_write
@@ -58,10 +59,14 @@ _LIBRARIES = (
     "pydantic",
 )
 _REPORT_FILES = frozenset(
-    {"report.html", "report.pdf", "circular.txt", "tally.json", "tally.ecsv", MANIFEST}
+    {
+        *("report.html", "report.pdf", "circular.txt", "circular-short.txt"),
+        *("tally.json", "tally.ecsv", MANIFEST),
+    }
 )
 _REGION_FILE = re.compile(
-    r"((regions/)?[a-z0-9][a-z0-9-]{0,79}\.fits|left-over/[a-z0-9][a-z0-9-]{0,79}\.fits\.gz)"
+    r"((regions/)?[a-z0-9][a-z0-9-]{0,79}\.fits|left-over/[a-z0-9][a-z0-9-]{0,79}\.fits\.gz"
+    r"|circulars/[a-z0-9][a-z0-9-]{0,79}\.txt)"
 )
 # Names that a file cannot have on every system, and "all", which is the union.
 _RESERVED = frozenset(
@@ -73,7 +78,10 @@ _NO_RIGHT = {errno.EACCES, errno.EPERM, errno.EROFS}
 
 
 def write_outputs(
-    results: Results, out_dir: str | Path, progress: Progress | None = None
+    results: Results,
+    out_dir: str | Path,
+    progress: Progress | None = None,
+    style: HouseStyle | None = None,
 ) -> tuple[Path, ...]:
     """Write the report in all its forms, the regions and the manifest.
 
@@ -85,6 +93,8 @@ def write_outputs(
         A folder: new, empty, or one that an earlier report was written to.
     progress : callable, optional
         Called with what is being written and the fraction done.
+    style : HouseStyle, optional
+        Templates that override ours.
 
     Returns
     -------
@@ -106,7 +116,7 @@ def write_outputs(
 
     def pdf(path: Path) -> None:
         try:
-            _put(path, render_pdf(results, figures()))
+            _put(path, render_pdf(results, figures(), style))
         except OutputError as error:
             failures.append(error)
 
@@ -115,8 +125,10 @@ def write_outputs(
         "tally.json": (0.0, lambda path: _put(path, to_json(results))),
         "tally.ecsv": (0.02, lambda path: _put(path, _ecsv(results))),
         "circular.txt": (0.04, lambda path: _put(path, render_circular(results))),
+        "circular-short.txt": (0.04, lambda path: _put(path, render_circular(results, "short"))),
+        "circulars": (0.04, lambda path: _render_circulars(results, path)),
         "regions": (0.05, lambda path: _render_regions(results, path)),
-        "report.html": (0.15, lambda path: _put(path, render_html(results, figures()))),
+        "report.html": (0.15, lambda path: _put(path, render_html(results, figures(), style))),
         "report.pdf": (0.5, pdf),
     }
 
@@ -182,6 +194,13 @@ def _ecsv(results: Results) -> str:
     text = io.StringIO()
     to_table(results).write(text, format="ascii.ecsv")
     return text.getvalue().rstrip("\n") + "\n"
+
+
+def _render_circulars(results: Results, folder: Path) -> None:
+    folder.mkdir()
+    names = [t.name for t in results.telescopes]
+    for stem, name in zip(file_stems(names), names, strict=True):
+        _put(folder / f"{stem}.txt", render_circular(results, telescope=name))
 
 
 def _render_regions(results: Results, folder: Path) -> None:

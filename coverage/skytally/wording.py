@@ -57,6 +57,8 @@ NO_DISTANCE = "The map carries no distance."
 BRACKET_TARGET = 0.005
 # What a row's total area is tested to hold, whatever its bracket: 0.1 %.
 AREA_ACCURACY = 0.001
+# However narrow a bracket: the cells of a region that was given outright are a shape of their own.
+_AREA_DIGITS = 1e-4
 # A map normalised in floating point sums to one only this closely.
 _EXACT = 1e-9
 _WORDS = (
@@ -206,11 +208,13 @@ def area_text(value: float, low: float, high: float, *, bracket: bool = False) -
         return f"0{NBSP}deg²"
     half_width = (high - low) / 2
     uncertainty = (
-        min(half_width, AREA_ACCURACY * value) if half_width > 0 else AREA_ACCURACY * value
+        min(max(half_width, _AREA_DIGITS * value), AREA_ACCURACY * value)
+        if half_width > 0
+        else AREA_ACCURACY * value
     )
     decimals = max(0, min(6, -math.floor(math.log10(uncertainty))))
     text = f"{number_text(value, decimals)}{NBSP}deg²"
-    if bracket and high > low:
+    if bracket and half_width > _AREA_DIGITS * value:
         text += f" ({_bracket(low, high, decimals)}{NBSP}deg²)"
     return text
 
