@@ -653,8 +653,10 @@ def test_reference_days_before_the_event_is_no_exchanged_date(tmp_path):
 
 
 def test_a_few_days_of_reference_before_many_nights_are_no_exchanged_dates(tmp_path):
-    rows = nights((2,)) + nights(range(13, 32)) + nights(range(13, 21), month=4)
-    loaded = load(tmp_path, {"Heron": rows}, time="2031-03-04T05:21:08Z")
+    many = nights(range(13, 32)) + nights(range(13, 21), month=4)
+    logs = {"Heron": nights((2,)) + many, "Plover": many}
+    loaded = load(tmp_path, logs, time="2031-03-04T05:21:08Z")
+    assert len(loaded.telescopes[0].log.before_event) == 3
     assert of_campaign(loaded, "day-month-swapped") == []
 
 
