@@ -56,7 +56,7 @@ def one(tmp_path: Path, column: str, cell: str, **options: Any) -> LogTable:
         (HEADER + ROW).replace(",", " , "),
         HEADER.upper() + ROW,
         HEADER.replace("\n", ",\n") + ROW.replace("\n", ",\n"),
-        gzip.compress((HEADER + ROW).encode()),
+        gzip.compress((HEADER + ROW).encode(), mtime=0),
         '"exposure","ra","dec","start","duration","band","depth"\n'
         '"0001","150.5","-20.25","2031-03-14 05:30","60","r","20.5"\n',
     ],
