@@ -30,6 +30,7 @@ from skytally.exclusion import (
 from skytally.field_extinction import field_extinction
 from skytally.footprints import Footprints, Progress, lay_footprints
 from skytally.limits import Scene, SeenSource, SourceRow, tally_scenes
+from skytally.page_sets import SetMerger
 from skytally.refinement import refine_footprints
 from skytally.results import (
     Event,
@@ -104,7 +105,8 @@ def account(
     )
     if progress is not None:
         progress("Tallying", 0.6)
-    rows, timelines = tally_maps(coverage, spaces, tally_settings)
+    merger = SetMerger(coverage, len(spaces), campaign.event_mjd)
+    rows, timelines = tally_maps(coverage, spaces, tally_settings, merger.witness)
     depths = _third_dimension(campaign, coverage, rows, spaces, _part(progress, 0.7, 0.95))
     if progress is not None:
         progress("Tallying as pointed", 0.95)
@@ -139,7 +141,12 @@ def account(
             for a in telescope.log.set_aside
         ),
         notes=_notes(campaign),
-        sky=SkyData(campaign.maps, _covered(footprints), footprints.outlines),
+        sky=SkyData(
+            campaign.maps,
+            _covered(footprints),
+            footprints.outlines,
+            merger.take([m.label for m in campaign.maps]),
+        ),
         findings=findings,
         silenced=silenced,
         claims=tuple(check_claims(campaign.claims, campaign, coverage, rows)),

@@ -54,6 +54,8 @@ class Footprints:
         Per telescope: where it is searchable, and the raster of its mask.
     outlines : tuple of tuples of float64 arrays
         Per telescope, rings to draw.
+    outlined : tuple of int64 arrays
+        Per telescope, the footprint of each ring.
     pieces_per_footprint : int64 array, shape (footprints,)
         Number of convex pieces; 0 for regions known exactly.
     """
@@ -64,6 +66,7 @@ class Footprints:
     pieces: Pieces
     clips: tuple[tuple[Spans | None, Raster | None], ...]
     outlines: tuple[tuple[Floats, ...], ...]
+    outlined: tuple[Ints, ...]
     pieces_per_footprint: Ints
 
     def of(self, chosen: NDArray[np.bool_]) -> NDArray[np.bool_]:
@@ -82,6 +85,7 @@ class _Laid:
     other: dict[int, Shape]  # footprints that are not simple
     count: int
     outlines: tuple[Floats, ...]
+    outlined: Ints  # footprint of each outline
 
 
 def lay_footprints(
@@ -96,7 +100,7 @@ def lay_footprints(
     """
     bands, nights = _names(campaign)
     rasters, pieces, per_footprint, owners = [], [], [], []
-    clips, outlines, columns = [], [], []
+    clips, outlines, outlined, columns = [], [], [], []
     first = 0
     for index, telescope in enumerate(campaign.telescopes):
         if progress is not None:
@@ -112,6 +116,7 @@ def lay_footprints(
         per_footprint.append(np.bincount(laid.pieces.owner, minlength=laid.count))
         owners.append(np.full(laid.count, index))
         outlines.append(laid.outlines)
+        outlined.append(laid.outlined + first)
         columns.append(
             _columns(telescope, campaign, index, band, night, nights, laid.footprint + first)
         )
@@ -123,6 +128,7 @@ def lay_footprints(
         Pieces.stack(pieces),
         tuple(clips),
         tuple(outlines),
+        tuple(outlined),
         np.concatenate([np.empty(0, dtype=np.int64), *per_footprint]).astype(np.int64),
     )
 
@@ -231,6 +237,7 @@ def _lay(telescope: Telescope) -> _Laid:
     parts: list[Pieces] = []
     other: dict[int, Shape] = {}
     outlines: list[Floats] = []
+    outlined: list[Ints] = []
     if by_camera.any():
         assert telescope.camera is not None  # checked when the campaign was read
         rows = first[by_camera]
@@ -238,6 +245,7 @@ def _lay(telescope: Telescope) -> _Laid:
         laid = lay_camera(telescope.camera, *pointings)
         parts.append(laid.take(np.arange(len(laid)), np.flatnonzero(by_camera)[laid.owner]))
         outlines.extend(lay_outlines(telescope.camera, *pointings))
+        outlined.append(np.repeat(np.flatnonzero(by_camera), len(outlines) // rows.size))
     for owner in np.flatnonzero(~by_camera):
         shape = telescope.regions[log.region[first[owner]]]
         simple = _simple_parts(shape)
@@ -246,6 +254,7 @@ def _lay(telescope: Telescope) -> _Laid:
         else:
             parts.extend(pieces_of_shape(part, int(owner)) for part in simple)
             outlines.extend(_outline(part) for part in simple)
+            outlined.append(np.full(len(simple), owner))
     pieces = Pieces.stack(parts)
     by_owner = np.argsort(pieces.owner, kind="stable")
     return _Laid(
@@ -254,6 +263,7 @@ def _lay(telescope: Telescope) -> _Laid:
         other,
         len(example),
         tuple(outlines),
+        np.concatenate([np.empty(0, dtype=np.int64), *outlined]).astype(np.int64),
     )
 
 

@@ -18,6 +18,7 @@ from skytally.exclusion import (
 )
 from skytally.findings import Finding
 from skytally.limits import SourceRow
+from skytally.page_sets import PageSets
 from skytally.sharing import Sharing
 from skytally.skymap import SkyMap
 from skytally.spans import Spans
@@ -180,11 +181,14 @@ class SkyData:
         Per telescope, the distinct footprints' outlines as closed rings of
         ICRS lon, lat in degrees (first vertex not repeated); empty where
         regions were given outright as MOC.
+    sets : PageSets or None
+        Rows of like visits from which any choice of exposures can be tallied.
     """
 
     maps: tuple[SkyMap, ...]
     covered: tuple[Spans, ...]
     outlines: tuple[tuple[NDArray[np.float64], ...], ...]
+    sets: PageSets | None = None
 
 
 @dataclass(frozen=True)

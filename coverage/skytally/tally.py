@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -19,6 +19,7 @@ from skytally.times import hours_since, mjd_to_iso
 
 __all__ = [
     "AsPointed",
+    "SetWorth",
     "TallyRow",
     "Timeline",
     "maps_in_force",
@@ -116,7 +117,7 @@ class AsPointed:
 
 
 @dataclass(frozen=True, eq=False)
-class _Sets:
+class SetWorth:
     """What each set of the patchworks is worth on one map.
 
     Attributes
@@ -143,7 +144,7 @@ class _Sets:
     volume_90_comoving: Floats | None
 
     @classmethod
-    def of(cls, coverage: Coverage, skymap: SkyMap, space: Space | None) -> _Sets:
+    def of(cls, coverage: Coverage, skymap: SkyMap, space: Space | None) -> SetWorth:
         raster, whole = coverage.footprints.raster, skymap.probability
         strip = whole.of_table(raster.outer) - whole.of_table(raster.inner)
         volumes = None if space is None else space.credible_densities()
@@ -165,15 +166,20 @@ def tally_maps(
     coverage: Coverage,
     maps: Sequence[tuple[SkyMap, Space | None]],
     settings: TallySettings,
+    witness: Callable[[SetWorth], None] | None = None,
 ) -> tuple[list[TallyRow], list[Timeline]]:
     """Tally every selection on every map version, map by map.
 
     Each map comes with its third dimension, None where it has no distances.
+    ``witness`` is shown what the sets are worth on each map, which is costly to
+    find twice and large to keep.
     """
     chosen = [Chosen.of(coverage, s, settings) for s in selections(coverage.observations)]
     rows, timelines = [], []
     for skymap, space in maps:
-        sets = _Sets.of(coverage, skymap, space)
+        sets = SetWorth.of(coverage, skymap, space)
+        if witness is not None:
+            witness(sets)
         shares: dict[int, _Shares] = {}
         for part in chosen:
             peers = part.selection.peers
@@ -184,7 +190,7 @@ def tally_maps(
     return rows, timelines
 
 
-def _row(coverage: Coverage, part: Chosen, label: str, sets: _Sets, share: _Shares) -> TallyRow:
+def _row(coverage: Coverage, part: Chosen, label: str, sets: SetWorth, share: _Shares) -> TallyRow:
     """Sum what a map gives each set over the sets that a selection covers."""
     selection, o = part.selection, coverage.observations
     covered = part.covered
@@ -273,7 +279,7 @@ def _centre_rule_error(coverage: Coverage, strip: Floats, footprints: Bools, wid
 
 
 def _timeline(
-    coverage: Coverage, part: Chosen, label: str, sets: _Sets, event_mjd: float
+    coverage: Coverage, part: Chosen, label: str, sets: SetWorth, event_mjd: float
 ) -> Timeline:
     """Cumulate what was first completed at each exposure end."""
     covered = np.flatnonzero(part.covered)
