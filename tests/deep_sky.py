@@ -21,6 +21,9 @@ from skytally.cameras import MosaicCamera
 from skytally.covered import Coverage
 from skytally.dust import Dust
 from skytally.footprints import lay_footprints
+from skytally.limits import Scene, tally_sources, visits_of_brackets
+from skytally.overlay import Places
+from skytally.patchwork import edges_of
 from skytally.skymap import DistanceLayer, SkyMap
 from skytally.sources import Source
 from skytally.spans import FULL_SKY_SR, LINE_ORDER, Spans, cell_to_span
@@ -35,6 +38,9 @@ __all__ = [
     "fields",
     "map_of",
     "often",
+    "places_of",
+    "scene_of",
+    "source_rows",
     "spans_of_cells",
 ]
 
@@ -100,6 +106,23 @@ def fields(seed=5, count=8, size=(8.0, 6.0), depth_sd=0.4, missing=0.0):
 
 def coverage_of(telescopes, skymap, extinction=None):
     return Coverage.build(lay_footprints(campaign(telescopes, [skymap])), extinction)
+
+
+def places_of(patchwork, skymap, dust=None):
+    """Places of a patchwork over a map and dust."""
+    layers = [skymap] if dust is None else [skymap, dust]
+    return Places.of(patchwork.cut(edges_of(*layers)), dust)
+
+
+def scene_of(coverage, space, dust=None, coefficients=None):
+    """A map under the centre rule's patchwork."""
+    return Scene.of(space, next(visits_of_brackets(coverage, [space], dust, coefficients or {})))
+
+
+def source_rows(coverage, space, sources, dust=None, coefficients=None):
+    """Tally sources on one map."""
+    brackets = list(visits_of_brackets(coverage, [space], dust, coefficients or {}))
+    return tally_sources(brackets, [space], sources, EVENT_MJD)
 
 
 def spans_of_cells(order, cell):

@@ -15,6 +15,8 @@ from deep_sky import (
     exact_coverage,
     fields,
     map_of,
+    scene_of,
+    source_rows,
     spans_of_cells,
 )
 from scipy.integrate import trapezoid
@@ -25,9 +27,9 @@ from skytally.exclusion import (
     depth_histograms,
     distance_profile,
     exclusion_curves,
-    fading_plane,
+    fading_planes,
 )
-from skytally.limits import Scene, SeenSource, tally_sources
+from skytally.seen import SeenSource
 from skytally.sources import Source
 from skytally.space import Space
 from skytally.spans import Spans
@@ -45,17 +47,22 @@ class Sky:
         self.skymap, self.dust = distance_map(), dust
         self.space = Space.of(self.skymap, PLANCK)
         self.coverage = coverage_of(fields(missing=0.1, size=size), self.skymap)
-        self.scene = Scene.of(self.space, self.coverage.centre, self.coverage, dust, COEFFICIENTS)
+        self.scene = scene_of(self.coverage, self.space, dust, COEFFICIENTS)
 
     def rows(self, *sources):
         """Rows by source and band."""
-        rows = tally_sources(self.coverage, self.space, sources, EVENT_MJD, self.dust, COEFFICIENTS)
+        rows = source_rows(self.coverage, self.space, sources, self.dust, COEFFICIENTS)
         return {(r.source, r.band): r for r in rows if r.telescope is None and r.night is None}
 
 
 @pytest.fixture(scope="module", params=[None, dust_map()], ids=["clear", "dusty"])
 def sky(request):
     return Sky(request.param)
+
+
+def plane_of(scene):
+    (plane,) = fading_planes(scene.visits, [scene], EVENT_MJD)
+    return plane
 
 
 def named(source, name):
@@ -65,7 +72,7 @@ def named(source, name):
 
 
 def test_curves_are_tallies_of_constant_sources(sky):
-    curves = {c.band: c for c in exclusion_curves(sky.coverage, sky.scene)}
+    curves = {c.band: c for c in exclusion_curves(sky.scene)}
     assert tuple(curves) == BANDS
     magnitudes = curves[None].magnitude
     assert magnitudes == tuple(np.linspace(-26, -8, 73))
@@ -94,13 +101,13 @@ def bisected(sky, share, band, bright=-40.0, faint=0.0):
 
 def test_crossings_against_bisection():
     sky = Sky(dust_map(), size=(14.0, 12.0))
-    for curve in exclusion_curves(sky.coverage, sky.scene):
+    for curve in exclusion_curves(sky.scene):
         for share, at in ((0.5, curve.magnitude_50), (0.9, curve.magnitude_90)):
             if curve.highest <= share:
                 assert at is None
             else:
                 assert at == pytest.approx(bisected(sky, share, curve.band), abs=4e-4)
-    both = {c.band: c for c in exclusion_curves(sky.coverage, sky.scene)}
+    both = {c.band: c for c in exclusion_curves(sky.scene)}
     assert both[None].magnitude_50 is not None
     assert both["g"].magnitude_90 is None
 
@@ -110,8 +117,8 @@ def test_crossings_exist_for_any_limit_if_all_the_sky_is_covered(depth):
     """One cell at 100 Mpc ± 1 %: the crossing lies at its modulus of 35."""
     skymap = map_of(2, np.array([5]), [1.0], [100.0], [1.0])
     coverage = exact_coverage([Spans.full()], skymap, depth=depth)
-    scene = Scene.of(Space.of(skymap, PLANCK), coverage.centre, coverage, None, {})
-    for curve in exclusion_curves(coverage, scene):
+    scene = scene_of(coverage, Space.of(skymap, PLANCK))
+    for curve in exclusion_curves(scene):
         assert curve.highest == pytest.approx(1.0)
         assert curve.magnitude_50 == pytest.approx(depth - 35.0, abs=1e-3)
         # The 90 % quantile of 100 ± 1 lies 1.28 σ (normal quantile) beyond, or a little more.
@@ -122,15 +129,15 @@ def test_nothing_covered_rules_out_nothing():
     skymap = distance_map()
     for regions, depth in (([spans_of_cells(3, [500])], 20.0), ([Spans.full()], np.nan)):
         coverage = exact_coverage(regions, skymap, depth=depth)
-        scene = Scene.of(Space.of(skymap, PLANCK), coverage.centre, coverage, None, {})
-        for curve in exclusion_curves(coverage, scene):
+        scene = scene_of(coverage, Space.of(skymap, PLANCK))
+        for curve in exclusion_curves(scene):
             assert (curve.highest, curve.magnitude_50, curve.magnitude_90) == (0.0, None, None)
             assert not any(curve.probability)
-        assert not np.any(fading_plane(coverage, scene, EVENT_MJD).probability)
+        assert not np.any(plane_of(scene).probability)
 
 
 def test_fading_plane_is_tallies_of_fading_sources(sky):
-    plane = fading_plane(sky.coverage, sky.scene, EVENT_MJD)
+    plane = plane_of(sky.scene)
     value = np.array(plane.probability)
     assert value.shape == (len(plane.fade_per_day), len(plane.peak)) == (20, 20)
     assert np.all(np.diff(value, axis=0) <= 1e-12)
@@ -203,9 +210,9 @@ def test_distance_profile_by_hand():
     skymap = map_of(2, np.arange(3), [0.5, 0.3, 0.2], [100.0, 150.0, np.inf], [30.0, 20.0, 1.0])
     regions = [spans_of_cells(2, [1, 2]), spans_of_cells(3, [0, 1])]
     coverage = exact_coverage(regions, skymap, depth=np.array([19.8, 19.0]))
-    scene = Scene.of(Space.of(skymap, PLANCK), coverage.centre, coverage, None, {})
-    seen = SeenSource.of(constant(-16.0), scene, coverage, EVENT_MJD)
-    profile = distance_profile(scene, [("Steady", seen.reach_by_place())])
+    scene = scene_of(coverage, Space.of(skymap, PLANCK))
+    seen = SeenSource.of(constant(-16.0), scene.visits, EVENT_MJD, PLANCK)
+    profile = distance_profile(scene, [("Steady", seen.reach_at(seen.visits.seen))])
     r = np.array(profile.distance_mpc)
     near, far = 0.5 * shape(r, 100.0, 30.0), 0.3 * shape(r, 150.0, 20.0)
     np.testing.assert_allclose(profile.whole, near + far, rtol=1e-7, atol=1e-15)
@@ -220,8 +227,8 @@ def test_distance_profile_by_hand():
 
 def test_distance_profile_sums_to_the_tally(sky):
     source = constant(-15.5)
-    seen = SeenSource.of(source, sky.scene, sky.coverage, EVENT_MJD)
-    profile = distance_profile(sky.scene, [("Steady", seen.reach_by_place())])
+    seen = SeenSource.of(source, sky.scene.visits, EVENT_MJD, PLANCK)
+    profile = distance_profile(sky.scene, [("Steady", seen.reach_at(seen.visits.seen))])
     row = sky.rows(source)["Steady", None]
     r = np.array(profile.distance_mpc)
     known = row.probability + row.probability_beyond
@@ -240,8 +247,8 @@ def test_depth_histogram_by_hand():
         depth=np.array([20.3, 20.1, np.nan, 19.5, 23.0]),
         band=["r", "r", "r", "r", "g"],
     )
-    scene = Scene.of(Space.of(skymap, PLANCK), coverage.centre, coverage, None, {})
-    green, red = depth_histograms(coverage, scene)
+    scene = scene_of(coverage, Space.of(skymap, PLANCK))
+    green, red = depth_histograms(scene)
     assert (red.band, red.edges) == ("r", (19.5, 19.75, 20.0, 20.25, 20.5))
     assert red.probability == pytest.approx((0.1, 0.0, 0.3, 0.4))
     assert red.without_limit == pytest.approx(0.2)
@@ -253,7 +260,7 @@ def test_depth_histogram_by_hand():
 def test_depth_histograms_hold_what_was_covered(sky):
     rows, _ = tally_maps(sky.coverage, [(sky.skymap, None)], TallySettings(EVENT_MJD, 2, 30.0))
     covered = {r.band: r.probability for r in rows if r.telescope is None and r.night is None}
-    histograms = depth_histograms(sky.coverage, sky.scene)
+    histograms = depth_histograms(sky.scene)
     assert [h.band for h in histograms] == ["g", "r"]
     for one in histograms:
         total = sum(one.probability) + one.without_limit

@@ -21,8 +21,8 @@ TABLE = (
     "log_columns log_regions log_io image_io region_text camera_io light_curve_io campaign_faults "
     "campaign_model campaign_data campaign_sources campaign positions_io claims_io",
     "selection footprints patchwork covered field_extinction overlay held touching other_fields",
-    "refinement depth tally page_sets sharing reach limits exclusion leftover galaxies where "
-    "recounts explanations claim_text claims pointings readings audit_maps audit_rows audit_times "
+    "refinement depth tally page_sets sharing reach seen limits exclusion leftover galaxies "
+    "where recounts explanations claim_text claims pointings readings audit_maps audit_rows audit_times "
     "audit_depth audit_positions audit_footprints audit",
     "results account serialise",
     "scaffold wording figure_style projection plots limit_plots sky_picture sky_chart figures "

@@ -23,6 +23,7 @@ from deep_sky import (
     fields,
     map_of,
     often,
+    source_rows,
     spans_of_cells,
 )
 from scipy.integrate import trapezoid
@@ -30,7 +31,6 @@ from scipy.special import expit
 from skytally.cosmology import Cosmology
 from skytally.distance import moments
 from skytally.leftover import left_over
-from skytally.limits import tally_sources
 from skytally.skymap_io import read_skymap, write_skymap
 from skytally.sources import Detection, Source
 from skytally.space import Space
@@ -69,7 +69,7 @@ def test_what_is_left_is_one_less_what_would_have_been_seen(night, name, dust):
     skymap, _, coverage = night
     source = SOURCES[name]
     space = Space.of(skymap, PLANCK)
-    row = tally_sources(coverage, space, [source], EVENT_MJD, dust, COEFFICIENTS)[0]
+    row = source_rows(coverage, space, [source], dust, COEFFICIENTS)[0]
     found = left(coverage, skymap, source, dust)
     assert found.remaining == pytest.approx(1 - row.probability, abs=1e-9)
     assert found.skymap.probability.total == pytest.approx(1.0, abs=1e-12)

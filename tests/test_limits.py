@@ -26,6 +26,7 @@ from deep_sky import (
     fields,
     map_of,
     often,
+    source_rows,
     spans_of_cells,
 )
 from hypothesis import given, settings
@@ -35,7 +36,6 @@ from scipy.special import expit
 from skytally.cameras import CircleCamera
 from skytally.cosmology import Cosmology
 from skytally.covered import TallySettings
-from skytally.limits import tally_sources
 from skytally.skymap import SkyMap
 from skytally.sources import Detection, Source
 from skytally.space import Space
@@ -137,7 +137,7 @@ class Night:
         return found
 
     def rows(self, *sources):
-        return tally_sources(self.coverage, self.space, sources, EVENT_MJD, self.dust, COEFFICIENTS)
+        return source_rows(self.coverage, self.space, sources, self.dust, COEFFICIENTS)
 
     def chosen(self, row):
         return ((self.telescope == row.telescope) | (row.telescope is None)) & (
@@ -208,7 +208,7 @@ def plain_map(cell, mu, sigma, order=3):
 def tallied(regions, skymap, sources, dust=None, **log):
     coverage = exact_coverage(regions, skymap, **log)
     space = Space.of(skymap, PLANCK)
-    return tally_sources(coverage, space, sources, EVENT_MJD, dust, COEFFICIENTS)
+    return source_rows(coverage, space, sources, dust, COEFFICIENTS)
 
 
 @pytest.fixture
@@ -312,7 +312,7 @@ def test_volumes_of_a_cap_against_its_formula_and_astropy():
     log = log_table("Heron", [150.0], [20.0], depth=limit)
     coverage = coverage_of([telescope("Heron", CircleCamera(radius), log)], skymap)
     space = Space.of(skymap, PLANCK)
-    row = tally_sources(coverage, space, [constant(magnitude)], EVENT_MJD, None, {})[0]
+    row = source_rows(coverage, space, [constant(magnitude)])[0]
     reach = Distance(distmod=limit - magnitude).to_value(u.Mpc)
     solid = 2 * np.pi * (1 - np.cos(np.radians(radius)))
     redshift = Distance(distmod=limit - magnitude).compute_z(Planck18)
@@ -437,7 +437,7 @@ def test_no_exposure_and_none_on_the_map(cells, name):
     nothing = coverage_of([telescope("Heron", CircleCamera(1.0), log)], skymap)
     space = Space.of(skymap, PLANCK)
     for coverage in (nothing, exact_coverage([Spans.from_cells(3, np.array([500]))], skymap)):
-        for row in tally_sources(coverage, space, [SOURCES[name]], EVENT_MJD, None, {}):
+        for row in source_rows(coverage, space, [SOURCES[name]]):
             assert (row.probability, row.probability_high) == (0.0, 0.0)
 
 
@@ -456,7 +456,7 @@ def test_a_field_of_less_than_a_cell_has_a_bracket_from_nothing(cells):
         ),
     )
     space = Space.of(skymap, PLANCK)
-    row = tally_sources(coverage, space, [constant(-20.0)], EVENT_MJD, None, {})[0]
+    row = source_rows(coverage, space, [constant(-20.0)])[0]
     assert row.probability_low == 0.0
     assert 0.0 < row.probability <= row.probability_high
 

@@ -7,11 +7,10 @@ from collections import defaultdict
 import healpy
 import numpy as np
 import pytest
-from deep_sky import coverage_of, distance_map, dust_map, fields, map_of
+from deep_sky import coverage_of, distance_map, dust_map, fields, map_of, places_of
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from skytally.dust import Dust
-from skytally.overlay import Overlay
 from skytally.patchwork import Patchwork
 from skytally.spans import LINE_END, LINE_ORDER, Spans, SpanTable, cell_to_span
 
@@ -70,7 +69,8 @@ def test_rows_against_pixels(sky):
     parts, skymap, dust = sky
     regions = [region(p) for p in parts]
     patchwork = Patchwork.build(SpanTable.from_regions(regions))
-    overlay = Overlay.build(patchwork, skymap, dust)
+    places = places_of(patchwork, skymap, dust)
+    overlay = places.over(skymap)
     expected = defaultdict(lambda: [0.0, 0.0])
     for pixel in range(PIXELS):
         position = pixel * WIDTH
@@ -87,17 +87,17 @@ def test_rows_against_pixels(sky):
     for place, cell, *held in zip(
         overlay.place, overlay.cell, overlay.probability, overlay.solid_angle_sr
     ):
-        members = slice(*patchwork.offsets[overlay.place_set[place] + np.arange(2)])
-        ebv = overlay.place_ebv[place]
+        members = slice(*patchwork.offsets[places.place_set[place] + np.arange(2)])
+        ebv = places.place_ebv[place]
         key = frozenset(patchwork.members[members].tolist()), int(cell)
         got[(*key, None if np.isnan(ebv) else float(ebv))] = held
     assert got.keys() == expected.keys()
     assert overlay.place.size == len(expected)
     for key, held in got.items():
         assert held == pytest.approx(expected[key], rel=1e-9, abs=1e-15)
-    assert np.all(np.diff(overlay.place) >= 0)
-    assert np.all(np.diff(overlay.place_set) >= 0)
-    assert overlay.places == overlay.place.max() + 1
+    assert np.all(np.lexsort((overlay.place, overlay.cell)) == np.arange(overlay.cell.size))
+    assert np.all(np.diff(places.place_set) >= 0)
+    assert overlay.places == len(places) == overlay.place.max() + 1
 
 
 @pytest.mark.parametrize("dust", [None, dust_map(2), dust_map(6)], ids=["none", "coarse", "fine"])
@@ -105,7 +105,8 @@ def test_rows_sum_to_the_union_and_to_each_set(dust):
     skymap = distance_map()
     coverage = coverage_of(fields(), skymap)
     for patchwork in (coverage.centre, coverage.inner, coverage.outer):
-        overlay = Overlay.build(patchwork, skymap, dust)
+        places = places_of(patchwork, skymap, dust)
+        overlay = places.over(skymap)
         union = Spans.from_intervals(patchwork.starts, patchwork.stops)
         assert overlay.probability.sum() == pytest.approx(
             skymap.probability.of_region(union), rel=1e-9
@@ -115,7 +116,7 @@ def test_rows_sum_to_the_union_and_to_each_set(dust):
             (overlay.probability, patchwork.measure(skymap.probability)),
             (overlay.solid_angle_sr, patchwork.area_sr),
         ):
-            of_set = np.bincount(overlay.place_set[overlay.place], values, patchwork.sets)
+            of_set = np.bincount(places.place_set[overlay.place], values, patchwork.sets)
             np.testing.assert_allclose(of_set, whole, rtol=1e-6, atol=1e-14)
         # Per cell: what of it lies in the union.
         inside = overlay.cell >= 0
@@ -132,16 +133,17 @@ def test_dust_cuts_places_and_nothing_else():
     skymap = distance_map()
     coverage = coverage_of(fields(), skymap)
     dust = dust_map(4)
-    plain = Overlay.build(coverage.centre, skymap, None)
-    dusty = Overlay.build(coverage.centre, skymap, dust)
-    assert np.isnan(plain.place_ebv).all()
+    plain_places = places_of(coverage.centre, skymap)
+    dusty_places = places_of(coverage.centre, skymap, dust)
+    plain, dusty = plain_places.over(skymap), dusty_places.over(skymap)
+    assert np.isnan(plain_places.place_ebv).all()
     assert dusty.places > plain.places
-    assert np.isin(dusty.place_ebv, dust.ebv).all()
+    assert np.isin(dusty_places.place_ebv, dust.ebv).all()
     joined = defaultdict(float)
     for place, cell, value in zip(dusty.place, dusty.cell, dusty.probability):
-        joined[int(dusty.place_set[place]), int(cell)] += value
+        joined[int(dusty_places.place_set[place]), int(cell)] += value
     whole = {
-        (int(plain.place_set[p]), int(c)): v
+        (int(plain_places.place_set[p]), int(c)): v
         for p, c, v in zip(plain.place, plain.cell, plain.probability)
     }
     assert joined.keys() == whole.keys()
@@ -152,7 +154,7 @@ def test_dust_cuts_places_and_nothing_else():
 def test_nothing_covered_has_no_rows():
     nothing = Patchwork.build(SpanTable.from_regions([Spans.empty()]))
     for dust in (None, dust_map(1)):
-        overlay = Overlay.build(nothing, distance_map(), dust)
+        overlay = places_of(nothing, distance_map(), dust).over(distance_map())
         assert (overlay.places, overlay.cell.size, overlay.probability.sum()) == (0, 0, 0.0)
 
 
@@ -161,6 +163,38 @@ def test_single_cells_at_both_ends_of_the_line():
     cell = np.array([0, 12 * 4**LINE_ORDER - 1])
     skymap = map_of(LINE_ORDER, cell, [1.0, 3.0], [10.0, 20.0], [1.0, 1.0])
     patchwork = Patchwork.build(SpanTable.from_regions([Spans.full()]))
-    overlay = Overlay.build(patchwork, skymap, None)
+    overlay = places_of(patchwork, skymap).over(skymap)
     assert overlay.cell.tolist() == [-1, 0, 1]
     np.testing.assert_allclose(overlay.probability, [0.0, 0.25, 0.75], rtol=1e-12)
+
+
+def test_joined_places_hold_what_each_of_them_held():
+    """Places sent to new ones at random, some to none, against a walk over the rows."""
+    skymap = distance_map()
+    overlay = places_of(coverage_of(fields(), skymap).centre, skymap, dust_map(3)).over(skymap)
+    rng = np.random.default_rng(4)
+    number = rng.integers(-1, 20, overlay.places)
+    joined = overlay.joined(number, 20)
+    expected = defaultdict(lambda: [0.0, 0.0])
+    for place, cell, *held in zip(
+        overlay.place, overlay.cell, overlay.probability, overlay.solid_angle_sr
+    ):
+        if number[place] >= 0:
+            for part in (0, 1):
+                expected[int(number[place]), int(cell)][part] += held[part]
+    rows = list(zip(joined.place.tolist(), joined.cell.tolist()))
+    assert rows == sorted(expected)
+    for row, *held in zip(rows, joined.probability, joined.solid_angle_sr):
+        assert held == pytest.approx(expected[row], rel=1e-12)
+    cells = joined.cells()
+    assert cells.tolist() == sorted(set(joined.cell.tolist()))
+    table = joined.table(cells).toarray()
+    assert table.shape == (20, cells.size)
+    for (place, cell), held in expected.items():
+        assert table[place, np.searchsorted(cells, cell)] == pytest.approx(held[0], rel=1e-12)
+    assert np.count_nonzero(table) == np.count_nonzero(joined.probability)
+    np.testing.assert_allclose(
+        joined.by_place(joined.solid_angle_sr),
+        [sum(v[1] for (p, _), v in expected.items() if p == place) for place in range(20)],
+        rtol=1e-12,
+    )

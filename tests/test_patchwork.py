@@ -78,6 +78,39 @@ def test_sums_over_sets(owners, density):
     )
 
 
+@given(regions, st.sets(st.integers(0, PLACES), min_size=1))
+def test_cut_patches_by_place_and_interval(owners, where):
+    patchwork = Patchwork.build(table_of(owners))
+    edges = np.array(sorted(where), dtype=np.int64)
+    cut = patchwork.cut(edges)
+    unit = FULL_SKY_SR / LINE_END
+    expected = {}
+    for start, stop, group in zip(patchwork.starts, patchwork.stops, patchwork.group):
+        for place in range(start, stop):
+            key = int(group), sum(edge <= place for edge in where)
+            expected[key] = expected.get(key, 0.0) + unit
+    rows = list(zip(cut.group.tolist(), cut.interval.tolist()))
+    assert rows == sorted(expected)
+    assert cut.solid_angle_sr == pytest.approx([expected[row] for row in rows], rel=1e-12)
+    assert cut.knows(edges)
+    assert cut.knows(edges[:0])
+    assert not cut.knows(np.append(edges, PLACES + 1))
+    # Every second stretch between two edges is a span of a layer.
+    layer = Measure(edges[:-1:2], edges[1::2], np.arange(1.0, edges.size // 2 + 1))
+    spans = cut.span_of(layer)
+    for interval in range(edges.size + 1):
+        inside = 0 < interval < edges.size and interval % 2 == 1
+        assert spans[interval] == (interval // 2 if inside else -1)
+    np.testing.assert_allclose(cut.measure(layer), patchwork.measure(layer), rtol=1e-12)
+
+
+@given(regions)
+def test_sets_are_numbered_as_they_come(owners):
+    patchwork = Patchwork.build(table_of(owners))
+    first = [patchwork.group.tolist().index(g) for g in range(patchwork.sets)]
+    assert first == sorted(first)
+
+
 @given(regions, st.data())
 def test_covered_by(owners, data):
     patchwork = Patchwork.build(table_of(owners))

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from itertools import combinations, product
+from itertools import combinations, pairwise, product
 
 import numpy as np
 import pytest
@@ -17,6 +17,7 @@ from deep_sky import (
     dust_map,
     exact_coverage,
     fields,
+    places_of,
     spans_of_cells,
 )
 from hypothesis import given, settings
@@ -26,14 +27,13 @@ from skytally.cosmology import Cosmology
 from skytally.covered import Coverage, TallySettings
 from skytally.dust import Dust
 from skytally.field_extinction import bands_without_coefficient, field_extinction
-from skytally.overlay import Overlay
+from skytally.grouping import Lists
 from skytally.reach import (
     Visits,
     absolute_magnitudes,
-    deciding_visits,
-    order_by_reach,
+    deciding_looks,
+    reach_of_looks,
     seen_share,
-    visit_reach,
 )
 from skytally.sources import Detection, Source
 from skytally.space import Space
@@ -63,27 +63,37 @@ places = st.lists(
 wanted = st.tuples(st.integers(1, 4), st.sampled_from([0, 1, 30, 45, 90]))
 
 
+def looks_of(sky):
+    """Looks numbered at random over the places, and each place's list of them in time order."""
+    count = sum(map(len, sky))
+    number = np.random.default_rng(count).permutation(count).astype(np.int32)
+    values = np.empty((count, 3))
+    values[number] = [look for place in sky for look in place]
+    # Within a place looks rise in number as they do in time.
+    offsets = np.cumsum([0, *map(len, sky)])
+    for first, last in pairwise(offsets):
+        here = np.sort(number[first:last])
+        values[here] = sorted(values[number[first:last]].tolist())
+        number[first:last] = here
+    start, reach, chance = values.T
+    return Lists(offsets, number), EVENT_MJD + start * MINUTE, reach, chance
+
+
 @settings(max_examples=300, derandomize=True, deadline=None)
 @given(places, wanted)
-def test_deciding_visits_against_all_subsets(sky, asked):
-    """The reach is the greatest r such that the visits that reach r are enough."""
+def test_deciding_looks_against_all_subsets(sky, asked):
+    """The reach is the greatest r such that the looks that reach r are enough."""
     visits, gap = asked
-    place = np.repeat(np.arange(len(sky)) * 3, [len(p) for p in sky])
-    start = np.array([v[0] for p in sky for v in p], dtype=float)
-    reach = np.array([v[1] for p in sky for v in p], dtype=float)
-    order = order_by_reach(place, reach)
-    found, row = deciding_visits(
-        place[order], EVENT_MJD + start[order] * MINUTE, visits, float(gap)
-    )
-    got = dict(zip(found.tolist(), reach[order][row]))
-    for number, here in enumerate(sky):
+    seen, start, reach, _ = looks_of(sky)
+    look = deciding_looks(seen, reach, start, visits, float(gap))
+    for found, here in zip(look, sky):
         ways = [
             min(here[i][1] for i in some)
             for n in range(1, len(here) + 1)
             for some in combinations(range(len(here)), n)
             if enough([v[0] for v in here], some, visits, gap)
         ]
-        assert got.get(number * 3) == (max(ways) if ways else None)
+        assert (reach[found] if found >= 0 else 0.0) == max(ways, default=0.0)
 
 
 @settings(max_examples=200, derandomize=True, deadline=None)
@@ -91,12 +101,9 @@ def test_deciding_visits_against_all_subsets(sky, asked):
 def test_seen_share_against_all_outcomes(sky, asked):
     """Every pattern of detections and misses of each place, with its probability."""
     visits, gap = asked
-    sky = [sorted(p) for p in sky]
-    place = np.repeat(np.arange(len(sky)) * 2, [len(p) for p in sky])
-    start = np.array([v[0] for p in sky for v in p], dtype=float)
-    efficiency = np.array([[v[2], v[2] / 2] for p in sky for v in p])
-    found, share = seen_share(place, EVENT_MJD + start * MINUTE, efficiency, visits, float(gap))
-    assert found.tolist() == [2 * i for i in range(len(sky))]
+    seen, start, _, chances = looks_of(sky)
+    efficiency = np.stack((chances, chances / 2), axis=1)
+    share = seen_share(seen, start, efficiency, visits, float(gap))
     for number, here in enumerate(sky):
         for node in (0, 1):
             chance = [v[2] / (node + 1) for v in here]
@@ -112,39 +119,44 @@ def test_seen_share_against_all_outcomes(sky, asked):
 
 def test_certain_detections_leave_no_doubt():
     """Efficiencies of exactly 1, and many visits at once."""
-    place, start = np.repeat([0, 1, 2], [1, 2, 200]), EVENT_MJD + np.arange(203) * MINUTE
-    found, share = seen_share(place, start, np.ones((203, 3)), 2, 1.0)
+    seen = Lists(np.array([0, 1, 3, 203]), np.arange(203, dtype=np.int32))
+    share = seen_share(seen, EVENT_MJD + np.arange(203) * MINUTE, np.ones((203, 3)), 2, 1.0)
     np.testing.assert_allclose(share, [[0.0] * 3, [1.0] * 3, [1.0] * 3], atol=1e-9)
-    assert found.tolist() == [0, 1, 2]
 
 
 def test_a_gap_of_exactly_what_is_asked_counts():
     """MJD resolves a microsecond; half an hour is half an hour wherever it begins."""
-    place = np.array([0, 1, 1])
+    seen = Lists(np.array([0, 1, 3]), np.array([0, 1, 2], dtype=np.int32))
+    reach = np.array([9.0, 8.0, 7.0])
     for base in EVENT_MJD + np.random.default_rng(4).uniform(0, 3, 300):
         # Half a millisecond after the first of all starts, where rounding could go either way.
         start = base + np.array([0.0, 10.0005, 1810.0005]) / 86400
-        found, row = deciding_visits(place, start, 2, 30.0)
-        assert (found.tolist(), row.tolist()) == ([1], [2])
-        _, share = seen_share(place, start, np.full((3, 1), 0.5), 2, 30.0)
+        assert deciding_looks(seen, reach, start, 2, 30.0).tolist() == [-1, 2]
+        share = seen_share(seen, start, np.full((3, 1), 0.5), 2, 30.0)
         assert share[:, 0] == pytest.approx([0.0, 0.25])
-        assert deciding_visits(place, start, 2, 30.001)[0].size == 0
-        _, share = seen_share(place, start, np.full((3, 1), 0.5), 2, 30.001)
-        assert not share.any()
+        assert deciding_looks(seen, reach, start, 2, 30.001).tolist() == [-1, -1]
+        assert not seen_share(seen, start, np.full((3, 1), 0.5), 2, 30.001).any()
 
 
-def visits_to(limits, places=1):
-    """One visit to one place for each limit."""
+def visits_to(limits):
+    """One look of one exposure for each limit."""
+    coverage = exact_coverage([spans_of_cells(3, [500])], distance_map())
     n = len(limits)
-    return Visits(np.zeros(n, dtype=int), np.arange(n), np.asarray(limits, dtype=float), places)
+    return Visits(
+        coverage.observations,
+        places_of(coverage.centre, distance_map()),
+        Lists(np.array([0, n]), np.arange(n, dtype=np.int32)),
+        np.arange(n),
+        np.asarray(limits, dtype=float),
+    )
 
 
 def test_reach_against_astropy():
     limits, magnitude = np.array([15.0, 20.5, 24.0, np.nan]), np.array([-16.0, -15.0, -19.0, -16.0])
-    got = visit_reach(visits_to(limits), constant(0.0), magnitude, PLANCK)
+    got = reach_of_looks(visits_to(limits), constant(0.0), magnitude, PLANCK)
     expected = Distance(distmod=(limits - magnitude)[:3]).to_value(u.Mpc)
     np.testing.assert_allclose(got, np.append(expected, 0.0), rtol=1e-12)
-    got = visit_reach(
+    got = reach_of_looks(
         visits_to(limits), constant(0.0, detection=Detection(-0.7, 0.2, 0.9)), magnitude, PLANCK
     )
     expected = Distance(distmod=(limits - magnitude)[:3] - 0.7).to_value(u.Mpc)
@@ -154,7 +166,7 @@ def test_reach_against_astropy():
 def test_flat_spectrum_reach_is_where_astropy_puts_the_limit():
     limits, magnitude = np.array([15.0, 20.5, 24.0]), np.array([-16.0, -15.0, -19.0])
     source = constant(0.0, k_correction="flat")
-    got = visit_reach(visits_to(limits), source, magnitude, PLANCK)
+    got = reach_of_looks(visits_to(limits), source, magnitude, PLANCK)
     for d, limit, absolute in zip(got, limits, magnitude):
         z = z_at_value(Planck18.luminosity_distance, d * u.Mpc).value
         modulus = Planck18.distmod(z).value
@@ -165,11 +177,11 @@ def test_reach_of_what_is_infinitely_bright_lies_beyond_everything():
     for k_correction in ("none", "flat"):
         source = constant(0.0, k_correction=k_correction)
         limits, magnitude = np.full(4, 20.0), np.array([-30.0, -41.0, -43.0, -90.0])
-        got = visit_reach(visits_to(limits), source, magnitude, PLANCK)
+        got = reach_of_looks(visits_to(limits), source, magnitude, PLANCK)
         assert np.all(np.diff(got) >= 0)
         assert np.all(got > 1e4)
         assert np.all(np.isfinite(got))
-        unseen = visit_reach(visits_to(limits), source, np.full(4, np.nan), PLANCK)
+        unseen = reach_of_looks(visits_to(limits), source, np.full(4, np.nan), PLANCK)
         assert unseen.tolist() == [0.0] * 4
 
 
@@ -250,44 +262,67 @@ def test_a_band_without_coefficient_is_a_finding(two_fields):
     assert bands_without_coefficient(coverage.footprints, dust, {}) == []
 
 
+def visits_of(coverage, skymap, dust, coefficients):
+    places = places_of(coverage.centre, skymap, dust)
+    return Visits.of(coverage.centre, places, coverage.observations, coefficients)
+
+
 def test_limits_of_visits_are_corrected_place_by_place(two_fields):
     """Not by the field's mean: each dust cell has its own."""
     coverage, skymap, dust = two_fields
-    overlay = Overlay.build(coverage.centre, skymap, dust)
-    visits = Visits.of(coverage.centre, overlay, coverage.observations, {})
-    assert visits.places == overlay.places == 12
-    for place, exposure, limit in zip(visits.place, visits.exposure, visits.limit):
-        a = {0: 2.285 * overlay.place_ebv[place], 1: 0.5, 2: 0.0}[int(exposure)]
-        assert limit == pytest.approx(21.0 - a)
+    visits = visits_of(coverage, skymap, dust, {})
+    ebv = visits.places.place_ebv
+    assert len(visits.seen) == len(visits.places) == 12
     counts = {3: {0}, 4: {0, 1, 2}, 5: {2}}
-    for place in range(overlay.places):
-        parent = round(overlay.place_ebv[place] * 100) // 4
-        assert set(visits.exposure[visits.place == place]) == counts[parent]
+    for place in range(12):
+        looks = visits.seen.part(slice(place, place + 1)).items
+        for exposure, limit in zip(visits.exposure[looks], visits.limit[looks]):
+            a = {0: 2.285 * ebv[place], 1: 0.5, 2: 0.0}[int(exposure)]
+            assert limit == pytest.approx(21.0 - a)
+        assert set(visits.exposure[looks]) == counts[round(ebv[place] * 100) // 4]
 
 
 def test_visits_of_fields_are_those_of_their_spans():
     """Every place's exposures, in time order, by looking each place up in every footprint."""
     skymap = distance_map()
     coverage = coverage_of(fields(), skymap)
-    overlay = Overlay.build(coverage.centre, skymap, dust_map())
-    visits = Visits.of(coverage.centre, overlay, coverage.observations, {})
+    visits = visits_of(coverage, skymap, dust_map(), {})
     o, table = coverage.observations, coverage.footprints.raster.centre
     regions = [table.region(int(f)) for f in o.footprint]
     set_position = {int(g): int(s) for g, s in zip(coverage.centre.group, coverage.centre.starts)}
-    here = np.array([set_position[int(g)] for g in overlay.place_set])
+    here = np.array([set_position[int(g)] for g in visits.places.place_set])
     inside = np.array([region.contains(here) for region in regions])
-    assert visits.place.size == inside.sum()
-    for place in range(overlay.places):
-        mine = visits.exposure[visits.place == place]
+    assert visits.seen.items.size == inside.sum()
+    for place in range(len(visits.places)):
+        mine = visits.exposure[visits.seen.part(slice(place, place + 1)).items]
         assert np.all(np.diff(o.start_mjd[mine]) >= 0)
         assert set(mine) == set(np.flatnonzero(inside[:, place]))
+
+
+def test_every_selection_sees_its_own_exposures_at_every_place():
+    """Kinds of place, spelt out again, against the exposures that the selection chose there."""
+    skymap = distance_map()
+    visits = visits_of(coverage_of(fields(), skymap), skymap, dust_map(), {})
+    every = [
+        visits.exposure[visits.seen.part(slice(p, p + 1)).items] for p in range(len(visits.places))
+    ]
+    assert len(visits.views) == 12
+    for view in visits.views:
+        lists = [
+            tuple(visits.exposure[view.seen.part(slice(k, k + 1)).items].tolist())
+            for k in range(len(view.seen))
+        ]
+        for place, kind in enumerate(view.kind):
+            chosen = tuple(e for e in every[place].tolist() if view.selection.chosen[e])
+            assert (lists[kind] if kind >= 0 else ()) == chosen
+        assert len(view.seen) <= len(visits.seen)
+    assert {view.selection.band for view in visits.by_band} == {None, "g", "r"}
 
 
 def test_sky_without_dust_value_is_not_corrected():
     skymap = distance_map()
     coverage = exact_coverage([Spans.full()], skymap, depth=20.0)
     dust = Dust(*cell_to_span(1, np.array([7])), np.array([1.0]))
-    overlay = Overlay.build(coverage.centre, skymap, dust)
-    visits = Visits.of(coverage.centre, overlay, coverage.observations, {"r": 2.0})
+    visits = visits_of(coverage, skymap, dust, {"r": 2.0})
     assert sorted(visits.limit.tolist()) == [18.0, 20.0]
     assert Space.of(skymap, PLANCK) is not None

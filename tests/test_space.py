@@ -12,11 +12,12 @@ from astropy.cosmology import WMAP9, Planck18, z_at_value
 from campaign_builder import EVENT_MJD, campaign, log_table, telescope
 from deep_sky import distance_map, map_of
 from scipy.integrate import quad, trapezoid
+from skytally import distance
 from skytally.audit_maps import map_findings, sum_findings, version_findings
 from skytally.cosmology import Cosmology
 from skytally.skymap import SkyMap
 from skytally.skymap_io import read_skymap
-from skytally.space import Space
+from skytally.space import Distances, Space
 
 PLANCK = Cosmology.named("Planck18")
 EXAMPLES = Path(__file__).parent.parent / "examples" / "lantern-7" / "maps"
@@ -316,16 +317,19 @@ def test_parts_of_the_volume_add_up():
     space = Space.of(skymap, PLANCK)
     cell = np.repeat(np.arange(skymap.starts.size), 3)
     solid = (np.outer(space.solid_angle_sr, [0.5, 0.3, 0.2])).ravel()
-    far = space.credible_shell(cell, solid, np.full(cell.size, np.inf))
-    assert (far[0].sum(), far[1].sum()) == pytest.approx(space.credible_volumes(0.9), rel=1e-9)
+
+    def out_to(reach, cell=cell, solid=solid):
+        reach = np.full(cell.size, reach)
+        return space.credible_shell(cell, solid, reach**3 / 3, space.comoving_per_sr(reach))
+
+    far = out_to(np.inf)
+    assert far == pytest.approx(space.credible_volumes(0.9), rel=1e-9)
     whole = space.credible_densities()
-    assert whole[0].total == pytest.approx(far[0].sum(), rel=1e-9)
-    assert whole[1].total == pytest.approx(far[1].sum(), rel=1e-9)
-    near = [space.credible_shell(cell, solid, np.full(cell.size, r))[0].sum() for r in (0, 90, 150)]
+    assert (whole[0].total, whole[1].total) == pytest.approx(far, rel=1e-9)
+    near = [out_to(r)[0] for r in (0.0, 90.0, 150.0)]
     assert near[0] == 0.0
-    assert 0.0 < near[1] < near[2] < far[0].sum()
-    nowhere = space.credible_shell(np.array([-1]), np.ones(1), np.array([np.inf]))
-    assert (nowhere[0][0], nowhere[1][0]) == (0.0, 0.0)
+    assert 0.0 < near[1] < near[2] < far[0]
+    assert out_to(np.inf, np.array([-1]), np.ones(1)) == (0.0, 0.0)
 
 
 def test_extent_holds_all_but_millionths():
@@ -336,3 +340,29 @@ def test_extent_holds_all_but_millionths():
         low, high = (space.within(cells, np.full(cells.size, r)) for r in (near, far))
         assert low.max() < 5e-6
         assert high.min() > 1 - 1e-9
+
+
+def test_prepared_distances_against_the_closed_forms():
+    """`skytally.distance` (itself held against 50 digits) for m = μ/σ from −40 to 30."""
+    ratio = np.array([-40.0, -9.0, -3.01, -2.99, -2.0, -0.5, 0.0, 0.7, 3.0, 11.0, 30.0])
+    mu, sigma = np.append(30.0 * ratio, np.nan), np.append(np.full(ratio.size, 30.0), 1.0)
+    prepared = Distances.of(mu, sigma)
+    for r in (1e-3, 4.0, 31.0, 97.0, 250.0, 930.0, 5e3):
+        for got, expected in (
+            (prepared.within(np.full(mu.size, r)), distance.cdf(r, mu, sigma)),
+            (prepared.within(r), distance.cdf(r, mu, sigma)),
+            (prepared.density(r), distance.density(r, mu, sigma)),
+        ):
+            assert got[-1] == 0.0
+            np.testing.assert_allclose(got[:-1], expected[:-1], rtol=1e-12, atol=2e-13)
+        got, expected = prepared.moments_beyond(r), distance.moments_beyond(r, mu, sigma)
+        whole = np.array(distance.moments_beyond(0.0, mu, sigma))
+        assert got[:, -1].tolist() == [1.0, 0.0, 0.0]
+        np.testing.assert_allclose(
+            got[:, :-1] / whole[:, :-1], np.array(expected)[:, :-1] / whole[:, :-1], atol=2e-13
+        )
+    for rows in (np.array([3, 3, 11, 0]), np.array([-1, 5])):
+        assert prepared.take(rows).within(80.0).tolist() == prepared.within(80.0)[rows].tolist()
+    sure = prepared.sure_mpc
+    assert sure[-1] == 0.0
+    np.testing.assert_allclose(distance.cdf(sure[:-1], mu[:-1], sigma[:-1]), 1.0, atol=1e-15)

@@ -25,11 +25,11 @@ from skytally.exclusion import (
     depth_histograms,
     distance_profile,
     exclusion_curves,
-    fading_plane,
+    fading_planes,
 )
 from skytally.field_extinction import field_extinction
 from skytally.footprints import Footprints, Progress, lay_footprints
-from skytally.limits import Scene, SeenSource, SourceRow, tally_scenes
+from skytally.limits import Scene, SourceRow, tally_sources, visits_of_brackets
 from skytally.page_sets import SetMerger
 from skytally.refinement import refine_footprints
 from skytally.results import (
@@ -45,6 +45,7 @@ from skytally.results import (
     SourceInfo,
     TelescopeInfo,
 )
+from skytally.seen import SeenSource
 from skytally.sharing import share_maps
 from skytally.skymap import SkyMap
 from skytally.space import Space
@@ -171,34 +172,33 @@ def _third_dimension(
     progress: Progress | None,
 ) -> _Depths:
     """Tally sources and limits on every map version that carries distances."""
+    known = [space for _, space in spaces if space is not None]
+    if not known:
+        return _Depths(
+            source_rows=(),
+            exclusions=(),
+            fading_planes=(),
+            absolute_limits=(),
+            distance_profiles=(),
+            depth_histograms=(),
+        )
     dust = campaign.dust, campaign.extinction_coefficients
-    found: _Depths = {
-        "source_rows": (),
-        "exclusions": (),
-        "fading_planes": (),
-        "absolute_limits": (),
-        "distance_profiles": (),
-        "depth_histograms": (),
-    }
-    for index, (skymap, space) in enumerate(spaces):
-        if space is None:
-            continue
-        if progress is not None:
-            progress(f"Reaching into map {skymap.label}", index / len(spaces))
-        scenes = Scene.of_brackets(space, coverage, *dust)
-        scene = scenes[0]
-        seen = [SeenSource.of(s, scene, coverage, campaign.event_mjd) for s in campaign.sources]
-        found["source_rows"] += tuple(
-            tally_scenes(coverage, scenes, campaign.sources, campaign.event_mjd)
-        )
-        found["exclusions"] += tuple(exclusion_curves(coverage, scene))
-        found["fading_planes"] += (fading_plane(coverage, scene, campaign.event_mjd),)
-        found["absolute_limits"] += tuple(absolute_limits(rows, space))
-        found["distance_profiles"] += (
-            distance_profile(scene, [(one.source.name, one.reach_by_place()) for one in seen]),
-        )
-        found["depth_histograms"] += tuple(depth_histograms(coverage, scene))
-    return found
+    brackets = list(visits_of_brackets(coverage, known, *dust))
+    centre = brackets[0]
+    scenes = [Scene.of(space, centre) for space in known]
+    seen = [
+        SeenSource.of(source, centre, campaign.event_mjd, known[0].cosmology)
+        for source in campaign.sources
+    ]
+    reaches = [(one.source.name, one.reach_at(centre.seen)) for one in seen]
+    return _Depths(
+        source_rows=tuple(tally_sources(brackets, known, campaign.sources, campaign.event_mjd)),
+        exclusions=tuple(curve for scene in scenes for curve in exclusion_curves(scene)),
+        fading_planes=tuple(fading_planes(centre, scenes, campaign.event_mjd)),
+        absolute_limits=tuple(limit for space in known for limit in absolute_limits(rows, space)),
+        distance_profiles=tuple(distance_profile(scene, reaches) for scene in scenes),
+        depth_histograms=tuple(part for scene in scenes for part in depth_histograms(scene)),
+    )
 
 
 def _extinction_text(coverage: Coverage) -> str:

@@ -2,20 +2,21 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, field
 from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
 
 from skytally.footprints import Footprints
-from skytally.grouping import expand_ranges
+from skytally.grouping import Lists, sum_by
 from skytally.observations import Observations
-from skytally.patchwork import Patchwork
+from skytally.patchwork import CutPatchwork, Layer, Patchwork, edges_of
 from skytally.selection import Selection
 from skytally.spans import Ints
 
-__all__ = ["Chosen", "Coverage", "TallySettings", "visits_of"]
+__all__ = ["Chosen", "Coverage", "TallySettings", "exposures_of", "visits_of"]
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -49,6 +50,7 @@ class Coverage:
     centre: Patchwork
     inner: Patchwork
     outer: Patchwork
+    _cuts: list[tuple[CutPatchwork, ...]] = field(default_factory=list, init=False, repr=False)
 
     @classmethod
     def build(cls, footprints: Footprints, extinction: Floats | None = None) -> Coverage:
@@ -77,30 +79,49 @@ class Coverage:
         known = np.isfinite(self.extinction)
         return self.observations.depth - np.where(known, self.extinction, 0.0)
 
+    def cuts(self, layers: Sequence[Layer]) -> tuple[CutPatchwork, ...]:
+        """Cut the three patchworks wherever a layer may change: centre, inner and outer.
+
+        They are kept, and given again where they were cut at all of the edges.
+        """
+        edges = edges_of(*layers)
+        if not self._cuts or not self._cuts[0][0].knows(edges):
+            self._cuts[:] = [tuple(p.cut(edges) for p in (self.centre, self.inner, self.outer))]
+        return self._cuts[0]
+
     @cached_property
+    def exposures(self) -> Lists:
+        """The exposures, in time order, that covered each set of the centre rule's patchwork."""
+        return exposures_of(self.centre, self.observations)
+
+    @property
     def visits(self) -> tuple[Ints, Ints]:
         """Pairs of set and exposure of the centre rule's patchwork; see `visits_of`."""
-        return visits_of(self.centre, self.observations)
+        return _pairs(self.exposures)
+
+
+def exposures_of(patchwork: Patchwork, observations: Observations) -> Lists:
+    """List the exposures, in time order, that covered each set of a patchwork."""
+    members = patchwork.lists.table(int(observations.footprint.max(initial=0)) + 1)
+    # By exposure, then back by set: counting sorts, which keep the order of time.
+    return Lists.of_table(members.tocsc()[:, observations.footprint].tocsr())
 
 
 def visits_of(patchwork: Patchwork, observations: Observations) -> tuple[Ints, Ints]:
     """Pairs of set and exposure, sets rising and exposures in time order within each."""
-    exposures = max(len(observations), 1)
-    by_footprint = np.argsort(observations.footprint, kind="stable")
-    count = np.bincount(
-        observations.footprint, minlength=int(patchwork.members.max(initial=-1)) + 1
-    )
-    before = np.cumsum(count) - count
-    members = patchwork.members
-    row, place = expand_ranges(before[members], count[members])
-    exposure, group = by_footprint[place], patchwork.set_of_member[row]
-    order = np.argsort(group * exposures + exposure)
-    return group[order], exposure[order]
+    return _pairs(exposures_of(patchwork, observations))
+
+
+def _pairs(exposures: Lists) -> tuple[Ints, Ints]:
+    return exposures.owner.astype(np.int64), exposures.items.astype(np.int64)
 
 
 @dataclass(frozen=True, eq=False)
 class Chosen:
     """The part of a coverage that one selection sees, whatever the map.
+
+    Many sets differ by nothing that the selection sees: they are of one kind,
+    known by the list of its exposures there.
 
     Attributes
     ----------
@@ -108,14 +129,18 @@ class Chosen:
         The exposures.
     footprints : bool array, shape (footprints,)
         Their footprints.
-    covered, covered_inner, covered_outer : bool arrays
-        Sets of the three patchworks that they cover.
-    revisited : bool array, shape (sets,)
-        Sets visited often enough, the first and last visit far enough apart.
-    visit_set, visit_exposure : int64 arrays, shape (visits,)
-        Pairs of set and chosen exposure, exposures in time order within a set.
-    first_end_mjd : float64 array, shape (sets,)
-        End of the exposure that first completed each set; inf where none did.
+    covered, covered_inner, covered_outer : bool arrays, shape (sets,)
+        Which sets of each patchwork the selection covers.
+    kind : int32 array, shape (sets,)
+        Kind of each set of the centre rule's patchwork; −1 where not covered.
+    exposures : Lists
+        The chosen exposures of each kind, in time order.
+    revisited : bool array, shape (kinds,)
+        Kinds that were visited often enough, far enough apart.
+    ends_mjd : float64 array, shape (ends,)
+        Ends of exposures that completed new sky, rising.
+    first_end : int64 array, shape (kinds,)
+        Which of these completed each kind first.
     """
 
     selection: Selection
@@ -123,40 +148,37 @@ class Chosen:
     covered: Bools
     covered_inner: Bools
     covered_outer: Bools
+    kind: NDArray[np.int32]
+    exposures: Lists
     revisited: Bools
-    visit_set: Ints
-    visit_exposure: Ints
-    first_end_mjd: Floats
+    ends_mjd: Floats
+    first_end: Ints
 
     @classmethod
     def of(cls, coverage: Coverage, selection: Selection, settings: TallySettings) -> Chosen:
         """Look at a coverage through one selection."""
         footprints = coverage.footprints.of(selection.chosen)
-        group, exposure = coverage.visits
-        mine = selection.chosen[exposure]
-        group, exposure = group[mine], exposure[mine]
-        first = np.flatnonzero(np.diff(group, prepend=-1))
-        last = np.append(first, group.size)[1:] - 1
-        here = group[first]
-        start, end = coverage.observations.start_mjd, coverage.observations.end_mjd
+        exposures, kind = coverage.exposures.alike(selection.chosen)
+        o = coverage.observations
+        first, last = exposures.offsets[:-1], exposures.offsets[1:] - 1
         # A microsecond of slack: double precision resolves MJD no better.
         gap = settings.revisit_gap_minutes / 1440.0 - 1e-11
-        often = last - first + 1 >= settings.revisit_visits
-        apart = start[exposure[last]] - start[exposure[first]] >= gap
-        covered, revisited = (np.zeros(coverage.centre.sets, dtype=bool) for _ in range(2))
-        covered[here] = True
-        revisited[here] = often & apart
-        first_end = np.full(coverage.centre.sets, np.inf)
-        if first.size:
-            first_end[here] = np.minimum.reduceat(end[exposure], first)
+        often = np.diff(exposures.offsets) >= settings.revisit_visits
+        passed = o.start_mjd[exposures.items[last]] - o.start_mjd[exposures.items[first]]
+        ends, step = np.unique(exposures.reduce(np.minimum, o.end_mjd), return_inverse=True)
         return cls(
             selection,
             footprints,
-            covered,
+            kind >= 0,
             coverage.inner.covered_by(footprints),
             coverage.outer.covered_by(footprints),
-            revisited,
-            group,
-            exposure,
-            first_end,
+            kind,
+            exposures,
+            often & (passed >= gap),
+            ends,
+            step,
         )
+
+    def by_kind(self, amount: Floats) -> Floats:
+        """Sum what the sets hold, shape (sets,), over those of each kind."""
+        return sum_by(self.kind[self.covered], amount[self.covered], len(self.exposures))

@@ -13,12 +13,11 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.optimize import brentq
 
-from skytally.covered import Coverage
-from skytally.distance import density
-from skytally.grouping import sum_by
+from skytally.grouping import AnyInts, Lists, sum_by, sum_pairs
 from skytally.limits import Scene
 from skytally.magnitudes import absolute_limit, reach_mpc
-from skytally.space import Space
+from skytally.reach import Visits
+from skytally.space import Space, blocks
 from skytally.spans import Ints
 from skytally.tally import TallyRow
 
@@ -32,11 +31,10 @@ __all__ = [
     "depth_histograms",
     "distance_profile",
     "exclusion_curves",
-    "fading_plane",
+    "fading_planes",
 ]
 
 Floats = NDArray[np.float64]
-Bools = NDArray[np.bool_]
 
 MAGNITUDES = np.arange(-26.0, -7.9, 0.25)
 PEAKS = np.linspace(-20.0, -10.5, 20)
@@ -135,94 +133,117 @@ class _Deepest:
     """Probability gathered by what decides the answer: map cell and deepest limit."""
 
     space: Space
-    cell: Ints
+    cell: AnyInts
     limit: Floats
     probability: Floats
 
     @classmethod
-    def of(cls, scene: Scene, limit: Floats) -> _Deepest:
-        """Gather a scene by each place's effective limit, shape (places,), −inf for none."""
-        overlay = scene.overlay
-        limits, which = np.unique(limit, return_inverse=True)
-        known = (overlay.cell >= 0) & scene.space.known[overlay.cell]
-        known &= np.isfinite(limit)[overlay.place]
-        key = overlay.cell[known] * limits.size + which[overlay.place[known]]
-        key, group = np.unique(key, return_inverse=True)
-        held = sum_by(group, overlay.probability[known], key.size)
-        cell, rank = np.divmod(key, max(limits.size, 1))
-        return cls(scene.space, cell, limits[rank] if limits.size else np.empty(0), held)
+    def of(cls, scene: Scene, limits: _Limits, kind: AnyInts) -> _Deepest:
+        """Gather covered sky, given the kind, shape (places,), that has the limit of each place."""
+        space, overlay = scene.space, scene.overlay
+        number = np.append(limits.deepest, -1)[kind][overlay.place]
+        some = (number >= 0) & np.append(space.known, False)[overlay.cell]
+        number, cell, held = sum_pairs(
+            number[some],
+            overlay.cell[some],
+            overlay.probability[some],
+            limits.value.size,
+            space.known.size,
+        )
+        return cls(space, cell, limits.value[number], held)
 
-    def detectable(self, magnitude: float) -> float:
-        """Detectable probability of a constant absolute magnitude."""
-        reach = reach_mpc(self.limit, magnitude)
-        return float(np.sum(self.probability * self.space.within(self.cell, reach)))
+    def detectable(self, magnitude: Floats) -> Floats:
+        """Detectable probability of constant absolute magnitudes, shape (n,)."""
+        found = np.zeros(magnitude.size)
+        reach = reach_mpc(self.limit, 0.0)
+        nearer = reach_mpc(0.0, magnitude) / reach_mpc(0.0, 0.0)
+        for block in blocks(self.cell.size):
+            distances, held = self.space.distances.take(self.cell[block]), self.probability[block]
+            # Where everything is within reach nothing need be looked up.
+            sure = float(np.max(distances.sure_mpc / reach[block]))
+            found += np.where(nearer > sure, held.sum(), 0.0)
+            for number in np.flatnonzero(nearer <= sure):
+                found[number] += held @ distances.within(reach[block] * nearer[number])
+        return found
+
+    def crossing(self, share: float, curve: Floats) -> float | None:
+        """Absolute magnitude at which the curve crosses a share; None if it does not."""
+        if float(self.probability.sum()) <= share:
+            return None
+        # Distance moduli of 1e-10 and 1e9 Mpc: nothing and everything is within reach.
+        ends = self.limit.min() - 70.0, self.limit.max() + 25.0
+        magnitude = np.concatenate((ends[:1], MAGNITUDES, ends[1:]))
+        last = np.flatnonzero(np.concatenate(([True], curve > share)))[-1]
+
+        def excess(magnitude: float) -> float:
+            return float(self.detectable(np.array([magnitude]))[0]) - share
+
+        return float(brentq(excess, magnitude[last], magnitude[last + 1], xtol=1e-6))
 
 
-def _deepest_limit(scene: Scene, chosen: Bools, dimming: Floats | None = None) -> Floats:
-    """Deepest limit of each place among chosen exposures, −inf for none, shape (places,).
+@dataclass(frozen=True, eq=False)
+class _Limits:
+    """Deepest limit of lists of looks.
 
-    ``dimming``, shape (exposures,), is what the source has faded by the time of
-    each exposure.
+    ``value`` are the distinct limits, rising; ``deepest``, shape (lists,), is the
+    number of each list's deepest among them, −1 for none.
     """
-    visits = scene.visits
-    limit = visits.limit if dimming is None else visits.limit - dimming[visits.exposure]
-    use = chosen[visits.exposure] & np.isfinite(limit)
-    place, limit = visits.place[use], limit[use]
-    deepest = np.full(visits.places, -np.inf)
-    begin = np.flatnonzero(np.diff(place, prepend=-1))
-    if begin.size:
-        deepest[place[begin]] = np.maximum.reduceat(limit, begin)
-    return deepest
+
+    value: Floats
+    deepest: Ints
+
+    @classmethod
+    def of(cls, seen: Lists, limit: Floats) -> _Limits:
+        """Find them, given the limit of each look, NaN for none."""
+        stated = np.isfinite(limit)
+        number = np.full(limit.size, -1)
+        value, number[stated] = np.unique(limit[stated], return_inverse=True)
+        return cls(value, seen.reduce(np.maximum, number))
 
 
-def exclusion_curves(coverage: Coverage, scene: Scene) -> list[ExclusionCurve]:
+def exclusion_curves(scene: Scene) -> list[ExclusionCurve]:
     """Make the curve of every band, and of all bands together first."""
-    o = coverage.observations
-    chosen: list[tuple[str | None, Bools]] = [(None, np.ones(len(o), dtype=bool))]
-    chosen += [(name, o.band == index) for index, name in enumerate(o.bands)]
+    visits = scene.visits
     curves = []
-    for band, mask in chosen:
-        part = _Deepest.of(scene, _deepest_limit(scene, mask))
-        value = [part.detectable(float(m)) for m in MAGNITUDES]
-        highest = float(part.probability.sum())
+    for view in visits.by_band:
+        part = _Deepest.of(scene, _Limits.of(view.seen, visits.limit), view.kind)
+        value = part.detectable(MAGNITUDES)
         curves.append(
             ExclusionCurve(
                 scene.space.skymap.label,
-                band,
+                view.selection.band,
                 tuple(map(float, MAGNITUDES)),
-                tuple(value),
-                _crossing(part, 0.5, highest),
-                _crossing(part, 0.9, highest),
-                highest,
+                tuple(map(float, value)),
+                part.crossing(0.5, value),
+                part.crossing(0.9, value),
+                float(part.probability.sum()),
             )
         )
     return curves
 
 
-def _crossing(part: _Deepest, share: float, highest: float) -> float | None:
-    """Absolute magnitude at which the curve crosses a share; None if it does not."""
-    if highest <= share:
-        return None
-    # Distance moduli of 1e-10 and 1e9 Mpc: nothing and everything is within reach.
-    faint, bright = float(part.limit.max()) + 25.0, float(part.limit.min()) - 70.0
-    return float(brentq(lambda m: part.detectable(m) - share, bright, faint, xtol=1e-4))
+def fading_planes(visits: Visits, scenes: Sequence[Scene], event_mjd: float) -> list[FadingPlane]:
+    """Detectable probability of sources fading linearly from their magnitude at the event.
 
-
-def fading_plane(coverage: Coverage, scene: Scene, event_mjd: float) -> FadingPlane:
-    """Detectable probability of a source fading linearly from its magnitude at the event."""
-    o = coverage.observations
-    days = (o.start_mjd + o.end_mjd) / 2 - event_mjd
-    everything = np.ones(len(o), dtype=bool)
-    rows = []
-    for rate in RATES:
-        part = _Deepest.of(scene, _deepest_limit(scene, everything, float(rate) * days))
-        rows.append(tuple(part.detectable(float(peak)) for peak in PEAKS))
-    return FadingPlane(
-        scene.space.skymap.label,
-        tuple(map(float, PEAKS)),
-        tuple(map(float, RATES)),
-        tuple(rows),
-    )
+    The scenes are those of several maps under the places of the visits.
+    """
+    o = visits.observations
+    days = ((o.start_mjd + o.end_mjd) / 2 - event_mjd)[visits.exposure]
+    everywhere = np.arange(len(visits.seen))
+    planes = np.empty((len(scenes), RATES.size, PEAKS.size))
+    for row, rate in enumerate(RATES):
+        limits = _Limits.of(visits.seen, visits.limit - rate * days)
+        for plane, scene in zip(planes, scenes):
+            plane[row] = _Deepest.of(scene, limits, everywhere).detectable(PEAKS)
+    return [
+        FadingPlane(
+            scene.space.skymap.label,
+            tuple(map(float, PEAKS)),
+            tuple(map(float, RATES)),
+            tuple(tuple(map(float, row)) for row in plane),
+        )
+        for scene, plane in zip(scenes, planes)
+    ]
 
 
 def absolute_limits(rows: Sequence[TallyRow], space: Space) -> list[AbsoluteLimit]:
@@ -268,45 +289,49 @@ def distance_profile(scene: Scene, reaches: Sequence[tuple[str, Floats]]) -> Dis
     space, overlay = scene.space, scene.overlay
     mean, sd = space.moments
     nodes = np.linspace(0.0, mean + 5 * sd, _PROFILE_NODES)
-    known = np.flatnonzero(space.known)
-    inside = (overlay.cell >= 0) & space.known[overlay.cell]
-    cell, place, held = overlay.cell[inside], overlay.place[inside], overlay.probability[inside]
-    covered = sum_by(cell, held, space.probability.size)[known]
-    mu, sigma = space.mu_mpc[known], space.sigma_mpc[known]
-    rank = np.searchsorted(known, cell)
-    whole_at, covered_at = np.empty(nodes.size), np.empty(nodes.size)
-    within_at = np.empty((len(reaches), nodes.size))
-    for node, distance in enumerate(nodes):
-        per_mpc = density(distance, mu, sigma)
-        whole_at[node] = np.sum(space.probability[known] * per_mpc)
-        covered_at[node] = np.sum(covered * per_mpc)
-        for number, (_, reach) in enumerate(reaches):
-            seen = reach[place] >= distance
-            within_at[number, node] = np.sum((held * per_mpc[rank])[seen])
+    # Out to how many of the nodes each row is seen; then what each cell holds by that number.
+    everywhere = np.full(overlay.places, nodes.size)
+    parts = [everywhere, *(np.searchsorted(nodes, reach, side="right") for _, reach in reaches)]
+    cells, count = space.known.size, nodes.size + 1
+    sums = np.zeros((1 + len(parts), nodes.size))
+    for block in blocks(cells):
+        distances = space.distances.take(np.arange(cells)[block])
+        per_mpc = np.stack([distances.density(node) for node in nodes], axis=1)
+        sums[0] += space.probability[block] @ per_mpc
+        # The rows of an overlay are by cell.
+        rows = slice(*np.searchsorted(overlay.cell, (block.start, block.stop)))
+        cell, place = overlay.cell[rows] - block.start, overlay.place[rows]
+        for row, part in enumerate(parts, 1):
+            by_number = sum_by(
+                cell * count + part[place], overlay.probability[rows], per_mpc.shape[0] * count
+            )
+            beyond = np.cumsum(by_number.reshape(-1, count)[:, :0:-1], axis=1)[:, ::-1]
+            sums[row] += np.einsum("cn,cn->n", beyond, per_mpc)
+    whole, covered, *within = (tuple(map(float, row)) for row in sums)
     return DistanceProfile(
         space.skymap.label,
         tuple(map(float, nodes)),
-        tuple(map(float, whole_at)),
-        tuple(map(float, covered_at)),
+        whole,
+        covered,
         tuple(name for name, _ in reaches),
-        tuple(tuple(map(float, row)) for row in within_at),
+        tuple(within),
     )
 
 
-def depth_histograms(coverage: Coverage, scene: Scene) -> list[DepthHistogram]:
+def depth_histograms(scene: Scene) -> list[DepthHistogram]:
     """Histogram the covered probability by the deepest limit, band by band."""
-    o = coverage.observations
-    overlay = scene.overlay
-    weight = sum_by(overlay.place, overlay.probability, overlay.places)
     found = []
-    for index, band in enumerate(o.bands):
-        mask = o.band == index
-        covered = np.zeros(overlay.places, dtype=bool)
-        covered[scene.visits.place[mask[scene.visits.exposure]]] = True
-        limit = _deepest_limit(scene, mask)
-        deep = covered & np.isfinite(limit)
+    for view in scene.visits.by_band:
+        if view.selection.band is None:
+            continue
+        covered = view.kind >= 0
+        held = scene.overlay.by_place(scene.overlay.probability)[covered]
+        weight = sum_by(view.kind[covered], held, len(view.seen))
+        limits = _Limits.of(view.seen, scene.visits.limit)
+        deep = limits.deepest >= 0
         if not deep.any():
             continue
+        limit = limits.value[limits.deepest]
         low = np.floor(limit[deep].min() / _BIN_MAG)
         count = int(np.floor(limit[deep].max() / _BIN_MAG) - low) + 1
         edges = (low + np.arange(count + 1)) * _BIN_MAG
@@ -314,10 +339,10 @@ def depth_histograms(coverage: Coverage, scene: Scene) -> list[DepthHistogram]:
         found.append(
             DepthHistogram(
                 scene.space.skymap.label,
-                band,
+                view.selection.band,
                 tuple(map(float, edges)),
                 tuple(map(float, sum_by(which, weight[deep], count))),
-                float(weight[covered & ~deep].sum()),
+                float(weight[~deep].sum()),
             )
         )
     return found

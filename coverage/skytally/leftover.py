@@ -11,14 +11,18 @@ from numpy.typing import NDArray
 from skytally.campaign import LoadedCampaign
 from skytally.cosmology import Cosmology
 from skytally.covered import Coverage
-from skytally.distance import moments, moments_beyond, parameters_from_moments
+from skytally.distance import moments, parameters_from_moments
 from skytally.dust import Dust
 from skytally.grouping import expand_ranges, sum_by
-from skytally.limits import Scene, SeenSource
+from skytally.limits import Scene
+from skytally.overlay import Overlay, Places
+from skytally.patchwork import edges_of
+from skytally.reach import Visits
+from skytally.seen import DetectionCurve, SeenSource
 from skytally.skymap import DistanceLayer, SkyMap
 from skytally.sources import Source
-from skytally.space import Space
-from skytally.spans import LINE_ORDER, UNIT_SR, Ints, Spans, SpanTable
+from skytally.space import Space, blocks
+from skytally.spans import LINE_ORDER, UNIT_SR, Ints
 
 __all__ = ["LeftOver", "left_over", "left_overs"]
 
@@ -79,13 +83,8 @@ def left_over(
     fine = _refined(skymap, coverage)
     if source is None:
         return _without_covered(fine, coverage)
-    space = Space.of(fine, cosmology)
-    if space is None:
-        return None
-    scene = Scene.of(space, coverage.centre, coverage, dust, coefficients)
-    seen = SeenSource.of(source, scene, coverage, event_mjd)
-    taken, first, second = _taken(seen, np.ones(len(coverage.observations), dtype=bool))
-    return _rebuilt(fine, space, taken, first, second)
+    scene = _scene(fine, coverage, cosmology, dust, coefficients)
+    return None if scene is None else _without_seen(scene, source, event_mjd)
 
 
 def left_overs(
@@ -95,14 +94,33 @@ def left_overs(
 
     Sources are left out where the map has no distances.
     """
-    found: dict[str | None, LeftOver] = {}
-    cosmology = Cosmology.named(campaign.settings.cosmology)
-    dust = campaign.dust, campaign.extinction_coefficients
-    for source in (None, *campaign.sources):
-        left = left_over(coverage, skymap, source, campaign.event_mjd, cosmology, *dust)
-        if left is not None:
-            found[None if source is None else source.name] = left
+    fine = _refined(skymap, coverage)
+    found: dict[str | None, LeftOver] = {None: _without_covered(fine, coverage)}
+    if campaign.sources:
+        cosmology = Cosmology.named(campaign.settings.cosmology)
+        dust = campaign.dust, campaign.extinction_coefficients
+        scene = _scene(fine, coverage, cosmology, *dust)
+        if scene is not None:
+            for source in campaign.sources:
+                found[source.name] = _without_seen(scene, source, campaign.event_mjd)
     return found
+
+
+def _scene(
+    skymap: SkyMap,
+    coverage: Coverage,
+    cosmology: Cosmology,
+    dust: Dust | None,
+    coefficients: Mapping[str, float],
+) -> Scene | None:
+    """Lay a map under what was covered; None if it has no distances."""
+    space = Space.of(skymap, cosmology)
+    if space is None:
+        return None
+    edges = edges_of(skymap) if dust is None else edges_of(skymap, dust)
+    places = Places.of(coverage.centre.cut(edges), dust)
+    visits = Visits.of(coverage.centre, places, coverage.observations, coefficients)
+    return Scene.of(space, visits)
 
 
 def _refined(skymap: SkyMap, coverage: Coverage) -> SkyMap:
@@ -135,11 +153,15 @@ def _refined(skymap: SkyMap, coverage: Coverage) -> SkyMap:
 
 def _covered_length(skymap: SkyMap, coverage: Coverage) -> Ints:
     """Order-29 cells inside each map cell that are covered; (cells,)."""
-    covered = Spans.from_intervals(coverage.centre.starts, coverage.centre.stops)
-    cells = SpanTable(skymap.starts, skymap.stops, np.arange(skymap.starts.size + 1))
-    inside = cells.clip(covered)
-    before = np.concatenate(([0], np.cumsum(inside.stops - inside.starts)))
-    return np.asarray(np.diff(before[inside.offsets]), dtype=np.int64)
+    starts, stops = coverage.centre.starts, coverage.centre.stops
+    before = np.concatenate(([0], np.cumsum(stops - starts)))
+
+    def until(position: Ints) -> Ints:
+        patch = np.searchsorted(starts, position, side="right")
+        left = np.append(0, stops)[patch] - position
+        return np.asarray(before[patch] - np.maximum(left, 0))
+
+    return until(skymap.stops) - until(skymap.starts)
 
 
 def _without_covered(skymap: SkyMap, coverage: Coverage) -> LeftOver:
@@ -147,31 +169,46 @@ def _without_covered(skymap: SkyMap, coverage: Coverage) -> LeftOver:
     return _normalised(skymap, skymap.density_per_sr * share, skymap.distance)
 
 
-def _taken(seen: SeenSource, chosen: NDArray[np.bool_]) -> tuple[Floats, Floats, Floats]:
-    """Integrals of p, r p and r² p over what would have been seen, summed per cell."""
-    overlay = seen.scene.overlay
-    space = seen.scene.space
-    sums = np.zeros((3, space.probability.size))
-    for place, nodes, share in seen.shares(chosen):
-        position, row = seen.scene.rows_of(place)
-        known = (overlay.cell[row] >= 0) & space.known[overlay.cell[row]]
-        position, row = position[known], row[known]
-        cell = overlay.cell[row]
-        mu, sigma = space.mu_mpc[cell], space.sigma_mpc[cell]
-        before = np.array(moments_beyond(0.0, mu, sigma))
-        for node in range(nodes.shape[1]):
-            after = np.array(moments_beyond(nodes[position, node], mu, sigma))
-            part = (before - after) * share[position, node] * overlay.probability[row]
-            for power in range(3):
-                sums[power] += sum_by(cell, part[power], space.probability.size)
+def _without_seen(scene: Scene, source: Source, event_mjd: float) -> LeftOver:
+    seen = SeenSource.of(source, scene.visits, event_mjd, scene.space.cosmology)
+    overlay = scene.overlay.joined(np.arange(scene.overlay.places), scene.overlay.places)
+    taken = _taken_by_reach if seen.is_step else _taken_by_curve
+    rows = taken(scene.space, overlay, seen) * overlay.probability
+    cells = scene.space.known.size + 1
+    return _rebuilt(scene.space, *(sum_by(overlay.cell + 1, part, cells)[1:] for part in rows))
+
+
+def _taken_by_reach(space: Space, overlay: Overlay, seen: SeenSource) -> Floats:
+    """Integrals of p, r p and r² p out to the reach of each row of the overlay; (3, rows)."""
+    reach = seen.reach_at(seen.visits.seen)[overlay.place]
+    taken = np.zeros((3, reach.size))
+    for block in blocks(reach.size):
+        distances = space.distances.take(overlay.cell[block])
+        taken[:, block] = distances.moments_beyond(np.zeros(1))
+        taken[:, block] -= distances.moments_beyond(reach[block])
+    return taken
+
+
+def _taken_by_curve(space: Space, overlay: Overlay, seen: SeenSource) -> Floats:
+    """The same over a detection curve."""
+    curve = DetectionCurve(seen, space, overlay.cells())
+    taken = np.zeros((3, overlay.cell.size))
+    for some in curve.blocks(seen.visits.seen):
+        share = curve.shares(seen.visits.seen.part(some))
+        rows = slice(*np.searchsorted(overlay.place, (some.start, some.stop)))
+        distances = space.distances.take(overlay.cell[rows])
+        place = overlay.place[rows] - some.start
+        before = distances.moments_beyond(np.zeros(1))
+        for number, node in enumerate(curve.nodes):
+            after = distances.moments_beyond(node)
+            taken[:, rows] += (before - after) * share[place, number]
             before = after
-    return sums[0], sums[1], sums[2]
+    return taken
 
 
-def _rebuilt(
-    skymap: SkyMap, space: Space, taken: Floats, first: Floats, second: Floats
-) -> LeftOver:
+def _rebuilt(space: Space, taken: Floats, first: Floats, second: Floats) -> LeftOver:
     """Take the seen part from each cell and refit its distance to the moments that are left."""
+    skymap = space.skymap
     layer = skymap.distance
     assert layer is not None  # the space was made from it
     held = space.probability

@@ -12,90 +12,125 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.sparse import csr_array
 
 from skytally.dust import Dust
-from skytally.grouping import expand_ranges, sum_by
-from skytally.patchwork import Patchwork
+from skytally.grouping import AnyInts, sum_by, sum_pairs, tell_apart
+from skytally.patchwork import CutPatchwork
 from skytally.skymap import SkyMap
-from skytally.spans import UNIT_SR, Ints
+from skytally.spans import Ints
 
-__all__ = ["Overlay"]
+__all__ = ["Overlay", "Places"]
 
 Floats = NDArray[np.float64]
 
 
 @dataclass(frozen=True, eq=False)
-class Overlay:
-    """Covered sky by place and map cell; a place is a set of footprints behind one dust cell.
+class Places:
+    """Places of covered sky: each is one set of footprints behind one cell of the dust.
 
     Attributes
     ----------
-    place, cell : int64 arrays, shape (rows,)
-        Place, and cell of the map (−1 where the map has none), sorted.
-    probability, solid_angle_sr : float64 arrays, shape (rows,)
-        What the row holds.
+    cut : CutPatchwork
+        Cut at the edges of the dust, and of the maps that are to be laid over it.
+    place : int64 array, shape (rows,)
+        Place of each row of the cut patchwork.
     place_set : int64 array, shape (places,)
         Set of the patchwork of each place, not decreasing.
+    place_cloud : int64 array, shape (places,)
+        Cell of the dust map in front; −1 for none.
     place_ebv : float64 array, shape (places,)
-        E(B−V) in magnitudes, NaN without a dust map.
+        E(B−V) in magnitudes, NaN without a dust map or in a hole of it.
     """
 
+    cut: CutPatchwork
     place: Ints
-    cell: Ints
-    probability: Floats
-    solid_angle_sr: Floats
     place_set: Ints
+    place_cloud: Ints
     place_ebv: Floats
 
     @classmethod
-    def build(cls, patchwork: Patchwork, skymap: SkyMap, dust: Dust | None) -> Overlay:
-        """Lay a patchwork over a map and, if there is one, a dust map."""
-        cuts = [skymap.starts, skymap.stops]
-        if dust is not None:
-            cuts += [dust.starts, dust.stops]
-        starts, stops, group = _cut(patchwork, np.unique(np.concatenate(cuts)))
-        cell = _cell_at(skymap.starts, skymap.stops, starts)
-        behind = np.zeros(starts.size, dtype=np.int64)
-        if dust is not None:
-            behind = _cell_at(dust.starts, dust.stops, starts) + 1
-        clouds = int(behind.max(initial=0)) + 1
-        place_key, place = np.unique(group * clouds + behind, return_inverse=True)
-        cells = skymap.starts.size + 1
-        row_key, row = np.unique(place * cells + cell + 1, return_inverse=True)
-        solid = sum_by(row, (stops - starts).astype(np.float64) * UNIT_SR, row_key.size)
-        row_place, row_cell = np.divmod(row_key, cells)
-        row_cell -= 1
-        density = np.where(row_cell >= 0, skymap.density_per_sr[row_cell], 0.0)
-        place_set, place_behind = np.divmod(place_key, clouds)
-        ebv = np.full(place_set.size, np.nan)
-        if dust is not None:
-            ebv = np.where(place_behind > 0, dust.ebv[place_behind - 1], np.nan)
-        return cls(row_place, row_cell, density * solid, solid, place_set, ebv)
+    def of(cls, cut: CutPatchwork, dust: Dust | None) -> Places:
+        """Tell the places of a patchwork apart."""
+        if dust is None:
+            none = np.full(cut.sets, -1)
+            return cls(cut, cut.group, np.arange(cut.sets), none, np.full(cut.sets, np.nan))
+        cloud = cut.span_of(dust)[cut.interval]
+        clouds = dust.starts.size + 1
+        first, place = tell_apart((cut.group * clouds + cloud + 1).astype(np.uint64))
+        front = cloud[first]
+        return cls(cut, place, cut.group[first], front, np.append(dust.ebv, np.nan)[front])
 
-    @property
-    def places(self) -> int:
-        """Number of places."""
+    def __len__(self) -> int:
         return self.place_set.size
 
-
-def _cut(patchwork: Patchwork, edges: Ints) -> tuple[Ints, Ints, Ints]:
-    """Cut patches at edges; return starts, stops and set of the pieces."""
-    first = np.searchsorted(edges, patchwork.starts, side="right")
-    last = np.searchsorted(edges, patchwork.stops, side="left")
-    row, position = expand_ranges(first - 1, last - first + 1)
-    if row.size == 0:
-        return patchwork.starts, patchwork.stops, patchwork.group
-    begin = np.flatnonzero(np.diff(row, prepend=-1))
-    starts = edges[np.maximum(position, 0)]
-    starts[begin] = patchwork.starts[row[begin]]
-    stops = np.append(starts[1:], 0)
-    end = np.append(begin[1:], row.size) - 1
-    stops[end] = patchwork.stops[row[end]]
-    return starts, stops, patchwork.group[row]
+    def over(self, skymap: SkyMap) -> Overlay:
+        """Lay the places over a map at whose edges, too, the patchwork was cut."""
+        cells = skymap.starts.size + 1
+        cell = self.cut.span_of(skymap)[self.cut.interval] + 1
+        solid = self.cut.solid_angle_sr
+        cell, place, solid = sum_pairs(cell, self.place, solid, cells, len(self))
+        return Overlay.of(skymap, place, cell - 1, solid, len(self))
 
 
-def _cell_at(starts: Ints, stops: Ints, position: Ints) -> Ints:
-    """Cell that holds each position, −1 for none."""
-    cell = np.searchsorted(starts, position, side="right") - 1
-    inside = (cell >= 0) & (position < stops[np.maximum(cell, 0)])
-    return np.where(inside, cell, -1)
+@dataclass(frozen=True, eq=False)
+class Overlay:
+    """Covered sky by place and map cell.
+
+    Attributes
+    ----------
+    skymap : SkyMap
+        The map.
+    place, cell : int arrays, shape (rows,)
+        Place, and cell of the map (−1 where the map has none), each pair once.
+    probability, solid_angle_sr : float64 arrays, shape (rows,)
+        What the row holds.
+    places : int
+        Number of places.
+    """
+
+    skymap: SkyMap
+    place: AnyInts
+    cell: AnyInts
+    probability: Floats
+    solid_angle_sr: Floats
+    places: int
+
+    @classmethod
+    def of(
+        cls, skymap: SkyMap, place: AnyInts, cell: AnyInts, solid_angle_sr: Floats, places: int
+    ) -> Overlay:
+        """Find what each row holds."""
+        density = np.append(skymap.density_per_sr, 0.0)
+        return cls(skymap, place, cell, density[cell] * solid_angle_sr, solid_angle_sr, places)
+
+    def joined(self, number: AnyInts, count: int) -> Overlay:
+        """Join places: ``number``, shape (places,), is the new place of each, −1 for none.
+
+        Rows are by place, then cell, if they were by cell, as `Places.over` gives them.
+        """
+        place = number[self.place]
+        some = place >= 0
+        cells = self.skymap.starts.size + 1
+        place, cell, solid = sum_pairs(
+            place[some], self.cell[some] + 1, self.solid_angle_sr[some], count, cells
+        )
+        return Overlay.of(self.skymap, place, cell - 1, solid, count)
+
+    def by_place(self, amount: Floats) -> Floats:
+        """Sum amounts, shape (rows,), over each place."""
+        return sum_by(self.place, amount, self.places)
+
+    def cells(self) -> Ints:
+        """Cells of the map that are covered, rising; −1 first where some lie off the map."""
+        covered = np.zeros(self.skymap.starts.size + 1, dtype=bool)
+        covered[self.cell + 1] = True
+        return np.flatnonzero(covered) - 1
+
+    def table(self, cells: Ints) -> csr_array:
+        """Probability as a sparse table, shape (places, cells), rows being by place."""
+        column = np.empty(self.skymap.starts.size + 1, dtype=np.int32)
+        column[cells] = np.arange(cells.size)
+        offsets = np.searchsorted(self.place, np.arange(self.places + 1))
+        shape = self.places, cells.size
+        return csr_array((self.probability, column[self.cell], offsets), shape=shape)

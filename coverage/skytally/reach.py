@@ -10,74 +10,126 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
 
 from skytally.cosmology import Cosmology
-from skytally.covered import visits_of
-from skytally.grouping import expand_ranges
+from skytally.covered import exposures_of
+from skytally.grouping import Lists
 from skytally.magnitudes import extinction_coefficient, reach_mpc
 from skytally.observations import SECONDS_PER_DAY, Observations
-from skytally.overlay import Overlay
+from skytally.overlay import Places
 from skytally.patchwork import Patchwork
+from skytally.selection import Selection, selections
 from skytally.sources import Source
 from skytally.spans import Ints
 
 __all__ = [
+    "View",
     "Visits",
     "absolute_magnitudes",
-    "deciding_visits",
-    "order_by_reach",
+    "deciding_looks",
+    "reach_of_looks",
     "seen_share",
-    "visit_reach",
 ]
 
 Floats = NDArray[np.float64]
 
 # Times are compared in whole milliseconds; rounding moves a difference by up to one.
 _SLACK_MS = 1
+_VISITS_AT_ONCE = 1_000_000
+
+
+@dataclass(frozen=True, eq=False)
+class View:
+    """What one selection sees of the places; many are alike to it, and are of one kind.
+
+    Attributes
+    ----------
+    selection : Selection
+        The exposures.
+    seen : Lists
+        The looks of each kind of place, in time order.
+    kind : int32 array, shape (places,)
+        Kind of each place; −1 where the selection did not look.
+    """
+
+    selection: Selection
+    seen: Lists
+    kind: NDArray[np.int32]
 
 
 @dataclass(frozen=True, eq=False)
 class Visits:
     """Which exposures looked at each place, and how deep.
 
+    A look is an exposure behind one cell of the dust: it has one limit.
+
     Attributes
     ----------
-    place, exposure : int64 arrays, shape (visits,)
-        Pairs, places rising and exposures in time order within each.
-    limit : float64 array, shape (visits,)
+    observations : Observations
+        The exposures.
+    places : Places
+        The places.
+    seen : Lists
+        The looks at each place, in time order.
+    exposure : int64 array, shape (looks,)
+        Exposure of each look.
+    limit : float64 array, shape (looks,)
         Limiting magnitude less Galactic extinction where that is known; NaN
         where the exposure states none.
-    places : int
-        Number of places.
     """
 
-    place: Ints
+    observations: Observations
+    places: Places
+    seen: Lists
     exposure: Ints
     limit: Floats
-    places: int
 
     @classmethod
     def of(
         cls,
         patchwork: Patchwork,
-        overlay: Overlay,
+        places: Places,
         observations: Observations,
         coefficients: Mapping[str, float],
     ) -> Visits:
-        """List the visits of an overlay's places."""
-        group, exposure = visits_of(patchwork, observations)
-        count = np.bincount(group, minlength=patchwork.sets)
-        first = np.cumsum(count) - count
-        place, row = expand_ranges(first[overlay.place_set], count[overlay.place_set])
-        exposure = exposure[row]
-        dust = _coefficients(observations, coefficients)[exposure] * overlay.place_ebv[place]
+        """List the visits of a patchwork's places."""
+        count = max(len(observations), 1)
+        table = exposures_of(patchwork, observations).table(count)[places.place_set]
+        clouds, front = np.unique(places.place_cloud, return_inverse=True)
+        cloud = np.repeat(front, np.diff(table.indptr))
+        looks = Lists.of_pairs(cloud, table.indices, clouds.size, count)
+        number = looks.owner.astype(np.int64) * count + looks.items
+        seen = np.searchsorted(number, cloud * count + table.indices).astype(np.int32)
+        ebv = np.full(clouds.size, np.nan)
+        ebv[front] = places.place_ebv
+        exposure = looks.items.astype(np.int64)
+        dust = _coefficients(observations, coefficients)[exposure] * ebv[looks.owner]
         stated = observations.extinction[exposure]
         extinction = np.where(np.isfinite(stated), stated, dust)
         limit = observations.depth[exposure] - np.where(np.isfinite(extinction), extinction, 0.0)
-        return cls(place, exposure, limit, overlay.places)
+        lists = Lists(table.indptr.astype(np.int64), seen)
+        return cls(observations, places, lists, exposure, limit)
+
+    @cached_property
+    def views(self) -> tuple[View, ...]:
+        """What every selection sees of the places, in the order of the rows."""
+        return tuple(
+            View(selection, *self.seen.alike(selection.chosen[self.exposure]))
+            for selection in selections(self.observations)
+        )
+
+    @property
+    def by_band(self) -> tuple[View, ...]:
+        """What all exposures see of the places, then what those of each band do."""
+        return tuple(
+            view
+            for view in self.views
+            if view.selection.telescope is None and view.selection.night is None
+        )
 
 
 def _coefficients(observations: Observations, own: Mapping[str, float]) -> Floats:
@@ -96,8 +148,10 @@ def absolute_magnitudes(source: Source, observations: Observations, event_mjd: f
     return magnitude
 
 
-def visit_reach(visits: Visits, source: Source, magnitude: Floats, cosmology: Cosmology) -> Floats:
-    """Reach of each visit in Mpc; 0 where the source is unseen, (visits,).
+def reach_of_looks(
+    visits: Visits, source: Source, magnitude: Floats, cosmology: Cosmology
+) -> Floats:
+    """Reach of each look in Mpc; 0 where the source is unseen, (looks,).
 
     Where detection is gradual, it is how far the efficiency is at least half
     the plateau's. ``magnitude`` is absolute, shape (exposures,).
@@ -112,22 +166,17 @@ def visit_reach(visits: Visits, source: Source, magnitude: Floats, cosmology: Co
     return reach
 
 
-def order_by_reach(place: Ints, reach: Floats) -> Ints:
-    """Order of the visits: places rising, reach falling within each."""
-    return np.lexsort((-reach, place))
-
-
-def deciding_visits(
-    place: Ints, start_mjd: Floats, visits: int, gap_minutes: float
-) -> tuple[Ints, Ints]:
-    """Find where, along falling reach, each place has been seen often enough.
+def deciding_looks(
+    seen: Lists, reach_mpc: Floats, start_mjd: Floats, visits: int, gap_minutes: float
+) -> Ints:
+    """Find the look at which, along falling reach, a source has been seen often enough.
 
     Parameters
     ----------
-    place : int64 array, shape (n,)
-        Place of each visit, rising; reach falls within each place.
-    start_mjd : float64 array, shape (n,)
-        Start of each visit.
+    seen : Lists
+        Looks at each place.
+    reach_mpc, start_mjd : float64 arrays, shape (looks,)
+        Reach and start of each look; a reach of 0 is none.
     visits : int
         In how many exposures the source must be.
     gap_minutes : float
@@ -135,31 +184,49 @@ def deciding_visits(
 
     Returns
     -------
-    place, visit : int64 arrays
-        The places where the condition is met, and the row that meets it.
+    int64 array, shape (places,)
+        The look at each place; −1 where the source would not have been seen.
     """
-    if place.size == 0:
-        return place, place
-    begin = np.flatnonzero(np.diff(place, prepend=-1))
-    rank = np.arange(place.size) - np.repeat(begin, np.diff(np.append(begin, place.size)))
-    enough = rank + 1 >= visits
-    if visits > 1 and gap_minutes > 0:
-        # Milliseconds as integers below a place's own offset: a running maximum
-        # along the whole array then starts anew at every place.
-        moment = _milliseconds(start_mjd)
-        width = moment.max() + 1
-        offset = np.cumsum(rank == 0).astype(np.int64) * width
+    order = np.argsort(-reach_mpc, kind="stable")
+    rank = np.empty_like(order)
+    rank[order] = np.arange(order.size)
+    if visits == 1:
+        found = seen.reduce(np.minimum, rank)
+    else:
+        moment, gap = _milliseconds(start_mjd[order]), _gap_ms(gap_minutes)
+        parts = map(seen.part, seen.blocks(_VISITS_AT_ONCE))
+        found = np.concatenate(
+            [rank[:0], *(_deciding_ranks(part, rank, moment, visits, gap) for part in parts)]
+        )
+    look = np.append(order, -1)[found]
+    return np.where(np.append(reach_mpc, 0.0)[look] > 0, look, -1)
+
+
+def _deciding_ranks(seen: Lists, rank: Ints, moment: Ints, visits: int, gap_ms: int) -> Ints:
+    """Rank at which each list of looks is enough, −1 for none; ``moment`` is by rank, in ms."""
+    place = seen.owner.astype(np.int64)
+    line = np.sort(place * rank.size + rank[seen.items]) - place * rank.size
+    number = np.arange(place.size) - seen.offsets[place]
+    enough = number + 1 >= visits
+    if gap_ms > 0:
+        # A running maximum along all the lists starts anew at every place, for
+        # each place lies above the ones before.
+        moment = moment[line]
+        width = int(moment.max(initial=0)) + 1
+        offset = place * width
         latest = np.maximum.accumulate(moment + offset) - offset
         earliest = width - 1 - (np.maximum.accumulate(width - 1 - moment + offset) - offset)
-        enough &= latest - earliest >= _gap_ms(gap_minutes)
+        enough &= latest - earliest >= gap_ms
     row = np.flatnonzero(enough)
-    first = row[np.flatnonzero(np.diff(place[row], prepend=-1))]
-    return place[first], first
+    row = row[np.flatnonzero(np.diff(place[row], prepend=-1))]
+    found = np.full(len(seen), -1)
+    found[place[row]] = line[row]
+    return found
 
 
 def _milliseconds(start_mjd: Floats) -> Ints:
     """Starts after the first of them."""
-    passed = (start_mjd - start_mjd.min()) * SECONDS_PER_DAY * 1000
+    passed = (start_mjd - start_mjd.min(initial=np.inf)) * SECONDS_PER_DAY * 1000
     return np.asarray(np.round(passed), dtype=np.int64)
 
 
@@ -168,18 +235,18 @@ def _gap_ms(gap_minutes: float) -> int:
 
 
 def seen_share(
-    place: Ints, start_mjd: Floats, efficiency: Floats, visits: int, gap_minutes: float
-) -> tuple[Ints, Floats]:
+    seen: Lists, start_mjd: Floats, efficiency: Floats, visits: int, gap_minutes: float
+) -> Floats:
     """Probability of seeing a source often enough, exposures being independent.
 
     Parameters
     ----------
-    place : int64 array, shape (n,)
-        Place of each visit, rising; visits in time order within each.
-    start_mjd : float64 array, shape (n,)
-        Start of each visit.
-    efficiency : float64 array, shape (n, nodes)
-        Probability of detection in each visit, at each node of distance.
+    seen : Lists
+        Looks at each place, in time order.
+    start_mjd : float64 array, shape (looks,)
+        Start of each look.
+    efficiency : float64 array, shape (looks, nodes)
+        Probability of detection in each look, at each node of distance.
     visits : int
         In how many exposures the source must be.
     gap_minutes : float
@@ -187,26 +254,24 @@ def seen_share(
 
     Returns
     -------
-    place : int64 array, shape (m,)
-        The places in ``place``.
-    share : float64 array, shape (m, nodes)
+    float64 array, shape (places, nodes)
         For one visit 1 − Π(1 − ε). For more, summed over the visit i of the
         first detection: enough others after i, less those cases where all of
         them fall within the gap.
     """
-    begin = np.flatnonzero(np.diff(place, prepend=-1))
     efficiency = np.minimum(efficiency, 1 - 1e-15)
     missed = np.log1p(-efficiency)
     if visits == 1:
-        return place[begin], -np.expm1(np.add.reduceat(missed, begin, axis=0))
-    segment = np.repeat(np.arange(begin.size), np.diff(begin, append=place.size))
+        return -np.expm1(seen.sums(missed))
+    segment, begin = seen.owner.astype(np.int64), seen.offsets[:-1]
+    efficiency, missed = efficiency[seen.items], missed[seen.items]
     running = np.concatenate((np.zeros((1, missed.shape[1])), np.cumsum(missed, axis=0)))
-    moment, gap = _milliseconds(start_mjd), _gap_ms(gap_minutes)
-    line = segment * (moment.max() + gap + 2) + moment
+    moment, gap = _milliseconds(start_mjd)[seen.items], _gap_ms(gap_minutes)
+    line = segment * (int(moment.max(initial=0)) + gap + 2) + moment
+    after = np.arange(segment.size) + 1
     # With no gap asked for, any later visit will do.
-    later = np.maximum(np.searchsorted(line, line + gap, side="left"), np.arange(place.size) + 1)
-    after = np.arange(place.size) + 1
-    end = np.append(begin[1:], place.size)[segment]
+    later = np.maximum(np.searchsorted(line, line + gap, side="left"), after)
+    end = seen.offsets[1:][segment]
 
     def fewer(last: Ints) -> Floats:
         if visits == 2:
@@ -216,7 +281,7 @@ def seen_share(
     before = np.exp(running[:-1] - running[begin][segment])
     none_later = np.exp(running[end] - running[later])
     enough = 1 - fewer(end) - (1 - fewer(later)) * none_later
-    return place[begin], np.add.reduceat(efficiency * before * enough, begin, axis=0)
+    return np.asarray(np.add.reduceat(efficiency * before * enough, begin, axis=0))
 
 
 def _fewer(efficiency: Floats, first: Ints, last: Ints, count: int) -> Floats:

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from skytally.covered import Chosen, Coverage, TallySettings
-from skytally.depth import depth_numbers, extinction_state
+from skytally.depth import Depth, extinction_state
 from skytally.grouping import sum_by
 from skytally.selection import selections
 from skytally.skymap import Measure, SkyMap
@@ -145,20 +145,22 @@ class SetWorth:
 
     @classmethod
     def of(cls, coverage: Coverage, skymap: SkyMap, space: Space | None) -> SetWorth:
+        """Sum a map over the sets."""
         raster, whole = coverage.footprints.raster, skymap.probability
         strip = whole.of_table(raster.outer) - whole.of_table(raster.inner)
         volumes = None if space is None else space.credible_densities()
+        centre, inner, outer = coverage.cuts([skymap])
         return cls(
-            coverage.centre.measure(whole),
-            coverage.centre.measure(skymap.restricted(0.5)),
-            coverage.centre.measure(skymap.restricted(0.9)),
-            coverage.centre.measure(Measure.area(skymap.credible_region(0.5))),
-            coverage.centre.measure(Measure.area(skymap.credible_region(0.9))),
-            coverage.inner.measure(whole),
-            coverage.outer.measure(whole),
+            centre.measure(whole),
+            centre.measure(skymap.restricted(0.5)),
+            centre.measure(skymap.restricted(0.9)),
+            centre.measure(Measure.area(skymap.credible_region(0.5))),
+            centre.measure(Measure.area(skymap.credible_region(0.9))),
+            inner.measure(whole),
+            outer.measure(whole),
             np.maximum(strip, 0.0),
-            None if volumes is None else coverage.centre.measure(volumes[0]),
-            None if volumes is None else coverage.centre.measure(volumes[1]),
+            None if volumes is None else centre.measure(volumes[0]),
+            None if volumes is None else centre.measure(volumes[1]),
         )
 
 
@@ -174,61 +176,130 @@ def tally_maps(
     ``witness`` is shown what the sets are worth on each map, which is costly to
     find twice and large to keep.
     """
-    chosen = [Chosen.of(coverage, s, settings) for s in selections(coverage.observations)]
+    coverage.cuts([skymap for skymap, _ in maps])  # once for all
+    parts = _Part.every(coverage, settings)
     rows, timelines = [], []
     for skymap, space in maps:
         sets = SetWorth.of(coverage, skymap, space)
         if witness is not None:
             witness(sets)
-        shares: dict[int, _Shares] = {}
-        for part in chosen:
-            peers = part.selection.peers
-            if id(peers) not in shares:
-                shares[id(peers)] = _Shares.of(coverage, peers, sets.probability)
-            rows.append(_row(coverage, part, skymap.label, sets, shares[id(peers)]))
-            timelines.append(_timeline(coverage, part, skymap.label, sets, settings.event_mjd))
+        for part in parts:
+            rows.append(part.row(skymap.label, sets))
+            timelines.append(part.timeline(skymap.label, sets))
     return rows, timelines
 
 
-def _row(coverage: Coverage, part: Chosen, label: str, sets: SetWorth, share: _Shares) -> TallyRow:
-    """Sum what a map gives each set over the sets that a selection covers."""
-    selection, o = part.selection, coverage.observations
-    covered = part.covered
-    extinction, extinction_median = extinction_state(coverage, part)
-    low = float(sets.inner[part.covered_inner].sum())
-    high = float(sets.outer[part.covered_outer].sum())
+@dataclass(frozen=True, eq=False)
+class _Part:
+    """A selection's part of a coverage, and what its rows have in common, whatever the map.
 
-    def deg2(area_sr: Floats, where: Bools) -> float:
-        return float(area_sr[where].sum() * DEG2_PER_SR)
+    Attributes
+    ----------
+    coverage : Coverage
+        All of it.
+    chosen : Chosen
+        The selection's.
+    sharing : int64 array, shape (sets,)
+        How many of the selection's peers cover each set.
+    depth : Depth
+        Its limits.
+    end, hours : tuples of str and of float
+        The ends in ``chosen`` as times, and in hours since the event.
+    """
 
-    return TallyRow(
-        map=label,
-        telescope=selection.telescope,
-        band=selection.band,
-        night=selection.night,
-        exposures=int(selection.chosen.sum()),
-        area_deg2=deg2(coverage.centre.area_sr, covered),
-        area_low_deg2=deg2(coverage.inner.area_sr, part.covered_inner),
-        area_high_deg2=deg2(coverage.outer.area_sr, part.covered_outer),
-        area_in_50_deg2=deg2(sets.area_50_sr, covered),
-        area_in_90_deg2=deg2(sets.area_90_sr, covered),
-        probability=float(sets.probability[covered].sum()),
-        probability_low=low,
-        probability_high=high,
-        probability_error=_centre_rule_error(coverage, sets.strip, part.footprints, high - low),
-        probability_in_50=float(sets.probability_50[covered].sum()),
-        probability_in_90=float(sets.probability_90[covered].sum()),
-        probability_unique=share.unique.get(selection.peer, 0.0),
-        probability_credit=share.credit.get(selection.peer, 0.0),
-        probability_revisited=float(sets.probability[part.revisited].sum()),
-        **depth_numbers(coverage, part, sets.probability),
-        volume_90_covered_mpc3=_volume(sets.volume_90, covered),
-        first_start=_iso(o.start_mjd[selection.chosen].min(initial=np.inf)),
-        last_end=_iso(o.end_mjd[selection.chosen].max(initial=-np.inf)),
-        extinction=extinction,
-        extinction_median=extinction_median,
-        volume_90_covered_comoving_mpc3=_volume(sets.volume_90_comoving, covered),
-    )
+    coverage: Coverage
+    chosen: Chosen
+    sharing: Ints
+    depth: Depth
+    end: tuple[str, ...]
+    hours: tuple[float, ...]
+
+    @classmethod
+    def every(cls, coverage: Coverage, settings: TallySettings) -> list[_Part]:
+        """Look at a coverage through every selection."""
+        parts: list[_Part] = []
+        sharing: dict[int, Ints] = {}
+        for selection in selections(coverage.observations):
+            chosen = Chosen.of(coverage, selection, settings)
+            # Peers have one array in common.
+            count = sharing.setdefault(
+                id(selection.peers), np.zeros(coverage.centre.sets, dtype=np.int64)
+            )
+            count += chosen.covered
+            ends = [float(end) for end in chosen.ends_mjd]
+            parts.append(
+                cls(
+                    coverage,
+                    chosen,
+                    count,
+                    Depth.of(coverage, chosen),
+                    tuple(map(mjd_to_iso, ends)),
+                    tuple(hours_since(end, settings.event_mjd) for end in ends),
+                )
+            )
+        return parts
+
+    def row(self, label: str, sets: SetWorth) -> TallyRow:
+        """Sum what a map gives each set over the sets that the selection covers."""
+        coverage, part = self.coverage, self.chosen
+        selection, o = part.selection, coverage.observations
+        covered = part.covered
+        extinction, extinction_median = extinction_state(coverage, part)
+        low = float(sets.inner[part.covered_inner].sum())
+        high = float(sets.outer[part.covered_outer].sum())
+        by_kind = part.by_kind(sets.probability)
+        alone = covered & (self.sharing == 1)
+
+        def deg2(area_sr: Floats, where: Bools) -> float:
+            return float(area_sr[where].sum() * DEG2_PER_SR)
+
+        return TallyRow(
+            map=label,
+            telescope=selection.telescope,
+            band=selection.band,
+            night=selection.night,
+            exposures=int(selection.chosen.sum()),
+            area_deg2=deg2(coverage.centre.area_sr, covered),
+            area_low_deg2=deg2(coverage.inner.area_sr, part.covered_inner),
+            area_high_deg2=deg2(coverage.outer.area_sr, part.covered_outer),
+            area_in_50_deg2=deg2(sets.area_50_sr, covered),
+            area_in_90_deg2=deg2(sets.area_90_sr, covered),
+            probability=float(by_kind.sum()),
+            probability_low=low,
+            probability_high=high,
+            probability_error=_centre_rule_error(coverage, sets.strip, part.footprints, high - low),
+            probability_in_50=float(sets.probability_50[covered].sum()),
+            probability_in_90=float(sets.probability_90[covered].sum()),
+            probability_unique=float(sets.probability[alone].sum()),
+            probability_credit=float((sets.probability[covered] / self.sharing[covered]).sum()),
+            probability_revisited=float(by_kind[part.revisited].sum()),
+            **self.depth.numbers(by_kind),
+            volume_90_covered_mpc3=_volume(sets.volume_90, covered),
+            first_start=_iso(o.start_mjd[selection.chosen].min(initial=np.inf)),
+            last_end=_iso(o.end_mjd[selection.chosen].max(initial=-np.inf)),
+            extinction=extinction,
+            extinction_median=extinction_median,
+            volume_90_covered_comoving_mpc3=_volume(sets.volume_90_comoving, covered),
+        )
+
+    def timeline(self, label: str, sets: SetWorth) -> Timeline:
+        """Cumulate what was first completed at each exposure end."""
+        part, selection = self.chosen, self.chosen.selection
+
+        def cumulated(amount: Floats) -> tuple[float, ...]:
+            found = np.cumsum(sum_by(part.first_end, part.by_kind(amount), len(self.end)))
+            return tuple(map(float, found))
+
+        return Timeline(
+            label,
+            selection.telescope,
+            selection.band,
+            selection.night,
+            self.end,
+            self.hours,
+            cumulated(sets.probability),
+            cumulated(self.coverage.centre.area_sr * DEG2_PER_SR),
+        )
 
 
 def _volume(volume: Floats | None, covered: Bools) -> float | None:
@@ -237,28 +308,6 @@ def _volume(volume: Floats | None, covered: Bools) -> float | None:
 
 def _iso(mjd: float) -> str | None:
     return mjd_to_iso(float(mjd)) if np.isfinite(mjd) else None
-
-
-@dataclass(frozen=True)
-class _Shares:
-    """Probability that each peer covered alone, and its equal share of what several did."""
-
-    unique: dict[int, float]
-    credit: dict[int, float]
-
-    @classmethod
-    def of(cls, coverage: Coverage, peers: Ints, probability: Floats) -> _Shares:
-        group, exposure = coverage.visits
-        if group.size == 0:
-            return cls({}, {})
-        width = int(peers.max()) + 1
-        pair = np.unique(group * width + peers[exposure])
-        group, peer = np.divmod(pair, width)
-        sharing = np.bincount(group, minlength=coverage.centre.sets)[group]
-        credit = np.bincount(peer, probability[group] / sharing, width)
-        unique = np.bincount(peer, np.where(sharing == 1, probability[group], 0.0), width)
-        numbers = [int(p) for p in np.unique(peer)]
-        return cls({p: float(unique[p]) for p in numbers}, {p: float(credit[p]) for p in numbers})
 
 
 def _centre_rule_error(coverage: Coverage, strip: Floats, footprints: Bools, width: float) -> float:
@@ -278,26 +327,6 @@ def _centre_rule_error(coverage: Coverage, strip: Floats, footprints: Bools, wid
     return min(2 * spread * min(width / total, 1.0), width) if width > 0 else 0.0
 
 
-def _timeline(
-    coverage: Coverage, part: Chosen, label: str, sets: SetWorth, event_mjd: float
-) -> Timeline:
-    """Cumulate what was first completed at each exposure end."""
-    covered = np.flatnonzero(part.covered)
-    ends, step = np.unique(part.first_end_mjd[covered], return_inverse=True)
-    probability = np.cumsum(sum_by(step, sets.probability[covered], ends.size))
-    area = np.cumsum(sum_by(step, coverage.centre.area_sr[covered], ends.size)) * DEG2_PER_SR
-    return Timeline(
-        label,
-        part.selection.telescope,
-        part.selection.band,
-        part.selection.night,
-        tuple(mjd_to_iso(float(end)) for end in ends),
-        tuple(hours_since(float(end), event_mjd) for end in ends),
-        tuple(map(float, probability)),
-        tuple(map(float, area)),
-    )
-
-
 def maps_in_force(start_mjd: Floats, maps: Sequence[SkyMap]) -> Ints:
     """Index of the newest map issued before each start; −1 before the first.
 
@@ -313,7 +342,8 @@ def maps_in_force(start_mjd: Floats, maps: Sequence[SkyMap]) -> Ints:
 def tally_as_pointed(coverage: Coverage, maps: Sequence[SkyMap]) -> Iterator[AsPointed]:
     """Judge each selection's exposures by the version in force when they began."""
     force = maps_in_force(coverage.observations.start_mjd, maps)
-    worth = [coverage.centre.measure(m.probability) for m in maps]
+    centre = coverage.cuts(maps)[0]
+    worth = [centre.measure(m.probability) for m in maps]
     for selection in selections(coverage.observations):
         for version in np.unique(force[selection.chosen]):
             chosen = selection.chosen & (force == version)
