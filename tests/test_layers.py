@@ -27,7 +27,8 @@ TABLE = (
     "results account serialise",
     "scaffold wording figure_style projection plots limit_plots sky_picture sky_chart figures "
     "limit_figures",
-    "report_tables page_charts page_data limit_tables sharing_tables audit_tables house_style report one_telescope circular_text circular_tables circular region_files outputs "
+    "report_tables page_charts page_data limit_tables sharing_tables audit_tables house_style "
+    "report one_telescope circular_text circular_tables circular region_files outputs "
     "terminal api check_text where_text where_json",
     "cli __main__",
 )

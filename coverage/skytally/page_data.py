@@ -9,8 +9,9 @@ from __future__ import annotations
 
 import base64
 import json
+import re
 import zlib
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 import numpy as np
@@ -23,7 +24,7 @@ from skytally.page_charts import chart_overlays
 from skytally.page_sets import MapWorth, PageSets
 from skytally.results import Results
 from skytally.times import hours_since, mjd_to_iso
-from skytally.wording import hours_text, limit_terms, utc_text
+from skytally.wording import hours_text, limit_terms, row_probability, utc_text
 
 __all__ = ["page_data"]
 
@@ -57,7 +58,7 @@ def page_data(results: Results, figures: Mapping[str, Drawing]) -> Markup | None
                 "version": m.version,
                 "hours": m.hours,
                 "area90": m.area_90_deg2,
-                "area50": m.area_50_deg2,
+                "digits": _decimals(row_probability(results.row(map=m.version), results.settings)),
             }
             for m in results.maps
         ],
@@ -90,6 +91,18 @@ def _names(values: Any) -> list[str]:
     return list(dict.fromkeys(value for value in values if value is not None))
 
 
+def _indices(values: Sequence[str | None], names: Sequence[str]) -> list[int]:
+    """Return where each value stands among the names, −1 where it does not."""
+    place = {name: index for index, name in enumerate(names)}
+    return [-1 if value is None else place.get(value, -1) for value in values]
+
+
+def _decimals(text: str) -> int:
+    """Return the decimals of the first number in a text."""
+    number = re.search(r"\d+(?:\.(\d+))?", text)
+    return 0 if number is None or number[1] is None else len(number[1])
+
+
 def _settings(results: Results) -> dict[str, Any]:
     settings = results.settings
     return {
@@ -104,10 +117,14 @@ def _settings(results: Results) -> dict[str, Any]:
 
 def _exposures(results: Results, sets: PageSets) -> dict[str, Any]:
     """Return what the page says of single exposures, in the order of the results."""
+    nights = _names(row.night for row in results.rows)
+    versions = [m.version for m in results.maps]
     return {
         "name": [e.exposure for e in results.exposures],
-        "time": [utc_text(e.start) for e in results.exposures],
+        "start": [e.start for e in results.exposures],
         "end": [e.end for e in results.exposures],
+        "night": _indices([e.night for e in results.exposures], nights),
+        "force": _indices([e.map_in_force for e in results.exposures], versions),
         "kind": sets.kinds.of_exposure.tolist(),
         "footprint": sets.footprint.tolist(),
         "depth": [round(float(d), 6) if np.isfinite(d) else None for d in sets.depth],

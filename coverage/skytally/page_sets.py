@@ -166,7 +166,7 @@ class PageSets:
     @property
     def has_brackets(self) -> bool:
         """Whether the certain and the possible coverage are there as well."""
-        return self.area_deg2.shape[0] == 3
+        return len(self.area_deg2) == 3
 
     @property
     def is_whole(self) -> bool:

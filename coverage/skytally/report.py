@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import re
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
@@ -16,6 +17,7 @@ from skytally.figure_style import Drawing
 from skytally.figures import draw_figures
 from skytally.house_style import HouseStyle, own_template
 from skytally.limit_tables import limit_tables
+from skytally.page_data import page_data
 from skytally.report_tables import key_figures, tables
 from skytally.results import Results
 from skytally.sharing_tables import sharing_tables
@@ -122,6 +124,12 @@ def _fetcher() -> Any:
     return OwnFilesOnly(allowed_protocols=("data",))
 
 
+def _screen_style() -> str:
+    """Return the style of the page: as on paper when it is printed, without fonts of its own."""
+    paper = re.sub(r"@font-face \{.*?\}\n", "", own_template("print.css"))
+    return f"@media screen {{\n{own_template('screen.css')}}}\n@media print {{\n{paper}}}\n"
+
+
 def _render(
     results: Results,
     figures: Mapping[str, Drawing] | None,
@@ -131,10 +139,13 @@ def _render(
     paper: bool,
 ) -> str:
     figures = draw_figures(results) if figures is None else figures
+    data = None if paper else page_data(results, figures)
     context = dict(
         results=results,
         paper=paper,
-        style=Markup(f"\n{own_template(sheet)}"),
+        style=Markup(f"\n{own_template(sheet) if paper else _screen_style()}"),
+        script=Markup(f"\n{own_template('report.js')}"),
+        data=data,
         headline=headline(results),
         key_figures=key_figures(results),
         figures={name: (d, Markup(d.svg)) for name, d in figures.items()},
