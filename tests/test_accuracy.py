@@ -255,7 +255,7 @@ def test_estimated_error_covers():
         loaded = campaign([telescope("Plover", camera, log)], [skymap], bracket=1.0)
         rough = account(loaded)
         footprints = lay_footprints(loaded)
-        truth = refine_footprints(footprints, [skymap], 1e-5, budget=3e7)
+        truth = refine_footprints(footprints, [skymap], 1e-5, budget=2e6)
         for index, band in enumerate(footprints.observations.bands):
             mine = truth.of(footprints.observations.band == index)
             table = truth.raster.centre.take(np.flatnonzero(mine))

@@ -1,37 +1,43 @@
 """Tighten the bracket where it holds probability, within a stated budget.
 
-After rasterising, a union's bracket is as wide as its undecided cells. Those that
-hold most probability are descended further, for every footprint of a selection
-whose bracket is too wide, until high − low meets the target or the budget of
-cells is spent. Where the descent went deeper, the deeper centre rule replaces the
-coarser one, so the value stays inside its bracket.
+After rasterising, a union's bracket is as wide as its undecided cells. One order
+deeper, the strip of undecided cells along an edge is half as wide and holds twice
+as many cells: going k orders deeper leaves 2⁻ᵏ of a bracket for 4 (2ᵏ − 1) looks
+at each cell. Each part of the undecided sky is given the depth at which all parts
+gain the same per look, the deeper the more probability is in a cell: that is the
+bracket that costs fewest looks. Where the descent went deeper, the deeper centre
+rule replaces the coarser one, so the value stays inside its bracket.
 """
 
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import replace
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from skytally.footprints import Footprints, Progress, clip_raster
+from skytally.grouping import sum_by
 from skytally.patchwork import Patchwork
-from skytally.raster import Raster, cell_width_rad, rasterise, stack_rasters
+from skytally.raster import Raster, rasterise, stack_rasters
 from skytally.selection import selections
 from skytally.skymap import SkyMap
-from skytally.spans import UNIT_SR, Ints, Spans, SpanTable
+from skytally.spans import LINE_ORDER, Ints, Spans, SpanTable
 
-__all__ = ["BUDGET_CELLS", "refine_footprints"]
+__all__ = ["BUDGET_LOOKS", "refine_footprints"]
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
 
-# Pairs of piece and cell that refining may look at, about a second of work.
-BUDGET_CELLS = 4_000_000
-_ORDERS_A_ROUND = 2
+# Looks at a pair of piece and cell that refining may take, about a second of work.
+BUDGET_LOOKS = 5_000_000
 _ROUNDS = 2
+_DEEPEST = 6
 _ORDER_LIMIT = 22
+# What is aimed at, in parts of the target: some strips halve a little less than they should.
+_AIM = 0.95
+_POWERS = 2.0 ** np.arange(_DEEPEST + 1)
 
 
 def refine_footprints(
@@ -39,12 +45,13 @@ def refine_footprints(
     maps: Sequence[SkyMap],
     target: float,
     progress: Progress | None = None,
-    budget: float = BUDGET_CELLS,
+    budget: float = BUDGET_LOOKS,
 ) -> Footprints:
     """Refine until every selection's bracket in probability is at most ``target``.
 
-    Selections are served in the order of the rows, so that the union of all
-    comes first where the budget is short.
+    Selections are served in the order of the rows. The union of all gets as much
+    of the budget as it can use; any other is passed over if what is left cannot
+    bring its bracket to the target.
 
     Parameters
     ----------
@@ -55,109 +62,204 @@ def refine_footprints(
     target : float
         Greatest high − low, a probability.
     budget : float
-        Pairs of piece and cell that may be looked at in all.
+        Pairs of piece and cell that may be looked at below the working orders.
     """
+    done = [Spans.empty() for _ in range(_DEEPEST)]
     for step in range(_ROUNDS):
-        if budget <= 0:
-            break
         if progress is not None:
             progress("Tightening the bracket", step / _ROUNDS)
-        region, cost = _where(footprints, maps, target, budget)
-        if not region:
+        deeper, looks = _plan(footprints, maps, target, budget, done)
+        if not deeper[0]:
             break
-        budget -= cost
-        footprints = _refine(footprints, region)
+        footprints = _refine(footprints, deeper)
+        done = [one.union(other) for one, other in zip(done, deeper)]
+        budget -= looks
+        # Many strips halve as foreseen; to look at them again is for where they are few.
+        if budget < looks:
+            break
     return footprints
 
 
-def _where(
-    footprints: Footprints, maps: Sequence[SkyMap], target: float, budget: float
-) -> tuple[Spans, float]:
-    """Find the undecided sky of the selections that miss the target, and its cost."""
-    raster = footprints.raster
-    patchworks = Patchwork.build(raster.inner), Patchwork.build(raster.outer)
-    inner, outer = ([p.measure(m.probability) for m in maps] for p in patchworks)
-    region, cost = Spans.empty(), 0.0
+def _plan(
+    footprints: Footprints,
+    maps: Sequence[SkyMap],
+    target: float,
+    budget: float,
+    done: Sequence[Spans],
+) -> tuple[list[Spans], float]:
+    """Choose where to go one order below the working order, where two, and so on.
+
+    ``done`` is what was chosen so before. Also returns the looks that it takes.
+    """
+    patches = _OpenPatches.of(footprints, maps, done)
+    depth = patches.depth.copy()
+    left = budget
     for selection in selections(footprints.observations):
-        mine = footprints.of(selection.chosen)
-        low, high = (p.covered_by(mine) for p in patchworks)
-        width = max(float(b[high].sum() - a[low].sum()) for a, b in zip(inner, outer))
-        if width <= target:
+        rows = patches.undecided_for(footprints.of(selection.chosen))
+        choice = _Choice(patches.worth[:, rows], patches.cells[rows], depth[rows])
+        is_whole = (selection.telescope, selection.band, selection.night) == (None, None, None)
+        if choice.is_met(target) or not (is_whole or choice.least_looks(_AIM * target) <= left):
             continue
-        undecided = _patches(patchworks[1], high).difference(_patches(patchworks[0], low))
-        wanted = region.union(_heaviest(undecided, maps, target / 4))
-        price = _cost(footprints, wanted)
-        if price > budget:
-            return region.union(_affordable(footprints, maps, wanted, budget)), budget
-        region, cost = wanted, price
-    return region, cost
+        wanted = choice.depth_for(_AIM * target, left if is_whole else np.inf)
+        looks = choice.looks(wanted)
+        if looks <= left:
+            depth[rows] = wanted
+            left -= looks
+    changed = depth > patches.depth
+    return [patches.region(changed & (depth > k)) for k in range(_DEEPEST)], budget - left
 
 
-def _patches(patchwork: Patchwork, sets: Bools) -> Spans:
-    rows = sets[patchwork.group]
-    return Spans.from_intervals(patchwork.starts[rows], patchwork.stops[rows])
+@dataclass(frozen=True, eq=False)
+class _OpenPatches:
+    """The sky cut at every edge of what is certainly and of what is possibly covered.
+
+    Only patches that are undecided for some footprint.
+
+    Attributes
+    ----------
+    starts, stops : int64 arrays, shape (n,)
+        Sorted and disjoint.
+    group : int64 array, shape (n,)
+        Which set of the patchwork each belongs to.
+    depth : int64 array, shape (n,)
+        Orders below the working orders that have been looked at.
+    worth : float64 array, shape (maps, n)
+        Their probability, times 2 for each of those orders: what a patch of its
+        cells held at the working order.
+    cells : float64 array, shape (n,)
+        Undecided cells of the footprints that can be refined, likewise at the working orders.
+    patchwork : Patchwork
+        Of the inner regions, owner by owner, followed by the outer ones.
+    """
+
+    starts: Ints
+    stops: Ints
+    group: Ints
+    depth: Ints
+    worth: Floats
+    cells: Floats
+    patchwork: Patchwork
+
+    @classmethod
+    def of(
+        cls, footprints: Footprints, maps: Sequence[SkyMap], done: Sequence[Spans]
+    ) -> _OpenPatches:
+        raster = footprints.raster
+        patchwork = Patchwork.build(SpanTable.stack((raster.inner, raster.outer)))
+        # A footprint's inner region lies in its outer one, so what a set holds of
+        # the one less what it holds of the other is what is undecided there.
+        sign = np.repeat([-1.0, 1.0], raster.order.size)[patchwork.members]
+        undecided = sum_by(patchwork.set_of_member, sign, patchwork.sets)
+        refined = footprints.pieces_per_footprint > 0
+        rate = np.where(refined, 4.0 ** (raster.order - LINE_ORDER), 0.0)
+        rate = np.tile(rate, 2)[patchwork.members] * sign
+        rows = undecided[patchwork.group] > 0
+        starts, stops = patchwork.starts[rows], patchwork.stops[rows]
+        group = patchwork.group[rows]
+        rate = sum_by(patchwork.set_of_member, rate, patchwork.sets)[group]
+        depth = np.sum([region.contains(starts) for region in done], axis=0)
+        # Each order has halved what is undecided.
+        return cls(
+            starts,
+            stops,
+            group,
+            depth,
+            np.array([m.probability.of_intervals(starts, stops) for m in maps]) * _POWERS[depth],
+            (stops - starts) * rate * _POWERS[depth],
+            patchwork,
+        )
+
+    def undecided_for(self, mine: Bools) -> Ints:
+        """Return the patches that some of these footprints may and none does cover."""
+        none = np.zeros_like(mine)
+        inner = self.patchwork.covered_by(np.concatenate((mine, none)))
+        outer = self.patchwork.covered_by(np.concatenate((none, mine)))
+        return np.flatnonzero((outer & ~inner)[self.group])
+
+    def region(self, which: Bools) -> Spans:
+        """Return the patches named as a region."""
+        return Spans.from_intervals(self.starts[which], self.stops[which])
 
 
-def _worth(region: Spans, maps: Sequence[SkyMap]) -> Floats:
-    """Greatest probability of each span on any map, shape (n,)."""
-    worth = [m.probability.of_intervals(region.starts, region.stops) for m in maps]
-    return np.asarray(np.max(worth, axis=0))
+@dataclass(frozen=True, eq=False)
+class _Choice:
+    """How deep to go in the patches that are undecided for one selection.
+
+    Attributes
+    ----------
+    worth : float64 array, shape (maps, n)
+        Probability of the patches at the working orders.
+    cells : float64 array, shape (n,)
+        Undecided cells in them at the working orders.
+    depth : int64 array, shape (n,)
+        Orders that they are deeper, or to be taken deeper, already.
+    """
+
+    worth: Floats
+    cells: Floats
+    depth: Ints
+
+    def is_met(self, target: float) -> bool:
+        """Tell whether the bracket is no wider than this on any map."""
+        return bool(np.all(self.worth @ (1 / _POWERS)[self.depth] <= target))
+
+    def looks(self, wanted: Ints) -> float:
+        """Looks that it takes to go as deep as wanted."""
+        return 4 * float(np.sum(self.cells * (_POWERS[wanted] - _POWERS[self.depth])))
+
+    def least_looks(self, width: float) -> float:
+        """Looks that no choice of depths can do without if this is to be left.
+
+        The least of 4 Σ c 2ᵏ over all real k with Σ w 2⁻ᵏ = width is
+        4 (Σ √(w c))² / width (Cauchy's inequality).
+        """
+        even = np.sum(np.sqrt(self.worth * self.cells), axis=1).max(initial=0.0)
+        return 4 * (float(even) ** 2 / width - float(np.sum(self.cells * _POWERS[self.depth])))
+
+    def depth_for(self, width: float, budget: float) -> Ints:
+        """Choose the depths that leave a bracket of some width, or what a budget can.
+
+        One more order gains 2⁻ᵏ⁻¹ of a patch's probability for 4·2ᵏ looks at each
+        of its cells, so equal gains per look mean 4ᵏ in proportion to the
+        probability per cell.
+        """
+        missing = self.worth[self.worth.sum(axis=1) > width]
+        held = missing.max(axis=0)
+        some = (self.cells > 0) & (held > 0)
+        value = np.full(self.cells.size, -np.inf)
+        value[some] = np.log2(held[some] / self.cells[some]) / 2
+        low, high = value[some].min(initial=0.0) - _DEEPEST, value[some].max(initial=0.0)
+        best, is_met = self.depth, False
+        # Halving to less than a hundredth of an order.
+        for _ in range(14):
+            level = (low + high) / 2
+            wanted = np.clip(np.rint(value - level), self.depth, _DEEPEST).astype(np.int64)
+            is_narrow = bool(np.all(missing @ (1 / _POWERS)[wanted] <= width))
+            is_affordable = self.looks(wanted) <= budget
+            if is_affordable and (is_narrow or not is_met):
+                best, is_met = wanted, is_narrow
+            if is_narrow or not is_affordable:
+                low = level
+            else:
+                high = level
+        return best
 
 
-def _heaviest(region: Spans, maps: Sequence[SkyMap], leave: float) -> Spans:
-    """Drop the emptiest spans while what is dropped holds at most ``leave``."""
-    worth = _worth(region, maps)
-    order = np.argsort(worth)
-    keep = np.sort(order[np.cumsum(worth[order]) > leave])
-    return Spans.from_intervals(region.starts[keep], region.stops[keep])
-
-
-def _cost(footprints: Footprints, region: Spans) -> float:
-    """Pairs of piece and cell that refining a region takes."""
-    raster = footprints.raster
-    cells = _undecided_sr(raster, region) / cell_width_rad(0) ** 2 * 4.0**raster.order
-    return float(4 * 2**_ORDERS_A_ROUND * cells[footprints.pieces_per_footprint > 0].sum())
-
-
-def _undecided_sr(raster: Raster, region: Spans) -> Floats:
-    """Solid angle of each footprint's undecided cells inside a region, (footprints,)."""
-    inside = raster.outer.clip(region).area_sr() - raster.inner.clip(region).area_sr()
-    return np.maximum(inside, 0.0)
-
-
-def _affordable(
-    footprints: Footprints, maps: Sequence[SkyMap], region: Spans, budget: float
-) -> Spans:
-    """Cut a region to its densest part that the budget can pay for."""
-    worth = _worth(region, maps) / ((region.stops - region.starts) * UNIT_SR)
-    order = np.argsort(-worth)
-    low, high = 0, order.size
-    best = Spans.empty()
-    while high - low > max(order.size // 32, 1):
-        middle = (low + high) // 2
-        keep = np.sort(order[:middle])
-        part = Spans.from_intervals(region.starts[keep], region.stops[keep])
-        if _cost(footprints, part) <= budget:
-            low, best = middle, part
-        else:
-            high = middle
-    return best
-
-
-def _refine(footprints: Footprints, region: Spans) -> Footprints:
-    """Descend every footprint that is undecided inside a region deeper there."""
+def _refine(footprints: Footprints, deeper: Sequence[Spans]) -> Footprints:
+    """Descend every footprint that is undecided inside the first region deeper there."""
     parts: list[Raster] = []
-    outside = region.complement()
-    open_there = _undecided_sr(footprints.raster, region) > 0
-    wanted_all = open_there & (footprints.pieces_per_footprint > 0)
+    region, outside = deeper[0], deeper[0].complement()
+    raster = footprints.raster
+    open_sr = raster.outer.clip(region).area_sr() - raster.inner.clip(region).area_sr()
+    wanted_all = (open_sr > 0) & (footprints.pieces_per_footprint > 0)
     for index in range(len(footprints.observations.telescopes)):
         mine = np.flatnonzero(footprints.telescope == index)
-        old = footprints.raster.take(mine)
+        old = raster.take(mine)
         wanted = mine[wanted_all[mine]]
         if wanted.size == 0:
             parts.append(old)
             continue
-        fresh = _deepen(footprints, mine, wanted, region)
+        fresh = _deepen(footprints, mine, wanted, deeper)
         fresh = clip_raster(fresh, footprints.clips[index])
         deepened = wanted_all[mine]
         parts.append(
@@ -171,8 +273,8 @@ def _refine(footprints: Footprints, region: Spans) -> Footprints:
     return replace(footprints, raster=stack_rasters(parts))
 
 
-def _deepen(footprints: Footprints, mine: Ints, wanted: Ints, region: Spans) -> Raster:
-    """Rasterise footprints of one telescope two orders deeper inside a region."""
+def _deepen(footprints: Footprints, mine: Ints, wanted: Ints, deeper: Sequence[Spans]) -> Raster:
+    """Rasterise footprints of one telescope inside regions to go ever deeper in."""
     order = footprints.raster.order
     pieces = footprints.pieces
     parts: list[tuple[Ints, Raster]] = []
@@ -180,8 +282,9 @@ def _deepen(footprints: Footprints, mine: Ints, wanted: Ints, region: Spans) -> 
         owners = wanted[order[wanted] == level]
         chosen = np.isin(pieces.owner, owners)
         part = pieces.take(chosen, np.searchsorted(owners, pieces.owner[chosen]))
-        depth = min(int(level) + _ORDERS_A_ROUND, _ORDER_LIMIT)
-        parts.append((owners, rasterise(part, owners.size, depth, within=region)))
+        regions = [region for region in deeper[: _ORDER_LIMIT - int(level)] if region]
+        fresh = rasterise(part, owners.size, int(level), within=deeper[0], deeper=regions)
+        parts.append((owners, fresh))
     stacked = stack_rasters([raster for _, raster in parts])
     given = np.concatenate([owners for owners, _ in parts])
     # Footprints that are not wanted get an empty raster.
