@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import replace
 from typing import Literal
 
 from skytally.circular_tables import exposure_tables, part_of
@@ -151,22 +150,13 @@ def _one_line(text: str) -> str:
 
 
 def _answer(results: Results, telescope: str | None) -> str:
-    if telescope is None:
-        return headline(results)
-    # That this one log could not be read is said by itself.
-    logs = tuple(replace(log, fault="") for log in results.logs)
-    return headline(replace(results, logs=logs), telescope)
+    if telescope is not None and any(log.fault for log in results.logs):
+        return f"The log of {telescope} could not be read, so its exposures are in no number."
+    return headline(results, telescope)
 
 
 def _errors(results: Results) -> Iterator[list[str]]:
-    """Say which logs could not be read, and what cannot be right."""
-    unread = [log.telescope for log in results.logs if log.fault]
-    if unread:
-        logs, have = ("log", "its") if len(unread) == 1 else ("logs", "their")
-        yield paragraph(
-            f"The {logs} of {join_words(unread)} could not be read, so {have} exposures are in no "
-            "number."
-        )
+    """Say what cannot be right; that a log could not be read is said in the answer."""
     faults = [
         _error(finding, results)
         for finding in results.findings
