@@ -6,10 +6,13 @@ import re
 from dataclasses import replace
 
 import pytest
+from skytally.campaign import ReportText
 from skytally.circular import render_circular
+from skytally.errors import UsageError
+from skytally.findings import Finding
 from skytally.results import LogCount, Results
-from skytally.tally import TallyRow
-from skytally.wording import source_probability
+from skytally.tally import TallyRow, Timeline
+from skytally.wording import headline, source_probability
 from small_results import renamed, small_results, small_row
 from space_results import SOURCES, with_space
 
@@ -243,3 +246,97 @@ def test_limits_of_unlike_correction_say_each_what_they_are() -> None:
     assert "(AB, 5 sigma, partly corrected for Galactic extinction, median A = 0.31 mag):" in text
     assert "(3 exposures), not corrected for Galactic extinction" in text
     assert "(2 exposures), corrected for Galactic extinction, median A = 0.31 mag" in text
+
+
+def sentence(text: str) -> str:
+    return " ".join(text.split())
+
+
+def test_authors_affiliations_and_thanks_stand_where_a_circular_has_them() -> None:
+    report = ReportText(("Björn A.", "C. D.", "E. F."), ("Quenna\nDesk", "Tolmen"), "We  thank.")
+    text = render_circular(small_results(report=report))
+    assert text.startswith(
+        "Lantern 7: coverage by two telescopes\n\n"
+        "Bjorn A., C. D. and E. F.\nQuenna Desk\nTolmen\n\n"
+    )
+    assert "\n\nWe thank.\n\nNumbers by" in text
+
+
+def error(subject: str, code: str = "sun-up") -> Finding:
+    return Finding(code, "error", subject, (2, 3), "Seen.", "The numbers are as logged.", "Look.")
+
+
+def test_an_error_is_told_in_a_sentence_and_a_mere_caution_is_not() -> None:
+    one = small_results(findings=(error("Heron"), replace(error("Plover"), severity="caution")))
+    for form in ("long", "short"):
+        assert (
+            "The audit found an error in the log of Heron: exposures in daylight (2 rows). "
+            "The numbers are as logged."
+        ) in sentence(render_circular(one, form))
+        assert "log of Plover:" not in sentence(render_circular(one, form))
+    two = small_results(findings=(error("Heron"), error("1 first", "map-before-event")))
+    text = sentence(render_circular(two))
+    assert "The audit found two errors: - in the log of Heron: exposures in daylight" in text
+    assert '- in map version "1 first": a map issued before the event (2 rows).' in text
+    assert "audit" not in render_circular(one, telescope="Plover")
+    many = small_results(findings=(error("Heron"),) * 10)
+    assert "- and 2 more errors, listed in the report." in render_circular(many)
+
+
+def test_a_log_that_could_not_be_read_is_told_once() -> None:
+    base = small_results()
+    lost = replace(base.logs[1], read=0, used=0, set_aside=0, reasons=(), fault="p.csv: no ra.")
+    results = replace(base, logs=(base.logs[0], lost))
+    text = sentence(render_circular(results))
+    assert text.count("could not be read") == 1
+    assert "Without Plover, whose log could not be read: by 2031" in text
+    assert "The log of Heron is included. It holds 2 rows; none was set aside." in text
+    text = sentence(render_circular(results, telescope="Plover"))
+    assert "The log of Plover could not be read, so its exposures are in no number." in text
+    assert "could not" not in render_circular(results, telescope="Heron")
+
+
+def test_the_short_form_keeps_the_answer_and_what_it_must_be_read_with() -> None:
+    results = small_results()
+    long, short = render_circular(results), render_circular(results, "short")
+    assert len(short.splitlines()) < len(long.splitlines()) / 2
+    assert sentence(headline(results)).split("covered")[0] in sentence(short)
+    assert (
+        "The exposures are by Heron (2 exposures in g) and Plover (1 exposure in r)."
+        in sentence(short)
+    )
+    assert "Exposures by" not in short
+
+
+def test_a_telescope_is_told_of_alone_and_of_the_whole() -> None:
+    text = sentence(render_circular(small_results(), telescope="Heron"))
+    assert text.startswith("Lantern 7: coverage by Heron By 2031-03-15 01:26 UTC, 20.1 h after")
+    assert "Heron has covered 33.33 % (33.25-33.41 %) of the probability" in text
+    assert (
+        "Of the probability, 33.3 % is covered by Heron alone. With the log of Plover included, "
+        "the two telescopes cover 33.33 % (33.25-33.41 %) of the probability."
+    ) in text
+    assert "Plover," not in text
+    assert "not accepted" not in text, "that is another log's"
+    with pytest.raises(UsageError, match=r"no telescope 'Dunlin'.*'Heron', 'Plover'"):
+        render_circular(small_results(), telescope="Dunlin")
+
+
+def test_a_telescope_of_many_exposures_has_running_sums_by_night() -> None:
+    base = many(31)
+    own = Timeline("2 update", "Heron", None, None, ("", ""), (14.4011, 20.0), (0.1, 1 / 3), (1, 5))
+    nights = ("2031-03-13", "2031-03-14")
+    exposures = tuple(
+        replace(e, night=nights[i > 0], end=("2031-03-14T19:45:12Z", "2031-03-15T01:26:00Z")[i > 0])
+        for i, e in enumerate(base.exposures)
+    )
+    text = render_circular(
+        replace(base, exposures=exposures, timelines=(*base.timelines, own)), telescope="Heron"
+    )
+    rows = [line.split() for line in text.splitlines() if line.startswith(nights)]
+    # 0.1 by the end of the first night, a third by that of the second.
+    assert [(r[0], r[1], r[-2]) for r in rows[-2:]] == [
+        (nights[0], "1", "10.0"),
+        (nights[1], "30", "33.3"),
+    ]
+    assert "Prob. so far" in text

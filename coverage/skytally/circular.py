@@ -245,7 +245,11 @@ def _together(told: Results, results: Results) -> Iterator[list[str]]:
     if not others or not own.exposures or whole.probability <= 0:
         return
     alone = _of_alone(own, told)
-    names = join_words([t.name for t in others])
+    names = (
+        join_words([t.name for t in others])
+        if len(others) <= _NAMED
+        else count("other telescope", len(others))
+    )
     everyone = count("telescope", len(others) + 1, words=True)
     yield paragraph(
         f"{alone} With the {'log' if len(others) == 1 else 'logs'} of {names} included, the "
@@ -389,9 +393,10 @@ def _rows_read(results: Results) -> str:
     """Say whose logs are included, and the sum of what was read, used and set aside."""
     kept = [log.telescope for log in results.logs if not log.fault]
     if not kept:
-        return "No log could be read." if results.logs else "No log was given."
+        return "No log is included."
+    whose = join_words(kept) if len(kept) <= _NAMED else count("telescope", len(kept))
     included = (
-        f"{'The log' if len(kept) == 1 else 'The logs'} of {join_words(kept)} "
+        f"{'The log' if len(kept) == 1 else 'The logs'} of {whose} "
         f"{'is' if len(kept) == 1 else 'are'} included."
     )
     return f"{included} {_sum_of_rows(results, 'It' if len(kept) == 1 else 'They')}"
