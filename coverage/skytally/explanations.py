@@ -147,7 +147,8 @@ class Explainer:
     def explain(self, question: Question) -> tuple[Explanation, ...]:
         """Find the ways that yield a stated number, the closest first.
 
-        Two ways at once are tried only where none alone yields it.
+        Ways that lay no field anew come first; the others are tried only where
+        none of them yields the number, and two at once only where none alone does.
         """
         if not question.of_sky:
             found = _fitting(question, self._of_logs(question))
@@ -155,17 +156,19 @@ class Explainer:
             recount = Recount(
                 self.amounts, self._fields, question.quantity, question.skymap, question.chosen
             )
-            found = _fitting(question, self._single(recount))
-            found += self._touching(question, recount)
-            found = found or _fitting(question, self._double(recount))
+            found = (
+                _fitting(question, self._as_laid(recount))
+                or _fitting(question, self._laid_anew(recount)) + self._touching(question, recount)
+                or _fitting(question, self._double(recount))
+            )
         found.sort(key=lambda one: abs(one.value - question.stated.number))
         closest: dict[str, Explanation] = {}
         for one in found:  # variants of one way are one explanation
             closest.setdefault(one.text, one)
         return tuple(closest.values())
 
-    def _single(self, recount: Recount) -> Iterator[_Way]:
-        """Ways of counting areas and probabilities, one at a time."""
+    def _as_laid(self, recount: Recount) -> Iterator[_Way]:
+        """Ways of counting the areas and probabilities of the fields as they are."""
         age = "older"
         for skymap in self.campaign.maps if recount.skymap is not None else ():
             if skymap is recount.skymap:
@@ -181,6 +184,9 @@ class Explainer:
         yield _Way("fields-summed", "up", text, recount.fields_summed)
         text = f"adding up the telescopes {_OVERLAP}"
         yield _Way("telescopes-summed", "up", text, recount.telescopes_summed)
+
+    def _laid_anew(self, recount: Recount) -> Iterator[_Way]:
+        """Ways of counting fields that are laid otherwise."""
         for kind, code, direction, text in self._other_fields(recount):
             count, rough = (partial(recount.laid, kind, rough=one) for one in (False, True))
             yield _Way(code, direction, text, count, rough)
