@@ -5,6 +5,7 @@ from __future__ import annotations
 import base64
 import io
 import re
+from dataclasses import replace
 from xml.etree import ElementTree
 
 import astropy.units as u
@@ -15,8 +16,17 @@ from astropy_healpix import lonlat_to_healpix
 from matplotlib import image
 from matplotlib.colors import to_rgb
 from sample_results import NAMES, sample_map, sample_results
-from skytally.figure_style import ACCENT, GREY, INK, draw, hatch_mask, new_figure, style_of
-from skytally.figures import draw_figures
+from skytally.figure_style import (
+    ACCENT,
+    GREY,
+    INK,
+    WIDTH_IN,
+    Sketch,
+    hatch_mask,
+    new_figure,
+    style_of,
+)
+from skytally.figures import draw_figures, sketch_figures
 from skytally.limit_plots import (
     distance_figure,
     exclusion_figure,
@@ -339,6 +349,27 @@ def test_drawings_are_safe_and_complete_svg(results: Results, deep: Results, spa
     assert len(ids) == len(set(ids))
 
 
+@pytest.mark.parametrize("case", ["usual", "deep", "one version", "many", "spot"])
+def test_sketches_tell_the_size_before_the_drawing_is_made(
+    results: Results, deep: Results, case: str
+) -> None:
+    spot = sample_map("1", None, width_deg=1.0, spread_deg=1.0, centres=(40.0,), order=7)
+    cases = {
+        "usual": lambda: results,
+        "deep": lambda: deep,
+        "one version": lambda: replace(results, maps=results.maps[-1:]),
+        "many": lambda: sample_results(names=tuple(f"Heron {n}" for n in range(11)), exposures=30),
+        "spot": lambda: sample_results(exposures=20, maps=(spot,)),
+    }
+    for sketch in sketch_figures(cases[case]()).values():
+        drawing = sketch.draw()
+        assert (drawing.name, drawing.alt) == (sketch.name, sketch.alt)
+        box = re.search(r'viewBox="0 0 ([\d.]+) ([\d.]+)"', drawing.svg)
+        # In points, 72 to an inch.
+        assert float(box[1]) == pytest.approx(72 * WIDTH_IN, abs=1e-3)
+        assert float(box[2]) == pytest.approx(72 * sketch.height_in, abs=1e-3)
+
+
 def test_the_same_results_give_the_same_drawings(results: Results) -> None:
     first, second = draw_figures(results), draw_figures(results)
     assert {n: d.svg for n, d in first.items()} == {n: d.svg for n, d in second.items()}
@@ -445,5 +476,5 @@ def test_a_failing_figure_leaves_no_setting_behind() -> None:
         raise RuntimeError("no")
 
     with pytest.raises(RuntimeError):
-        draw("x", "", "", "", fail)
+        Sketch("x", "", "", "", 1.0, fail).draw()
     assert matplotlib.rcParams["svg.fonttype"] == before

@@ -34,8 +34,8 @@ __all__ = [
     "RULE",
     "WIDTH_IN",
     "Drawing",
+    "Sketch",
     "TelescopeStyle",
-    "draw",
     "hatch_mask",
     "is_hatched",
     "new_figure",
@@ -164,23 +164,45 @@ class Drawing:
 
 
 def new_figure(height_in: float, width_in: float = WIDTH_IN) -> Figure:
-    """Return an empty figure; call it inside `draw` only."""
+    """Return an empty figure; call it inside `Sketch.draw` only."""
     figure = Figure(figsize=(width_in, height_in), dpi=144)
     FigureCanvasSVG(figure)
     return figure
 
 
-def draw(name: str, title: str, caption: str, alt: str, make: Callable[[], Figure]) -> Drawing:
-    """Make a figure in our style and turn it into a `Drawing`."""
-    settings: Any = {**_RC, "svg.hashsalt": name}
-    with matplotlib.rc_context(settings), warnings.catch_warnings():
-        # A name in a script that DejaVu lacks: the page's own fonts draw the text.
-        warnings.filterwarnings("ignore", message="Glyph .* missing from font")
-        warnings.filterwarnings("ignore", message="Matplotlib currently does not support")
-        figure = make()
-        stream = io.StringIO()
-        figure.savefig(stream, format="svg", metadata={"Date": None}, transparent=True)
-    return Drawing(name, title, caption, alt, _clean(stream.getvalue(), name, alt))
+@dataclass(frozen=True)
+class Sketch:
+    """A figure to be drawn: all that a page needs to keep its place.
+
+    Attributes
+    ----------
+    name, title, caption, alt : str
+        As in `Drawing`.
+    height_in : float
+        Its height in inches; its width is the text width.
+    make : callable
+        Makes it, of this height, with `new_figure`.
+    """
+
+    name: str
+    title: str
+    caption: str
+    alt: str
+    height_in: float
+    make: Callable[[], Figure]
+
+    def draw(self) -> Drawing:
+        """Make the figure in our style."""
+        settings: Any = {**_RC, "svg.hashsalt": self.name}
+        with matplotlib.rc_context(settings), warnings.catch_warnings():
+            # A name in a script that DejaVu lacks: the page's own fonts draw the text.
+            warnings.filterwarnings("ignore", message="Glyph .* missing from font")
+            warnings.filterwarnings("ignore", message="Matplotlib currently does not support")
+            figure = self.make()
+            stream = io.StringIO()
+            figure.savefig(stream, format="svg", metadata={"Date": None}, transparent=True)
+        svg = _clean(stream.getvalue(), self.name, self.alt)
+        return Drawing(self.name, self.title, self.caption, self.alt, svg)
 
 
 def short_label(text: str, most: int = 28) -> str:

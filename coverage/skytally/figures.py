@@ -1,17 +1,23 @@
-"""Every figure of the report, with the sentences that go with it, from the results alone."""
+"""Every figure of the report, with the sentences that go with it, from the results alone.
+
+Sentences and sizes are cheap and come first, as sketches; drawing takes its time.
+"""
 
 from __future__ import annotations
 
 from dataclasses import replace
 
-from skytally.figure_style import Drawing, draw
-from skytally.limit_figures import limit_figures
+from skytally.figure_style import Drawing, Sketch
+from skytally.limit_figures import limit_sketches
 from skytally.plots import (
+    CREDIT_IN,
     MOST_BANDS,
     MOST_LABELS,
+    TIMELINE_IN,
     credit_figure,
     depth_bands,
     depth_figure,
+    depth_height,
     telescope_timelines,
     timeline_figure,
 )
@@ -21,8 +27,11 @@ from skytally.sky_chart import (
     Part,
     credible_parts,
     versions_figure,
+    versions_height,
     whole_sky_figure,
+    whole_sky_height,
     zoom_figure,
+    zoom_height,
 )
 from skytally.wording import (
     NBSP,
@@ -37,11 +46,16 @@ from skytally.wording import (
     version_text,
 )
 
-__all__ = ["draw_figures"]
+__all__ = ["draw_figures", "sketch_figures"]
 
 
 def draw_figures(results: Results) -> dict[str, Drawing]:
-    """Draw what the results have to show.
+    """Draw what the results have to show: every one of `sketch_figures`."""
+    return {name: sketch.draw() for name, sketch in sketch_figures(results).items()}
+
+
+def sketch_figures(results: Results) -> dict[str, Sketch]:
+    """Return what the results have to show, not yet drawn, in the order of the report.
 
     Parameters
     ----------
@@ -50,30 +64,30 @@ def draw_figures(results: Results) -> dict[str, Drawing]:
 
     Returns
     -------
-    dict of str to Drawing
+    dict of str to Sketch
         Always ``whole-sky`` and ``zoom``; ``versions`` with several map
         versions; ``timeline`` where any probability is covered, ``credit``
         where several telescopes did; ``depth`` where any exposure has a limit;
-        those of `limit_figures` where the newest map carries distances.
+        those of `limit_sketches` where the newest map carries distances.
     """
     parts = _zoomed(credible_parts(results.sky.maps[-1]))
-    drawings = [_whole_sky(results, parts), _zoom(results, parts)]
+    sketches = [_whole_sky(results, parts), _zoom(results, parts)]
     if len(results.maps) > 1:
-        drawings.append(_versions(results))
+        sketches.append(_versions(results, parts))
     if results.row().probability > 0:
-        drawings.append(_timeline(results))
+        sketches.append(_timeline(results))
     sharing = [
         t for t in results.telescopes if results.row(telescope=t.name).probability_credit > 0
     ]
     if len(sharing) > 1:
-        drawings.append(_credit(results))
+        sketches.append(_credit(results))
     if depth_bands(results):
-        drawings.append(_depth(results))
-    drawings += limit_figures(results)
-    return {drawing.name: drawing for drawing in drawings}
+        sketches.append(_depth(results))
+    sketches += limit_sketches(results)
+    return {sketch.name: sketch for sketch in sketches}
 
 
-def _whole_sky(results: Results, parts: list[Part]) -> Drawing:
+def _whole_sky(results: Results, parts: list[Part]) -> Sketch:
     total = results.row()
     version = version_text(results.newest.version)
     used = sum(bool(region) for region in results.sky.covered)
@@ -91,16 +105,17 @@ def _whole_sky(results: Results, parts: list[Part]) -> Drawing:
         )
     else:
         finding = f"No footprint holds any of the probability of {version}."
-    return draw(
+    return Sketch(
         "whole-sky",
         "The whole sky",
         f"{finding} Mollweide projection, equal area; right ascension increases to the left.",
         f"Whole-sky chart of {version} with the footprints of each telescope. {finding}",
+        whole_sky_height(results),
         lambda: whole_sky_figure(results, parts),
     )
 
 
-def _zoom(results: Results, parts: list[Part]) -> Drawing:
+def _zoom(results: Results, parts: list[Part]) -> Sketch:
     total = results.row()
     area = results.newest.area_90_deg2
     region = f"90{NBSP}% region"
@@ -114,11 +129,12 @@ def _zoom(results: Results, parts: list[Part]) -> Drawing:
             f" The region has separate parts; the two shown hold "
             f"{percent(parts[0].probability, 0)} and {percent(parts[1].probability, 0)}."
         )
-    return draw(
+    return Sketch(
         "zoom",
         f"The {region}",
         f"{finding} Lambert equal-area projection; the bar is true to scale.",
         f"Chart of the {region} with its contours and the footprints of each telescope. {finding}",
+        zoom_height(results, parts),
         lambda: zoom_figure(results, parts),
     )
 
@@ -128,22 +144,23 @@ def _zoomed(parts: list[Part]) -> list[Part]:
     return [p for p in parts[:2] if p is parts[0] or p.probability >= LEAST_PART]
 
 
-def _versions(results: Results) -> Drawing:
+def _versions(results: Results, parts: list[Part]) -> Sketch:
     shares = [
         f"{percent(results.row(map=m.version).probability)} of “{m.version}”" for m in results.maps
     ]
     finding = f"The same exposures cover {join_words(shares)}."
-    return draw(
+    return Sketch(
         "versions",
         "The same footprints on every map version",
         f"{finding} Full line: 50{NBSP}% region; dashed: 90{NBSP}% region; "
         "filled: everything observed.",
         f"A small whole-sky chart for each map version. {finding}",
-        lambda: versions_figure(results),
+        versions_height(results),
+        lambda: versions_figure(results, parts),
     )
 
 
-def _timeline(results: Results) -> Drawing:
+def _timeline(results: Results) -> Sketch:
     total = next(
         line
         for line in results.timelines
@@ -162,18 +179,19 @@ def _timeline(results: Results) -> Drawing:
         if len(lines) + 1 > MOST_LABELS
         else ""
     )
-    return draw(
+    return Sketch(
         "timeline",
         "Probability against time",
         f"{finding} Each telescope counts all it covered, shared or not; dotted uprights: "
         f"map versions issued. Probabilities are those of "
         f"{version_text(results.newest.version)}.{note}",
         f"Step plot of the probability covered against hours since the event. {finding}",
+        TIMELINE_IN,
         lambda: timeline_figure(results),
     )
 
 
-def _credit(results: Results) -> Drawing:
+def _credit(results: Results) -> Sketch:
     rows = [results.row(telescope=t.name) for t in results.telescopes]
     best = max(rows, key=lambda row: row.probability_credit)
     total = results.row().probability
@@ -182,17 +200,18 @@ def _credit(results: Results) -> Drawing:
         f"{best.telescope} has the largest share, {percent(best.probability_credit / total, 0)} of "
         f"what is covered; {percent(min(alone / total, 1.0), 0)} of it was seen by one alone."
     )
-    return draw(
+    return Sketch(
         "credit",
         "Who covered it",
         f"{finding} Probability that several telescopes covered is shared equally among them, "
         f"so that the shares add up to the total.",
         f"A bar of the covered probability divided among the telescopes. {finding}",
+        CREDIT_IN,
         lambda: credit_figure(results),
     )
 
 
-def _depth(results: Results) -> Drawing:
+def _depth(results: Results) -> Sketch:
     rows = depth_bands(results)
     depth, band = max((e.depth, str(e.band)) for e in results.exposures if e.depth is not None)
     without = sum(e.depth is None for e in results.exposures)
@@ -203,10 +222,11 @@ def _depth(results: Results) -> Drawing:
     note = f" The {MOST_BANDS} most used bands are shown." if len(rows) > MOST_BANDS else ""
     # Exposures are listed as logged; only the sums over them are corrected.
     settings = replace(results.settings, extinction="not corrected for Galactic extinction")
-    return draw(
+    return Sketch(
         "depth",
         "Limits against time",
         f"{finding} One mark per exposure: {limit_terms(settings)}.{note}",
         f"Plots of limiting magnitude against hours since the event, one per band. {finding}",
+        depth_height(results),
         lambda: depth_figure(results),
     )

@@ -5,14 +5,18 @@ from __future__ import annotations
 import numpy as np
 
 from skytally.exclusion import DepthHistogram, DistanceProfile
-from skytally.figure_style import Drawing, draw
+from skytally.figure_style import Sketch
 from skytally.limit_plots import (
+    DISTANCE_IN,
+    EXCLUSION_IN,
+    FADING_IN,
     MOST_SOURCES,
     distance_figure,
     exclusion_figure,
     fading_figure,
     fading_levels,
     histogram_figure,
+    histogram_height,
 )
 from skytally.plots import MOST_BANDS, depth_bands
 from skytally.results import Results
@@ -29,43 +33,43 @@ from skytally.wording import (
     version_text,
 )
 
-__all__ = ["limit_figures"]
+__all__ = ["limit_sketches"]
 
 _NUMBERS = "The numbers stand in tally.json."
 
 
-def limit_figures(results: Results) -> list[Drawing]:
-    """Draw what a newest map with distances has to show: nothing on a map without.
+def limit_sketches(results: Results) -> list[Sketch]:
+    """Return what a newest map with distances has to show: nothing on a map without.
 
     Returns
     -------
-    list of Drawing
+    list of Sketch
         ``depth-histogram`` where any covered place has a limit; ``distance``
         where anything is covered; ``exclusion`` and ``fading`` where any
         source could have been seen.
     """
     newest = results.newest.version
-    drawings = []
+    sketches = []
     histograms = {h.band: h for h in results.depth_histograms if h.map == newest}
     bands = [row.band for row in depth_bands(results)]
     ordered = [histograms[band] for band in bands if band in histograms]
     ordered = [h for h in ordered if sum(h.probability) > 0]
     if ordered:
-        drawings.append(_histogram(results, ordered))
+        sketches.append(_histogram(results, ordered))
     profile = next((p for p in results.distance_profiles if p.map == newest), None)
     if profile is not None and max(profile.covered, default=0.0) > 0:
-        drawings.append(_distance(results, profile))
+        sketches.append(_distance(results, profile))
     curves = newest_curves(results)
     if curves and curves[0].highest > 0:
-        drawings.append(_exclusion(results))
-    return drawings + _fading(results)
+        sketches.append(_exclusion(results))
+    return sketches + _fading(results)
 
 
 def _terms(results: Results) -> str:
     return limit_terms(results.settings, limit_rows(results))
 
 
-def _histogram(results: Results, shown: list[DepthHistogram]) -> Drawing:
+def _histogram(results: Results, shown: list[DepthHistogram]) -> Sketch:
     largest = max(shown, key=lambda h: sum(h.probability))
     held = np.array(largest.probability)
     peak = int(np.argmax(held))
@@ -80,17 +84,18 @@ def _histogram(results: Results, shown: list[DepthHistogram]) -> Drawing:
     if without > 0:
         finding += " What was covered only by exposures without a limit is stated in each panel."
     note = f" The {MOST_BANDS} most used bands are shown." if len(shown) > MOST_BANDS else ""
-    return draw(
+    return Sketch(
         "depth-histogram",
         "How deep over the probability",
         f"{finding} Probability of {version_text(results.newest.version)} by the deepest single "
         f"exposure of each place: {_terms(results)}.{note} {_NUMBERS}",
         f"Histograms of covered probability against limiting magnitude, one per band. {finding}",
+        histogram_height(shown),
         lambda: histogram_figure(shown),
     )
 
 
-def _distance(results: Results, profile: DistanceProfile) -> Drawing:
+def _distance(results: Results, profile: DistanceProfile) -> Sketch:
     distance, whole = np.array(profile.distance_mpc), np.array(profile.whole)
     most = float(distance[int(np.argmax(whole))])
     finding = (
@@ -115,17 +120,18 @@ def _distance(results: Results, profile: DistanceProfile) -> Drawing:
         if seen
         else ""
     )
-    return draw(
+    return Sketch(
         "distance",
         "How far",
         f"{finding} All directions of {version_text(profile.map)} together.{reach}{note} "
         f"{_NUMBERS}",
         f"Plot of probability per megaparsec against luminosity distance. {finding}",
+        DISTANCE_IN,
         lambda: distance_figure(profile),
     )
 
 
-def _exclusion(results: Results) -> Drawing:
+def _exclusion(results: Results) -> Sketch:
     curves = newest_curves(results)
     reached = [
         f"{bright_magnitude(curve.magnitude_50)} in {curve.band}"
@@ -150,17 +156,18 @@ def _exclusion(results: Results) -> Drawing:
             "covered with a limit and a distance."
         )
     note = " The bands that cover most are shown." if len(curves) - 1 > MOST_BANDS else ""
-    return draw(
+    return Sketch(
         "exclusion",
         "What is ruled out",
         f"{finding} For a constant source, without K-correction, seen in one exposure that is "
         f"certain down to its limit: {_terms(results)}.{note} {_NUMBERS}",
         f"Plot of detectable probability against absolute magnitude, a line per band. {finding}",
+        EXCLUSION_IN,
         lambda: exclusion_figure(curves),
     )
 
 
-def _fading(results: Results) -> list[Drawing]:
+def _fading(results: Results) -> list[Sketch]:
     plane = next((p for p in results.fading_planes if p.map == results.newest.version), None)
     if plane is None or not fading_levels(plane):
         return []
@@ -178,13 +185,14 @@ def _fading(results: Results) -> list[Drawing]:
         f"this plane reaches, a source must start at about {join_words(takes)}."
     )
     return [
-        draw(
+        Sketch(
             "fading",
             "Sources that fade",
             f"{finding} Contours: detectable probability of a source that fades linearly from its "
             f"absolute magnitude at the event, the same in every band, without K-correction, seen "
             f"in one exposure that is certain down to its limit: {_terms(results)}. {_NUMBERS}",
             f"Contour plot of detectable probability against magnitude and fading rate. {finding}",
+            FADING_IN,
             lambda: fading_figure(plane),
         )
     ]

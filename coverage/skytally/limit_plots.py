@@ -24,12 +24,16 @@ from skytally.plots import MOST_BANDS, end_labels
 from skytally.wording import number_text, percent
 
 __all__ = [
+    "DISTANCE_IN",
+    "EXCLUSION_IN",
+    "FADING_IN",
     "MOST_SOURCES",
     "distance_figure",
     "exclusion_figure",
     "fading_figure",
     "fading_levels",
     "histogram_figure",
+    "histogram_height",
 ]
 
 # Sources whose lines can still be told apart in one plot.
@@ -43,11 +47,12 @@ _LINES: tuple[str | tuple[int, tuple[float, ...]], ...] = (
 # Where a distribution has fallen to this part of its peak, the axis ends.
 _TAIL = 2e-3
 _PANEL_STEP, _PANEL = 1.5, 1.1
+DISTANCE_IN, EXCLUSION_IN, FADING_IN = 2.7, 3.0, 3.0
 
 
 def distance_figure(profile: DistanceProfile) -> Figure:
     """Draw probability against distance: of the map, of what was covered, and within reach."""
-    figure = new_figure(2.7)
+    figure = new_figure(DISTANCE_IN)
     axes = figure.add_axes((0.075, 0.15, 0.91, 0.82))
     plain_axes(axes)
     distance = np.array(profile.distance_mpc)
@@ -72,7 +77,7 @@ def distance_figure(profile: DistanceProfile) -> Figure:
 
 def exclusion_figure(curves: Sequence[ExclusionCurve]) -> Figure:
     """Draw detectable probability against absolute magnitude, band by band and for all."""
-    figure = new_figure(3.0)
+    figure = new_figure(EXCLUSION_IN)
     axes = figure.add_axes((0.075, 0.13, 0.745, 0.84))
     plain_axes(axes)
     shown = [curves[0], *sorted(curves[1:], key=lambda c: -c.highest)[:MOST_BANDS]]
@@ -125,7 +130,7 @@ def fading_levels(plane: FadingPlane) -> list[float]:
 
 def fading_figure(plane: FadingPlane) -> Figure:
     """Draw the fading plane as labelled contours of detectable probability."""
-    figure = new_figure(3.0)
+    figure = new_figure(FADING_IN)
     axes = figure.add_axes((0.075, 0.13, 0.91, 0.84))
     plain_axes(axes)
     peak, fade = np.array(plane.peak), np.array(plane.fade_per_day)
@@ -184,12 +189,18 @@ def _shades(number: int) -> list[tuple[float, float, float]]:
     return [(float(r), float(g), float(b)) for r, g, b in 1 - part * (1 - accent)]
 
 
+def histogram_height(histograms: Sequence[DepthHistogram]) -> float:
+    """Return the height of `histogram_figure`, inches."""
+    rows = -(-min(len(histograms), MOST_BANDS) // 4)
+    return 0.2 + _PANEL_STEP * (rows - 1) + _PANEL + 0.45
+
+
 def histogram_figure(histograms: Sequence[DepthHistogram]) -> Figure:
     """Draw the covered probability by the deepest limit, a panel per band."""
     shown = histograms[:MOST_BANDS]
     rows = -(-len(shown) // 4)
     columns = -(-len(shown) // rows)
-    height = 0.2 + _PANEL_STEP * (rows - 1) + _PANEL + 0.45
+    height = histogram_height(histograms)
     figure = new_figure(height)
     low = min(h.edges[0] for h in shown)
     high = max(h.edges[-1] for h in shown)

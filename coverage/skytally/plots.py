@@ -28,11 +28,14 @@ from skytally.tally import TallyRow, Timeline
 from skytally.wording import limit_rows, percent
 
 __all__ = [
+    "CREDIT_IN",
     "MOST_BANDS",
     "MOST_LABELS",
+    "TIMELINE_IN",
     "credit_figure",
     "depth_bands",
     "depth_figure",
+    "depth_height",
     "end_labels",
     "telescope_timelines",
     "timeline_figure",
@@ -41,6 +44,7 @@ __all__ = [
 # Lines that can carry a label at their end without crowding.
 MOST_LABELS = 9
 MOST_BANDS = 8
+TIMELINE_IN, CREDIT_IN = 2.9, 1.45
 _SAMPLES_PER_INCH = 192
 _VECTOR_POINTS = 2000
 # Height of a band's panel with its axis and title, inches, and of the panel alone.
@@ -69,7 +73,7 @@ def timeline_figure(results: Results) -> Figure:
         if line.map == results.newest.version
         and (line.telescope, line.band, line.night) == (None, None, None)
     )
-    figure = new_figure(2.9)
+    figure = new_figure(TIMELINE_IN)
     axes = figure.add_axes((0.075, 0.14, 0.735, 0.74))
     plain_axes(axes)
     versions = [(m.hours, m.version) for m in results.maps if m.hours is not None]
@@ -182,7 +186,7 @@ def credit_figure(results: Results) -> Figure:
     credit = [results.row(telescope=t.name).probability_credit for t in results.telescopes]
     shares = [(index, value) for index, value in enumerate(credit) if value > 0]
     shares.sort(key=lambda share: -share[1])
-    figure = new_figure(1.45)
+    figure = new_figure(CREDIT_IN)
     axes = figure.add_axes((0.005, 0.0, 0.99, 1.0))
     axes.set_xlim(0, 1)
     axes.set_ylim(0, 1)
@@ -259,15 +263,29 @@ def depth_bands(results: Results) -> list[TallyRow]:
     return sorted(limit_rows(results), key=lambda row: (-row.exposures, row.band))
 
 
+def _with_limits(results: Results) -> list[int]:
+    """Return the telescopes whose exposures have limits."""
+    used = {e.telescope for e in results.exposures if e.depth is not None}
+    return [i for i, t in enumerate(results.telescopes) if t.name in used]
+
+
+def _depth_key(shown: Sequence[int]) -> float:
+    return 0.1 + 0.18 * -(-len(shown) // 5)
+
+
+def depth_height(results: Results) -> float:
+    """Return the height of `depth_figure`, inches."""
+    rows = -(-min(len(depth_bands(results)), MOST_BANDS) // 4)
+    return 0.1 + _PANEL_STEP * rows + 0.2 + _depth_key(_with_limits(results))
+
+
 def depth_figure(results: Results) -> Figure:
     """Draw each exposure's limit against hours since the event, a panel per band."""
     bands = [row.band for row in depth_bands(results)[:MOST_BANDS]]
     rows = -(-len(bands) // 4)
     columns = -(-len(bands) // rows)
-    used = {e.telescope for e in results.exposures if e.depth is not None}
-    shown = [i for i, t in enumerate(results.telescopes) if t.name in used]
-    key = 0.1 + 0.18 * -(-len(shown) // 5)
-    height = 0.1 + _PANEL_STEP * rows + 0.2 + key
+    shown = _with_limits(results)
+    key, height = _depth_key(shown), depth_height(results)
     figure = new_figure(height)
     depths = [e.depth for e in results.exposures if e.depth is not None and e.band in bands]
     hours = [e.hours for e in results.exposures if e.depth is not None and e.band in bands]

@@ -52,8 +52,11 @@ __all__ = [
     "Part",
     "credible_parts",
     "versions_figure",
+    "versions_height",
     "whole_sky_figure",
+    "whole_sky_height",
     "zoom_figure",
+    "zoom_height",
 ]
 
 Floats = NDArray[np.float64]
@@ -67,6 +70,7 @@ _SMALL_ZOOM_DEG = 40.0
 _PART_ORDER = 5
 # A part of the credible region that holds less than this is no chart of its own.
 LEAST_PART = 0.15
+_ZOOM_LEFT, _ZOOM_GAP, _ZOOM_HEAD, _ZOOM_FOOT = 0.42, 0.5, 0.06, 0.36
 _KEY_ROW_IN = 0.19
 _KEY_COLUMNS = 5
 
@@ -140,18 +144,23 @@ def _directions(starts: Ints, stops: Ints, cells: Ints) -> Floats:
     return np.stack((lon.to_value(u.deg), lat.to_value(u.deg)), axis=1)
 
 
+def whole_sky_height(results: Results) -> float:
+    """Return the height of `whole_sky_figure`, inches."""
+    return WIDTH_IN * whole_sky_window(0.0).aspect + _key_height(len(_shown(results)))
+
+
 def whole_sky_figure(results: Results, parts: Sequence[Part]) -> Figure:
     """Draw the newest map version and all footprints on the whole sky.
 
-    Where the zooms on the parts are small, their frames are drawn in.
+    ``parts`` are those of the zoom: where it is small, their frames are drawn in.
     """
     skymap = results.sky.maps[-1]
-    window = whole_sky_window(_middle_ra(skymap))
+    window = whole_sky_window(_middle_ra(parts[0]))
     shown = _shown(results)
     key = _key_height(len(shown))
-    height = WIDTH_IN * window.aspect
-    figure = new_figure(height + key)
-    axes = figure.add_axes((0, key / (height + key), 1, height / (height + key)))
+    total, height = whole_sky_height(results), WIDTH_IN * window.aspect
+    figure = new_figure(total)
+    axes = figure.add_axes((0, key / total, 1, height / total))
     samples = _samples(window, WIDTH_IN)
     _paint(axes, window, paint_sky(samples, skymap, _by_telescope(results)))
     _whole_sky_frame(axes, window, labels=True)
@@ -165,24 +174,28 @@ def whole_sky_figure(results: Results, parts: Sequence[Part]) -> Figure:
     return figure
 
 
+def zoom_height(results: Results, parts: Sequence[Part]) -> float:
+    """Return the height of `zoom_figure`, inches."""
+    tallest = _zoom_width(len(parts)) * max(window.aspect for window in _zoom_windows(parts))
+    return _ZOOM_HEAD + tallest + _ZOOM_FOOT + _key_height(len(_shown(results)))
+
+
 def zoom_figure(results: Results, parts: Sequence[Part]) -> Figure:
     """Draw one or two parts of the newest version's 90 % region, side by side."""
     skymap = results.sky.maps[-1]
-    number = len(parts)
-    windows = _zoom_windows(parts)
     shown = _shown(results)
-    key = _key_height(len(shown))
-    left, gap, foot, head = 0.42, 0.5, 0.36, 0.06
-    width = (WIDTH_IN - left - 0.06 - gap * (number - 1)) / number
-    tallest = max(width * window.aspect for window in windows)
-    height = head + tallest + foot + key
+    key, height, width = (
+        _key_height(len(shown)),
+        zoom_height(results, parts),
+        _zoom_width(len(parts)),
+    )
     figure = new_figure(height)
-    for place, window in enumerate(windows):
+    for place, window in enumerate(_zoom_windows(parts)):
         own = width * window.aspect
         axes = figure.add_axes(
             (
-                (left + place * (width + gap)) / WIDTH_IN,
-                (key + foot + tallest - own) / height,
+                (_ZOOM_LEFT + place * (width + _ZOOM_GAP)) / WIDTH_IN,
+                1 - (_ZOOM_HEAD + own) / height,
                 width / WIDTH_IN,
                 own / height,
             )
@@ -197,21 +210,37 @@ def zoom_figure(results: Results, parts: Sequence[Part]) -> Figure:
     return figure
 
 
+def _zoom_width(number: int) -> float:
+    """Return the width of each of so many charts side by side, inches."""
+    return (WIDTH_IN - _ZOOM_LEFT - 0.06 - _ZOOM_GAP * (number - 1)) / number
+
+
 def _zoom_windows(parts: Sequence[Part]) -> list[Window]:
     aspects = (0.45, 0.7) if len(parts) == 1 else (0.7, 1.25)
     return [zoom_window(part.lonlat_deg, aspects=aspects) for part in parts]
 
 
-def versions_figure(results: Results) -> Figure:
-    """Draw one small sky per map version, with the same footprints on each."""
-    number = len(results.maps)
-    columns = min(number, 3)
-    rows = -(-number // columns)
-    middle = _middle_ra(results.sky.maps[-1])
-    window = whole_sky_window(middle)
-    width = WIDTH_IN / columns - 0.12
-    tall = width * window.aspect
-    height = rows * (tall + 0.3)
+def versions_height(results: Results) -> float:
+    """Return the height of `versions_figure`, inches."""
+    columns, width = _versions_grid(results)
+    rows = -(-len(results.maps) // columns)
+    return rows * (width * whole_sky_window(0.0).aspect + 0.3)
+
+
+def _versions_grid(results: Results) -> tuple[int, float]:
+    """Return the columns of small skies, and the width of each in inches."""
+    columns = min(len(results.maps), 3)
+    return columns, WIDTH_IN / columns - 0.12
+
+
+def versions_figure(results: Results, parts: Sequence[Part]) -> Figure:
+    """Draw one small sky per map version, with the same footprints on each.
+
+    The most probable of the ``parts`` is turned to the middle.
+    """
+    window = whole_sky_window(_middle_ra(parts[0]))
+    columns, width = _versions_grid(results)
+    tall, height = width * window.aspect, versions_height(results)
     samples = _samples(window, width)
     everything = Layer(Spans.empty().union(*results.sky.covered), ACCENT, None)
     figure = new_figure(height)
@@ -236,9 +265,8 @@ def _shown(results: Results) -> list[int]:
     return [index for index, region in enumerate(results.sky.covered) if region]
 
 
-def _middle_ra(skymap: SkyMap) -> float:
-    """Return the right ascension, a whole multiple of two hours, that centres the probability."""
-    part = credible_parts(skymap)[0]
+def _middle_ra(part: Part) -> float:
+    """Return the right ascension, a whole multiple of two hours, that centres a part."""
     lon = np.radians(part.lonlat_deg[:, 0])
     return (
         float(30 * round(np.degrees(np.arctan2(np.sin(lon).sum(), np.cos(lon).sum())) / 30)) % 360
