@@ -119,7 +119,7 @@ class _OpenPatches:
     ----------
     starts, stops : int64 arrays, shape (n,)
         Sorted and disjoint.
-    group : int64 array, shape (n,)
+    group : int32 array, shape (n,)
         Which set of the patchwork each belongs to.
     depth : int64 array, shape (n,)
         Orders below the working orders that have been looked at.
@@ -134,7 +134,7 @@ class _OpenPatches:
 
     starts: Ints
     stops: Ints
-    group: Ints
+    group: NDArray[np.int32]
     depth: Ints
     worth: Floats
     cells: Floats
@@ -157,7 +157,9 @@ class _OpenPatches:
         starts, stops = patchwork.starts[rows], patchwork.stops[rows]
         group = patchwork.group[rows]
         rate = sum_by(patchwork.set_of_member, rate, patchwork.sets)[group]
-        depth = np.sum([region.contains(starts) for region in done], axis=0)
+        depth = np.zeros(starts.size, dtype=np.int64)
+        for region in done:
+            depth += region.contains(starts)
         # Each order has halved what is undecided.
         return cls(
             starts,
