@@ -209,7 +209,7 @@ def area_text(value: float, low: float, high: float, *, bracket: bool = False) -
     half_width = (high - low) / 2
     uncertainty = (
         min(max(half_width, _AREA_DIGITS * value), AREA_ACCURACY * value)
-        if half_width > 0
+        if half_width > _EXACT * value  # what is less is the rounding of sums
         else AREA_ACCURACY * value
     )
     decimals = max(0, min(6, -math.floor(math.log10(uncertainty))))
