@@ -15,6 +15,7 @@ from skytally.campaign import AuditOptions, LoadedCampaign
 from skytally.covered import Coverage
 from skytally.field_extinction import bands_without_coefficient
 from skytally.findings import SEVERITIES, Finding, gravest_first
+from skytally.readings import READING_CODES
 from skytally.skymap import SkyMap
 from skytally.space import Space
 
@@ -71,10 +72,19 @@ def audit(
     ]
     found: list[Finding] = []
     silenced: list[Finding] = []
-    for finding in everything:
+    for finding in _one_cause(everything):
         wish = options.get(finding.subject, campaign.audit)
         (silenced if finding.code in wish.silence else found).append(_demoted(finding, wish))
     return tuple(gravest_first(found)), tuple(silenced)
+
+
+def _one_cause(findings: Sequence[Finding]) -> list[Finding]:
+    """Only doubt the clock of a log whose positions are misread: either hides its fields."""
+    misread = {f.subject for f in findings if f.code in READING_CODES and f.severity == "error"}
+    return [
+        replace(f, severity="caution") if f.code == "clock-shifted" and f.subject in misread else f
+        for f in findings
+    ]
 
 
 def _demoted(finding: Finding, wish: AuditOptions) -> Finding:

@@ -254,13 +254,15 @@ def _alike(bands: Iterable[str]) -> list[list[str]]:
 
 
 def _bare(band: str) -> str:
-    """Return the name without punctuation, words for "band", and what stands before its letter.
+    """Return the name without punctuation, words for "band", and what numbers or precedes it.
 
-    "r'", "r_band" and "cam2-r" all become "r".
+    "r'", "r_band", "cam2-r" and "r.02" all become "r"; "H-alpha" is no H.
     """
     words = [x for x in re.split(r"[\W_]+", band) if x and x.casefold() not in _BAND_WORDS]
     if len(words) > 1 and words[-1] in _ONE_LETTER_BANDS:
         return words[-1]
+    if words[:1] and words[0] in _ONE_LETTER_BANDS and all(re.search(r"\d", x) for x in words[1:]):
+        return words[0]
     return "".join(words)
 
 

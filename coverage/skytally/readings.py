@@ -26,7 +26,7 @@ from skytally.shapes import lonlat_to_vector
 from skytally.skymap import SkyMap
 from skytally.visibility import visibility
 
-__all__ = ["Surroundings", "misread_findings"]
+__all__ = ["READING_CODES", "Surroundings", "misread_findings"]
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -128,6 +128,8 @@ _READINGS = (
         partial=True,
     ),
 )
+# Codes of the findings that say so.
+READING_CODES = frozenset(reading.code for reading in _READINGS)
 
 
 class Surroundings:
