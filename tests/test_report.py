@@ -289,7 +289,7 @@ def test_absolute_limits_are_those_of_the_formula(deep: Results, deep_page: Page
 
 def test_findings_say_what_was_seen_done_and_is_to_do(deep_page: Page) -> None:
     row = deep_page.cells["findings"][1]
-    assert row[0] == FINDING.severity
+    assert row[0] == f"{FINDING.severity}{FINDING.code}"
     assert row[1] == f"{FINDING.subject}rows 3, 4"
     assert row[2:] == [FINDING.text, FINDING.done, FINDING.remedy]
 
