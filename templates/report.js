@@ -5,51 +5,37 @@
   const panel = document.getElementById("choose");
   if (!source || !panel || !("DecompressionStream" in window)) return;
   const data = JSON.parse(source.textContent);
-  const NBSP = "\u00a0";
-  const SVG = "http://www.w3.org/2000/svg";
-  const INK = "#1d2226", QUIET = "#565e64", RULE = "#c9ced2", ACCENT = "#0b5d6b";
+  const NBSP = "\u00a0", SVG = "http://www.w3.org/2000/svg", INK = "#1d2226", RULE = "#c9ced2";
   const { kinds, exposures, maps, telescopes, bands, nights, steps, settings } = data;
-  const T = telescopes.length, B = bands.length, N = nights.length;
+  const T = telescopes.length, B = bands.length, N = nights.length, names = telescopes.map((t) => t.name);
 
   // --- Elements ------------------------------------------------------------------------
-
   function make(name, attributes = {}, ...children) {
     const svg = /^(svg|path|rect|line|text|title|g)$/.test(name);
     const element = svg ? document.createElementNS(SVG, name) : document.createElement(name);
-    for (const [key, value] of Object.entries(attributes)) {
+    for (const [key, value] of Object.entries(attributes))
       if (key.startsWith("on")) element.addEventListener(key.slice(2), value);
-      else if (value === true) element.setAttribute(key, "");
-      else if (value !== false && value !== null) element.setAttribute(key, value);
-    }
+      else element.setAttribute(key, value);
     element.append(...children);
     return element;
   }
-  const find = (selector, root = document) => root.querySelector(selector);
+  const find = (selector, root = document) => root?.querySelector(selector);
   const findAll = (selector, root = document) => [...root.querySelectorAll(selector)];
 
   // --- Unpacking -----------------------------------------------------------------------
-
-  async function unpack() {
-    const packed = Uint8Array.from(atob(data.block), (c) => c.charCodeAt(0));
-    const stream = new Blob([packed]).stream().pipeThrough(new DecompressionStream("deflate"));
-    const bytes = new Uint8Array(await new Response(stream).arrayBuffer());
-    const types = { u1: Uint8Array, u2: Uint16Array, u4: Uint32Array, f4: Float32Array, f8: Float64Array };
-    const columns = {};
-    let at = 0;
-    for (const [name, type, length] of data.columns) {
-      const width = Number(type[1]);
-      const out = new Uint8Array(length * width);
-      for (let plane = 0; plane < width; plane++)
-        for (let i = 0; i < length; i++) out[i * width + plane] = bytes[at + plane * length + i];
-      columns[name] = new types[type](out.buffer);
-      at += length * width;
-    }
-    return columns;
+  const packed = new Blob([Uint8Array.from(atob(data.block), (c) => c.charCodeAt(0))]);
+  const stream = packed.stream().pipeThrough(new DecompressionStream("deflate"));
+  const bytes = new Uint8Array(await new Response(stream).arrayBuffer());
+  const types = { u1: Uint8Array, u2: Uint16Array, u4: Uint32Array, f4: Float32Array, f8: Float64Array };
+  const columns = {};
+  let at = 0;
+  for (const [name, type, length] of data.columns) {
+    const width = Number(type[1]), out = new Uint8Array(length * width);
+    for (let plane = 0; plane < width; plane++)
+      for (let i = 0; i < length; i++) out[i * width + plane] = bytes[at++];
+    columns[name] = new types[type](out.buffer);
   }
-
-  const columns = await unpack();
-  const rows = columns.count.length;
-  const FORMS = data.brackets ? [0, 1, 2] : [0];
+  const rows = columns.count.length, FORMS = data.brackets ? [0, 1, 2] : [0];
   const members = new Uint32Array(columns.members.length);
   for (let row = 0, at = 0; row < rows; row++)
     for (let i = 0, kind = 0; i < columns.count[row]; i++, at++) members[at] = kind += columns.members[at];
@@ -57,9 +43,8 @@
 
   // A row's places lie outside a credible region, inside, or across its edge.
   function inRegion(name, whole) {
-    const place = columns[`${name}.place`], across = columns[name];
     let next = 0;
-    return Float64Array.from(place, (where, row) => [0, whole[row], where === 2 ? across[next++] : 0][where]);
+    return Float64Array.from(columns[`${name}.place`], (where, row) => (where === 2 ? columns[name][next++] : where && whole[row]));
   }
   const worth = maps.map((_, m) => {
     const p = FORMS.map((form) => columns[`map${m}.p${form}`]);
@@ -68,56 +53,36 @@
   });
 
   // --- The tally -----------------------------------------------------------------------
-
-  const everything = () => ({
-    map: maps.length - 1,
-    telescopes: telescopes.map(() => true),
-    bands: bands.map(() => true),
-    step: steps.length - 1,
-    visits: 1,
-  });
+  const yes = (list) => list.map(() => true);
+  const everything = () => ({ map: maps.length - 1, telescopes: yes(telescopes), bands: yes(bands), step: steps.length - 1, visits: 1 });
   const isEverything = (c) => JSON.stringify(c) === JSON.stringify(everything());
 
   // Groups of visits: all, each telescope, each band, each night.
   const ALL = 0, ofTelescope = (t) => 1 + t, ofBand = (b) => 1 + T + b, ofNight = (n) => 1 + T + B + n;
   const GROUPS = 1 + T + B + N;
-
-  function emptySum() {
-    return { area: [0, 0, 0], p: [0, 0, 0], p50: 0, p90: 0, a90: 0, again: 0, alone: 0, credit: 0, exposures: 0, depths: [], ends: [], starts: [] };
-  }
+  const groupsOf = (k, night) => [ALL, ofTelescope(kinds.telescope[k]), ofBand(kinds.band[k]), ofNight(night)];
+  const emptySum = () => ({ area: [0, 0, 0], p: [0, 0, 0], p50: 0, p90: 0, a90: 0, again: 0, alone: 0, credit: 0, exposures: 0, depths: [], ends: [], starts: [] });
   function addRow(sum, row, w) {
-    for (const form of FORMS) {
-      sum.area[form] += area[form][row];
-      sum.p[form] += w.p[form][row];
-    }
-    sum.p50 += w.p50[row];
-    sum.p90 += w.p90[row];
-    sum.a90 += w.a90[row];
+    for (const form of FORMS) sum.area[form] += area[form][row];
+    for (const form of FORMS) sum.p[form] += w.p[form][row];
+    for (const part of ["p50", "p90", "a90"]) sum[part] += w[part][row];
   }
-
   function tally(choice) {
     const chosen = kinds.step.map((step, k) => choice.telescopes[kinds.telescope[k]] && choice.bands[kinds.band[k]] && step <= choice.step);
-    const sums = Array.from({ length: GROUPS }, emptySum);
-    const byMap = maps.map(emptySum);
+    const sums = Array.from({ length: GROUPS }, emptySum), byMap = maps.map(emptySum), w = worth[choice.map];
     const lines = Array.from({ length: 1 + T }, () => new Float64Array(steps.length));
-    const number = new Uint32Array(GROUPS), first = new Float64Array(GROUPS), last = new Float64Array(GROUPS);
-    const reached = new Int32Array(GROUPS);
-    const w = worth[choice.map];
+    const [number, first, last, reached] = Array.from({ length: 4 }, () => new Float64Array(GROUPS));
     for (let row = 0, at = 0; row < rows; row++) {
       const touched = [];
       for (const end = at + columns.count[row]; at < end; at++) {
         const k = members[at];
         if (!chosen[k]) continue;
-        const start = data.whole ? kinds.start[k] : 0;
-        const groups = [ALL, ofTelescope(kinds.telescope[k]), ofBand(kinds.band[k])];
-        if (data.whole) groups.push(ofNight(kinds.night[k]));
-        for (const group of groups) {
-          if (number[group]++ === 0) {
-            touched.push(group);
-            first[group] = last[group] = start;
-          }
-          if (start < first[group]) first[group] = start;
-          if (start > last[group]) last[group] = start;
+        const start = kinds.start?.[k] ?? 0;
+        for (const group of groupsOf(k, kinds.night[k])) {
+          const fresh = number[group]++ === 0;
+          if (fresh) touched.push(group);
+          first[group] = fresh ? start : Math.min(first[group], start);
+          last[group] = fresh ? start : Math.max(last[group], start);
           // Members come in order of the steps, so this is the visit that completes it.
           if (number[group] === choice.visits) reached[group] = kinds.step[k];
         }
@@ -141,7 +106,7 @@
     exposures.kind.forEach((k, e) => {
       if (!chosen[k]) return;
       if (exposures.force[e] >= 0) byMap[exposures.force[e]].exposures++;
-      for (const group of [ALL, ofTelescope(kinds.telescope[k]), ofBand(kinds.band[k]), ofNight(exposures.night[e])]) {
+      for (const group of groupsOf(k, exposures.night[e])) {
         sums[group].exposures++;
         sums[group].starts.push(exposures.start[e]);
         sums[group].ends.push(exposures.end[e]);
@@ -151,31 +116,24 @@
     for (const sum of sums) for (const times of [sum.starts, sum.ends]) times.sort();
     return { choice, chosen, sums, byMap, lines };
   }
-
   // Twice the standard error of the centre rule, as the tally estimates it.
   function centreError(result, group, map, width) {
     const fields = new Set();
-    exposures.kind.forEach((k, e) => {
-      const groups = [ALL, ofTelescope(kinds.telescope[k]), ofBand(kinds.band[k]), ofNight(exposures.night[e])];
-      if (result.chosen[k] && groups.includes(group)) fields.add(exposures.footprint[e]);
-    });
+    exposures.kind.forEach((k, e) => result.chosen[k] && groupsOf(k, exposures.night[e]).includes(group) && fields.add(exposures.footprint[e]));
     let total = 0, square = 0;
     for (const field of fields) {
-      const strip = worth[map].strip[field];
-      total += strip;
-      square += (0.06 * strip) ** 2 / Math.sqrt(data.pieces[field]);
+      total += worth[map].strip[field];
+      square += (0.06 * worth[map].strip[field]) ** 2 / Math.sqrt(data.pieces[field]);
     }
     return total > 0 ? Math.min(2 * Math.sqrt(square) * Math.min(width / total, 1), width) : 0;
   }
 
   // --- Words, as the report has them ---------------------------------------------------
-
   const EXACT = data.whole ? 1e-9 : 1e-6;
   const WORDS = "no one two three four five six seven eight nine ten eleven twelve".split(" ");
   const numberText = (value, digits = 0) =>
     value.toLocaleString("en-US", { minimumFractionDigits: digits, maximumFractionDigits: digits }).replace(/^-/, "−");
-  const plural = (noun, n) => `${n === 0 ? "no" : numberText(n)}${NBSP}${noun}${n === 1 ? "" : "s"}`;
-  const inWords = (noun, n) => `${WORDS[n] ?? numberText(n)}${NBSP}${noun}${n === 1 ? "" : "s"}`;
+  const plural = (noun, n, words = n === 0) => `${(words && WORDS[n]) || numberText(n)}${NBSP}${noun}${n === 1 ? "" : "s"}`;
   const join = (words) => (words.length < 2 ? words.join("") : `${words.slice(0, -1).join(", ")} and ${words.at(-1)}`);
   const utc = (iso) => `${iso.slice(0, 10)} ${iso.slice(11, 16)}${NBSP}UTC`;
   const hoursText = (hours) => `${numberText(hours, Math.abs(hours) < 9.995 ? 2 : Math.abs(hours) < 99.95 ? 1 : 0)}${NBSP}h`;
@@ -192,7 +150,6 @@
     if (Number(text) >= 100) return `>${NBSP}${(100 - 10 ** -digits).toFixed(digits)}${tail}`;
     return text + tail;
   }
-
   // The value, and its bracket where it is known and as narrow as was aimed at.
   function probabilityText(result, group, map, sum) {
     const [value, low, high] = sum.p;
@@ -212,45 +169,40 @@
     const bracket = `${lower === 0 ? "0" : numberText(lower, digits)}–${upper >= 100 ? "100" : numberText(upper, digits)}${NBSP}%`;
     return [percent(value, digits), bracket];
   }
-
+  // A union is known to a thousandth whatever its bracket; places visited more often are not.
   function areaText([value, low, high]) {
     if (value <= 0) return `0${NBSP}deg²`;
-    const half = (high - low) / 2;
-    const error = half > 0 ? Math.min(half, 0.001 * value) : 0.001 * value;
+    const half = (high - low) / 2, most = choice.visits > 1 ? Infinity : 0.001 * value;
+    const error = half > 1e-9 * value ? Math.min(Math.max(half, 1e-4 * value), most) : 0.001 * value;
     return `${numberText(value, clamp(-Math.floor(Math.log10(error)), 0, 6))}${NBSP}deg²`;
   }
-
   function median(values) {
-    const sorted = [...values].sort((a, b) => a - b), half = sorted.length >> 1;
-    return sorted.length % 2 ? sorted[half] : (sorted[half - 1] + sorted[half]) / 2;
+    const sorted = [...values].sort((a, b) => a - b), last = sorted.length - 1;
+    return (sorted[last >> 1] + sorted[(last + 1) >> 1]) / 2;
   }
-  const medians = (result) =>
-    bands.map((band, b) => ({ band, depths: result.sums[ofBand(b)].depths })).filter((m) => m.depths.length)
+  const medians = ({ sums }) =>
+    bands.map((band, b) => ({ band, depths: sums[ofBand(b)].depths })).filter((m) => m.depths.length)
       .map((m) => ({ band: m.band, limit: median(m.depths), text: `${numberText(median(m.depths), 2)}${NBSP}mag` }));
-
   const versionText = (map) => `map version “${maps[map].version}”`;
   const timesText = (visits) => (visits < 2 ? "" : visits === 2 ? " at least twice" : ` at least ${WORDS[visits] ?? visits} times`);
 
+  function depthText(limits) {
+    if (!limits.length) return "; their logs hold no limiting magnitude";
+    const named = limits.sort((a, b) => a.limit - b.limit).map((limit) => `${limit.text} in ${limit.band}`);
+    const many = limits.length > 3 ? `between ${named[0]} and ${named.at(-1)}` : `of ${join(named)}`;
+    return `, to ${limits.length === 1 ? "a median limit" : "median limits"} ${many} (${settings.terms})`;
+  }
   function headlineText(result) {
     const { choice, sums } = result, all = sums[ALL], event = data.event.name;
     if (!all.exposures) return `No exposure of ${event} is in this choice, so it covers nothing.`;
     const used = telescopes.filter((_, t) => sums[ofTelescope(t)].exposures).length;
     const end = all.ends.at(-1), hours = hoursSince(end);
-    const who = `By ${utc(end)}, ${hoursText(Math.abs(hours))} ${hours < 0 ? "before" : "after"} the event, ${inWords("telescope", used)} ${used === 1 ? "has" : "have"} covered`;
+    const who = `By ${utc(end)}, ${hoursText(Math.abs(hours))} ${hours < 0 ? "before" : "after"} the event, ${plural("telescope", used, true)} ${used === 1 ? "has" : "have"} covered`;
     const what = `the probability of ${versionText(choice.map)} for ${event}${timesText(choice.visits)}`;
     if (all.p[0] <= 0) return `${who} none of ${what}, with ${plural("exposure", all.exposures)}.`;
     const [value, bracket] = probabilityText(result, ALL, choice.map, all);
     return `${who} ${value}${bracket && ` (${bracket})`} of ${what}, with ${plural("exposure", all.exposures)} over ${areaText(all.area)}${depthText(medians(result))}.`;
   }
-  function depthText(limits) {
-    if (!limits.length) return "; their logs hold no limiting magnitude";
-    const named = (limit) => `${limit.text} in ${limit.band}`;
-    if (limits.length < 4)
-      return `, to ${limits.length === 1 ? "a median limit" : "median limits"} of ${join(limits.map(named))} (${settings.terms})`;
-    const sorted = [...limits].sort((a, b) => a.limit - b.limit);
-    return `, to median limits between ${named(sorted[0])} and ${named(sorted.at(-1))} (${settings.terms})`;
-  }
-
   function choiceText(choice) {
     const named = (flags, all, noun) => {
       const some = all.filter((_, i) => flags[i]);
@@ -258,17 +210,17 @@
     };
     const cut = choice.step < steps.length - 1 ? `; ended by ${steps[choice.step].text} (${steps[choice.step].since} after the event)` : "";
     const visits = choice.visits > 1 ? `; places visited${timesText(choice.visits)}` : "";
-    return `A choice on ${versionText(choice.map)}: ${named(choice.telescopes, telescopes.map((t) => t.name), "telescope")}; ${named(choice.bands, bands, "band")}${cut}${visits}.`;
+    return `A choice on ${versionText(choice.map)}: ${named(choice.telescopes, names, "telescope")}; ${named(choice.bands, bands, "band")}${cut}${visits}.`;
   }
 
   // --- Tables --------------------------------------------------------------------------
-
   const tables = findAll(".scroll > table").map((table) => {
     const body = [...find("tbody", table).rows];
     return { name: table.className, table, body: body.filter((row) => !row.classList.contains("total")), total: body.find((row) => row.classList.contains("total")), sort: null };
   });
   const tableOf = (name) => tables.find((t) => t.name === name);
   const nameOf = (row) => row.cells[0].textContent;
+  const followed = ["telescopes", "bands", "maps", ...(data.whole ? ["nights"] : []), ...(data.stepHours === 0 ? ["milestones"] : [])];
 
   // What a choice changes, as it was; put back when nothing is chosen any more.
   const originals = new Map();
@@ -277,78 +229,58 @@
     return element;
   }
   function restore() {
-    for (const [element, nodes] of originals) {
-      element.replaceChildren(...nodes.map((node) => node.cloneNode(true)));
-      element.closest("tr")?.classList.remove("out");
-    }
+    for (const [element, nodes] of originals) element.replaceChildren(...nodes.map((node) => node.cloneNode(true)));
+    for (const row of findAll('tr.out, tr[class=""]')) row.removeAttribute("class");
   }
-  function say(element, text) {
+  function say(selector, text) {
+    const element = find(selector);
     if (element) keep(element).textContent = text;
   }
-  function setCell(cell, text, detail = "", bar = null) {
-    keep(cell);
-    const drawn = find("svg.bar", cell);
-    cell.replaceChildren(text);
-    if (detail) cell.append(make("span", { class: "detail" }, detail));
-    if (!drawn) return;
-    drawn.lastElementChild.setAttribute("width", (100 * clamp(bar ?? 0, 0, 1)).toFixed(2));
-    cell.append(drawn);
+  function setCell(cell, text, detail = "", bar = 0) {
+    const drawn = find("svg.bar", keep(cell));
+    cell.replaceChildren(text, ...(detail ? [make("span", { class: "detail" }, detail)] : []), ...(drawn ? [drawn] : []));
+    drawn?.lastElementChild.setAttribute("width", (100 * clamp(bar, 0, 1)).toFixed(2));
   }
   // Fill the last cells of a row; null leaves one as it is.
-  function fill(row, cells) {
-    const from = row.cells.length - cells.length;
-    cells.forEach((cell, i) => cell && setCell(row.cells[from + i], ...cell));
-  }
-  function fillRows(name, groupOf, scale, cells) {
-    for (const row of tableOf(name)?.body ?? []) {
-      const group = groupOf(nameOf(row));
-      if (group === null) continue;
-      const sum = scale.sums[group];
+  const fill = (row, cells) => cells.forEach((cell, i) => cell && setCell(row.cells[row.cells.length - cells.length + i], ...cell));
+  function fillRows(name, names, groupOf, { sums }, cells) {
+    const table = followed.includes(name) && tableOf(name);
+    if (!table) return;
+    for (const row of table.body) {
+      const at = names.indexOf(nameOf(row));
+      if (at < 0) continue;
+      const sum = sums[groupOf(at)];
       row.classList.toggle("out", !sum.exposures);
-      fill(row, cells(sum, group).map((cell) => (sum.exposures ? cell : cell && ["—"])));
+      fill(row, sum.exposures ? cells(sum, groupOf(at)) : cells(sum, groupOf(at)).map(() => ["—"]));
     }
+    if (table.total) fill(table.total, cells(sums[ALL], ALL));
   }
-  const indexIn = (names, groupOf) => (name) => (names.includes(name) ? groupOf(names.indexOf(name)) : null);
-  const again = (sum) => [data.whole ? percent(sum.again) : "—"];
-
   function fillTables(result) {
-    const { sums, byMap, choice } = result;
-    const covered = (sum, group, map, most) => {
-      const [text, detail] = probabilityText(result, group, map, sum);
-      return [text, detail, most > 0 ? sum.p[0] / most : 0];
-    };
+    const { sums, byMap, choice } = result, all = sums[ALL];
+    const covered = (sum, group, map, most) => [...probabilityText(result, group, map, sum), most > 0 ? sum.p[0] / most : 0];
+    const most = (group, list) => Math.max(...list.map((_, i) => sums[group(i)].p[0]));
     const count = (sum) => [numberText(sum.exposures)];
-    const names = telescopes.map((t) => t.name), all = sums[ALL];
-    fillRows("telescopes", indexIn(names, ofTelescope), result, (sum, group) => [
-      count(sum), [areaText(sum.area)], covered(sum, group, choice.map, all.p[0]), [percent(sum.alone)], [percent(sum.credit)], again(sum),
+    const again = (sum) => [data.whole ? percent(sum.again) : "—"];
+    fillRows("telescopes", names, ofTelescope, result, (sum, group) => [
+      ...[count(sum), [areaText(sum.area)], covered(sum, group, choice.map, all.p[0])],
+      ...(group === ALL ? [null, [percent(all.p[0])]] : [[percent(sum.alone)], [percent(sum.credit)]]),
+      again(sum),
     ]);
-    const total = tableOf("telescopes")?.total;
-    if (total) fill(total, [count(all), [areaText(all.area)], covered(all, ALL, choice.map, all.p[0]), null, [percent(all.p[0])], again(all)]);
-    const most = (group, n) => Math.max(0, ...Array.from({ length: n }, (_, i) => sums[group(i)].p[0]));
-    fillRows("bands", indexIn(bands, ofBand), result, (sum, group) => [
-      count(sum), [areaText(sum.area)], covered(sum, group, choice.map, most(ofBand, B)), [percent(sum.p90)], again(sum),
+    fillRows("bands", bands, ofBand, result, (sum, group) => [
+      count(sum), [areaText(sum.area)], covered(sum, group, choice.map, most(ofBand, bands)), [percent(sum.p90)], again(sum),
     ]);
-    if (data.whole)
-      fillRows("nights", indexIn(nights, ofNight), result, (sum, group) => [
-        sum.exposures ? [utc(sum.starts[0])] : [""], sum.exposures ? [utc(sum.ends.at(-1))] : [""],
-        count(sum), [areaText(sum.area)], covered(sum, group, choice.map, most(ofNight, N)),
-      ]);
+    fillRows("nights", nights, ofNight, result, (sum, group) => [
+      [utc(sum.starts[0] ?? "")], [utc(sum.ends.at(-1) ?? "")], count(sum), [areaText(sum.area)], covered(sum, group, choice.map, most(ofNight, nights)),
+    ]);
+    fillRows("milestones", names, ofTelescope, result, (sum, group) => milestones(result, group));
     const best = Math.max(...byMap.map((sum) => sum.p[0]));
     for (const row of tableOf("maps")?.body ?? []) {
-      const m = maps.findIndex((map) => map.version === nameOf(row));
-      if (m < 0) continue;
-      const sum = byMap[m];
-      fill(row, [count(sum), covered(sum, ALL, m, best), [percent(sum.p50)], [percent(sum.p90)], [percent(sum.a90 / maps[m].area90)]]);
+      const m = maps.findIndex((map) => map.version === nameOf(row)), sum = byMap[m];
+      if (sum) fill(row, [count(sum), covered(sum, ALL, m, best), [percent(sum.p50)], [percent(sum.p90)], [percent(sum.a90 / maps[m].area90)]]);
     }
-    if (data.stepHours === 0)
-      fillRows("milestones", indexIn(names, ofTelescope), result, (sum, group) => milestones(result, group));
-    const last = tableOf("milestones")?.total;
-    if (last && data.stepHours === 0) fill(last, milestones(result, ALL));
   }
-
   function milestones(result, group) {
-    const sum = result.sums[group], final = sum.p[0];
-    const points = curve(result, group);
+    const final = result.sums[group].p[0], points = curve(result, group);
     if (!points.length || final <= 0) return [["—"], ["—"], ["—"], ["—"], [percent(final)]];
     const when = (part) => points.find((point) => point.p >= part * final * (1 - 1e-12)).hours;
     return [[signed(points[0].hours)], [signed(when(0.5))], [signed(when(0.9))], [signed(points.at(-1).hours)], [percent(final)]];
@@ -357,53 +289,45 @@
   function curve(result, group) {
     const found = [];
     let p = 0;
-    result.lines[group].forEach((gain, step) => {
-      if (gain > 0) found.push({ hours: steps[step].hours, p: (p += gain) });
-    });
+    result.lines[group].forEach((gain, step) => gain > 0 && found.push({ hours: steps[step].hours, p: (p += gain) }));
     return found;
   }
-
   function fillKeyFigures(result) {
     const { choice, sums } = result, all = sums[ALL], map = maps[choice.map];
     const [value, bracket] = probabilityText(result, ALL, choice.map, all);
     const exact = (a) => areaText([a, a, a]);
     const byBand = Object.fromEntries(medians(result).map((m) => [`median limit in ${m.band}`, [m.text, settings.terms]]));
+    const revisits = [percent(all.again), `≥${NBSP}${settings.revisitVisits} visits, ≥${NBSP}${settings.revisitMinutes}${NBSP}min`];
     const figures = {
       "probability covered": [value, bracket || `of “${map.version}”`],
       "area observed": [areaText(all.area), `by ${plural("exposure", all.exposures)}`],
       [`of the 90${NBSP}% region`]: [percent(all.a90 / map.area90), `${exact(all.a90)} of ${exact(map.area90)}`],
-      revisited: data.whole ? [percent(all.again), `≥${NBSP}${settings.revisitVisits} visits, ≥${NBSP}${settings.revisitMinutes}${NBSP}min`] : ["—", "not known for a choice"],
+      revisited: data.whole ? revisits : ["—", "not known for a choice"],
       ...byBand,
     };
-    for (const figure of findAll(".key-figures > div")) {
-      const label = find("dt", figure).textContent;
-      setCell(find("dd", figure), ...(figures[label] ?? ["—", "none in this choice"]));
-    }
+    for (const figure of findAll(".key-figures > div"))
+      setCell(find("dd", figure), ...(figures[find("dt", figure).textContent] ?? ["—", "none in this choice"]));
   }
 
   // --- Sorting and copying -------------------------------------------------------------
-
   const ASCII = { "–": "-", "—": "-", "−": "-", "±": "+/-", "σ": "sigma", "²": "^2", "³": "^3", "≥": ">=", "≤": "<=", "“": '"', "”": '"', "‘": "'", "’": "'", "×": "x", "·": "-", "…": "..." };
   const plain = (text) => text.replace(/\s+/g, " ").replace(/[–—−±σ²³≥≤“”‘’×·…]/g, (c) => ASCII[c]).trim();
   const cellText = (cell) => {
-    const detail = find(".detail", cell)?.textContent ?? "";
-    const text = detail ? cell.textContent.slice(0, -detail.length) : cell.textContent;
-    return plain(detail ? `${text} (${detail})` : text);
+    const detail = find(".detail", cell)?.textContent;
+    return plain(detail ? `${cell.textContent.slice(0, -detail.length)} (${detail})` : cell.textContent);
   };
   function tableText({ table }) {
     const lines = [...table.rows].map((row) => [...row.cells].map(cellText));
     const widths = lines[0].map((_, i) => Math.max(...lines.map((line) => (line[i] ?? "").length)));
-    const numeric = [...table.tHead.rows[0].cells].map((cell) => cell.classList.contains("number"));
-    const rowText = (line) => line.map((text, i) => (numeric[i] ? text.padStart(widths[i]) : text.padEnd(widths[i]))).join("  ").trimEnd();
+    const pad = [...table.tHead.rows[0].cells].map((cell) => (cell.classList.contains("number") ? "padStart" : "padEnd"));
+    const rowText = (line) => line.map((text, i) => text[pad[i]](widths[i])).join("  ").trimEnd();
     return [plain(find("caption", table).textContent), ...lines.map(rowText)].join("\n") + "\n";
   }
   async function copy(text, button) {
     try {
       await navigator.clipboard.writeText(text);
     } catch {
-      const area = make("textarea", { readonly: true, "aria-label": "Text to copy" });
-      area.value = text;
-      document.body.append(area);
+      const area = document.body.appendChild(make("textarea", { "aria-label": "Text to copy" }, text));
       area.select();
       document.execCommand("copy");
       area.remove();
@@ -415,27 +339,25 @@
   const copyButton = (label, textOf) => make("button", { type: "button", class: "tool", onclick: (event) => copy(textOf(), event.currentTarget) }, label);
 
   function sortValue(cell, numeric) {
-    const text = plain(cell.firstElementChild?.matches("svg.swatch") ? cell.textContent : cellText(cell));
-    if (!numeric) return text;
-    const number = text.match(/-?[\d,]*\.?\d+/);
-    return number ? Number(number[0].replaceAll(",", "")) : null;
+    const number = cellText(cell).match(/-?[\d,]*\.?\d+/);
+    return !numeric ? cellText(cell) : number && Number(number[0].replaceAll(",", ""));
   }
   function applySort(t) {
     if (!t.sort) return;
-    const { column, falling } = t.sort;
-    const numeric = t.table.tHead.rows[0].cells[column].classList.contains("number");
+    const { column, falling, numeric } = t.sort;
     const keyed = t.body.map((row) => ({ row, key: sortValue(row.cells[column], numeric) }));
     // Missing numbers stay last either way.
     keyed.sort((a, b) => (a.key === null) - (b.key === null) || (falling ? -1 : 1) * (numeric ? a.key - b.key : a.key.localeCompare(b.key, "en", { numeric: true })));
     for (const { row } of keyed) row.parentNode.insertBefore(row, t.total ?? null);
   }
   for (const t of tables) {
-    [...t.table.tHead.rows[0].cells].forEach((head, column) => {
+    const heads = [...t.table.tHead.rows[0].cells];
+    heads.forEach((head, column) => {
       const numeric = head.classList.contains("number");
       const press = () => {
         const falling = t.sort?.column === column ? !t.sort.falling : numeric;
-        t.sort = { column, falling };
-        for (const other of t.table.tHead.rows[0].cells) other.removeAttribute("aria-sort");
+        t.sort = { column, falling, numeric };
+        for (const other of heads) other.removeAttribute("aria-sort");
         head.setAttribute("aria-sort", falling ? "descending" : "ascending");
         applySort(t);
       };
@@ -445,15 +367,17 @@
   }
 
   // --- Charts --------------------------------------------------------------------------
-
   const text = (x, y, words, more = {}) => make("text", { x, y, fill: INK, "font-size": 7, "font-family": "DejaVu Sans, Verdana, sans-serif", ...more }, words);
+  const middle = { "text-anchor": "middle" }, end = { "text-anchor": "end" };
   const rule = (x1, y1, x2, y2, more = {}) => make("line", { x1, y1, x2, y2, stroke: RULE, "stroke-width": 0.6, ...more });
   const drawing = (height, label, ...children) => make("svg", { class: "figure", viewBox: `0 0 482.4 ${height}`, role: "img", "aria-label": label }, ...children);
-  function redraw(name, draw) {
-    const chart = find(`#figure-${name} .chart`);
-    if (chart) keep(chart).replaceChildren(draw());
+  function redraw(name, drawing, caption) {
+    const figure = find(`#figure-${name}`);
+    if (!figure) return;
+    keep(find(".chart", figure)).replaceChildren(drawing);
+    const words = keep(find("figcaption", figure));
+    words.replaceChildren(words.firstElementChild, ` ${caption}`);
   }
-
   function creditBar(result) {
     const all = result.sums[ALL].p[0], width = 480, x0 = 1.2;
     const parts = telescopes.map((t, i) => ({ ...t, credit: result.sums[ofTelescope(i)].credit })).filter((t) => t.credit > 0).sort((a, b) => b.credit - a.credit);
@@ -464,35 +388,32 @@
     let x = x0;
     const unnamed = [];
     for (const t of parts) {
-      const wide = (width * t.credit) / all, middle = { "text-anchor": "middle" };
+      const wide = (width * t.credit) / all;
       svg.append(make("rect", { x, y: 34, width: wide, height: 14, fill: t.colour, stroke: "#fff", "stroke-width": 0.8 }));
       if (wide > 4.7 * Math.max(t.name.length, 6)) svg.append(text(x + wide / 2, 57, t.name, middle), text(x + wide / 2, 66, percent(t.credit), middle));
       else unnamed.push(`${t.name} ${percent(t.credit)}`);
       x += wide;
     }
-    const rest = unnamed.length > 4 ? `${unnamed.slice(0, 4).join(", ")}, ${unnamed.length - 4} more` : unnamed.join(", ");
-    svg.append(text(x0 + width, 75, rest && `then ${rest}`, { "text-anchor": "end" }), text(x0, 6, `${percent(all)} covered by the choice`));
+    const rest = [...unnamed.slice(0, 4), ...(unnamed.length > 4 ? [`${unnamed.length - 4} more`] : [])].join(", ");
+    svg.append(text(x0 + width, 75, rest && `then ${rest}`, end), text(x0, 6, `${percent(all)} covered by the choice`));
     return svg;
   }
-
   function timeline(result) {
-    const curves = [ALL, ...telescopes.map((_, t) => ofTelescope(t))].map((group) => ({ group, points: curve(result, group) })).filter((c) => c.points.length);
+    const curves = result.lines.map((_, group) => ({ group, points: curve(result, group) })).filter((c) => c.points.length);
     const final = result.sums[ALL].p[0], [left, right, top, bottom] = [34, 400, 14, 178];
     const svg = drawing(208, `Probability covered by the choice against hours since the event; in the end ${percent(final)}.`);
     if (!curves.length) return svg.append(text(left, 60, "Nothing is covered.")), svg;
     const times = curves.flatMap((c) => c.points.map((point) => point.hours));
-    const low = Math.min(...times), high = Math.max(...times) * 1.02 + 0.01, log = low > 0 && high / low > 20;
-    const from = log ? low * 0.8 : Math.min(0, low), scale = log ? Math.log : (v) => v;
-    const x = (hours) => left + ((right - left) * (scale(hours) - scale(from))) / (scale(high) - scale(from));
+    const from = Math.min(0, ...times), high = Math.max(...times) + 0.1;
+    const x = (hours) => left + ((right - left) * (hours - from)) / (high - from);
     const unit = 10 ** Math.floor(Math.log10(final)), step = [0.2, 0.5, 1, 2].map((s) => s * unit).find((s) => final / s <= 5) ?? unit;
     const y = (p) => bottom - ((bottom - top) * p) / (Math.ceil(final / step) * step);
     for (let p = 0; p <= final + step * 0.999; p += step)
-      svg.append(rule(left, y(p), right, y(p)), text(left - 4, y(p) + 2.5, numberText(100 * p, step < 0.001 ? 2 : step < 0.01 ? 1 : 0), { "text-anchor": "end" }));
+      svg.append(rule(left, y(p), right, y(p)), text(left - 4, y(p) + 2.5, numberText(100 * p, step < 0.001 ? 2 : step < 0.01 ? 1 : 0), end));
     const gap = [0.1, 0.25, 0.5, 1, 2, 4, 6, 12, 24, 48, 96, 240, 480].find((g) => (high - from) / g <= 8) ?? 960;
-    const marks = log ? [0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1, 2, 5, 10, 20, 50, 100, 200, 500, 1000] : Array.from({ length: 10 }, (_, i) => (Math.ceil(from / gap) + i) * gap);
-    for (const h of marks.filter((h) => h >= from && h <= high))
-      svg.append(rule(x(h), bottom, x(h), bottom + 3), text(x(h), bottom + 12, numberText(h, h && Math.abs(h) < 1 ? 2 : 0), { "text-anchor": "middle" }));
-    svg.append(text((left + right) / 2, 203, "hours since the event", { "text-anchor": "middle" }), text(0, 8, `covered, % of all probability`));
+    for (let h = Math.ceil(from / gap) * gap; h <= high; h += gap)
+      svg.append(rule(x(h), bottom, x(h), bottom + 3), text(x(h), bottom + 12, numberText(h, gap < 1 ? 2 : 0), middle));
+    svg.append(text((left + right) / 2, 203, "hours since the event", middle), text(0, 8, "covered, % of all probability"));
     let above = Infinity;
     const ends = curves.map((c) => ({ ...c, at: y(c.points.at(-1).p) })).sort((a, b) => b.at - a.at);
     for (const { group, points, at } of ends) {
@@ -506,22 +427,21 @@
   }
 
   // --- Fields on the chart -------------------------------------------------------------
-
-  const byField = new Map();
+  const byField = new Map(), overlays = [], zoom = find("#figure-zoom .chart");
   exposures.footprint.forEach((field, e) => byField.set(field, [...(byField.get(field) ?? []), e]));
-  const overlays = [];
-  const zoom = find("#figure-zoom .chart");
   const fieldName = (field, chosen) => {
     const shown = byField.get(field).filter((e) => chosen[exposures.kind[e]]);
     const first = shown.slice(0, 8).map((e) => `${exposures.name[e]} (${bands[kinds.band[exposures.kind[e]]]}, ${utc(exposures.start[e])})`);
-    return `${telescopes[kinds.telescope[exposures.kind[byField.get(field)[0]]]].name}: ${join(first)}${shown.length > 8 ? ` and ${shown.length - 8} more` : ""}`;
+    return `${names[kinds.telescope[exposures.kind[shown[0]]]]}: ${join(first)}${shown.length > 8 ? ` and ${shown.length - 8} more` : ""}`;
   };
   function layOverlay() {
-    const { panels, left, cut, hulls } = data.charts;
-    if (!zoom || !panels.some((panel) => panel.paths.length)) return;
-    const figure = find("svg.figure", zoom);
-    const hint = `Point at a field, or step through them with the arrow keys, to see its exposures.${hulls ? " Of a camera, the outer edge is drawn." : ""}${cut ? ` The ${numberText(byField.size - left - cut)} most probable of ${numberText(byField.size - left)} fields can be pointed at.` : ""}${left ? ` ${plural("field", left)} given as cells ${left === 1 ? "has" : "have"} no outline.` : ""}`;
-    const readout = make("p", { class: "readout", "aria-live": "polite" }, hint);
+    const { panels, left, cut, hulls } = data.charts, figure = find("svg.figure", zoom);
+    if (!figure || !panels.some((panel) => panel.paths.length)) return;
+    const known = byField.size - left, hint = ["Point at a field, or step through them with the arrow keys, to see its exposures."];
+    if (hulls) hint.push("Of a camera, the outer edge is drawn.");
+    if (cut) hint.push(`The ${numberText(known - cut)} most probable of ${numberText(known)} fields can be pointed at.`);
+    if (left) hint.push(`${plural("field", left)} given as cells ${left === 1 ? "has" : "have"} no outline.`);
+    const readout = make("p", { class: "readout", "aria-live": "polite" }, hint.join(" "));
     const overlay = make("svg", { class: "overlay", viewBox: figure.getAttribute("viewBox"), role: "group", "aria-label": "Fields on the chart" });
     const name = (event) => (readout.textContent = event.currentTarget.getAttribute("aria-label"));
     const walk = (event) => {
@@ -531,9 +451,9 @@
       if (!by || at < 0) return;
       event.preventDefault();
       shown[at].path.setAttribute("tabindex", -1);
-      const next = shown[(at + by + shown.length) % shown.length].path;
-      next.setAttribute("tabindex", 0);
-      next.focus();
+      const { path } = shown[(at + by + shown.length) % shown.length];
+      path.setAttribute("tabindex", 0);
+      path.focus();
     };
     for (const { box, paths } of panels) {
       const frame = make("svg", { x: box[0], y: box[1], width: box[2], height: box[3], viewBox: `0 0 ${10 * box[2]} ${10 * box[3]}` });
@@ -544,9 +464,7 @@
       }
       overlay.append(frame);
     }
-    const layers = make("div", { class: "layers" });
-    figure.before(layers);
-    layers.append(figure, overlay);
+    zoom.append(make("div", { class: "layers" }, figure, overlay));
     zoom.after(readout);
   }
   function showFields({ chosen }, choosing) {
@@ -563,74 +481,61 @@
   }
 
   // --- The choice ----------------------------------------------------------------------
-
   let choice = everything();
   const control = {};
 
   function toAddress(c) {
-    if (isEverything(c)) return "";
-    const query = new URLSearchParams(), whole = everything();
-    if (c.map !== whole.map) query.set("map", maps[c.map].version);
-    const names = (key, flags, all) => {
-      if (flags.every(Boolean)) return;
+    const query = new URLSearchParams();
+    if (c.map < maps.length - 1) query.set("map", maps[c.map].version);
+    for (const [key, flags, all] of [["telescope", c.telescopes, names], ["band", c.bands, bands]]) {
       if (!flags.some(Boolean)) query.append(key, "");
-      all.forEach((one, i) => flags[i] && query.append(key, one));
-    };
-    names("telescope", c.telescopes, telescopes.map((t) => t.name));
-    names("band", c.bands, bands);
-    if (c.step !== whole.step) query.set("until", steps[c.step].until);
+      all.forEach((one, i) => flags[i] && !flags.every(Boolean) && query.append(key, one));
+    }
+    if (c.step < steps.length - 1) query.set("until", steps[c.step].until);
     if (c.visits > 1) query.set("visits", c.visits);
     return `#choice?${query}`;
   }
+  // Take the choice that the address names; returns what is to be said of it.
   function fromAddress() {
-    const c = everything();
-    if (!location.hash.startsWith("#choice?")) return [c, ""];
+    const c = (choice = everything());
+    if (!location.hash.startsWith("#choice?")) return "";
     const query = new URLSearchParams(location.hash.slice(8)), unknown = [];
     const pick = (key, all) => {
       const asked = query.getAll(key);
       unknown.push(...asked.filter((one) => one && !all.includes(one)));
-      return asked.length ? all.map((one) => asked.includes(one)) : all.map(() => true);
+      return all.map((one) => !asked.length || asked.includes(one));
     };
-    c.telescopes = pick("telescope", telescopes.map((t) => t.name));
+    c.telescopes = pick("telescope", names);
     c.bands = pick("band", bands);
-    if (query.has("map")) {
-      const map = maps.findIndex((m) => m.version === query.get("map"));
-      if (map < 0) unknown.push(query.get("map"));
-      else c.map = map;
-    }
+    const map = pick("map", maps.map((m) => m.version)).indexOf(true);
+    if (query.has("map") && map >= 0) c.map = map;
     if (query.has("until")) c.step = Math.max(0, steps.findLastIndex((step) => step.until <= query.get("until")));
     c.visits = clamp(Math.trunc(Number(query.get("visits"))) || 1, 1, data.visits);
-    return [c, unknown.length ? ` The link also names ${join(unknown)}, which this report does not have.` : ""];
+    return unknown.length ? ` The link also names ${join(unknown)}, which this report does not have.` : "";
   }
-
   const status = make("p", { class: "choice", role: "status" });
   function buildControls() {
-    const change = (apply) => (event) => {
-      apply(event.currentTarget);
-      update();
-    };
-    const box = (key, i, label, ...before) => {
-      const input = make("input", { type: "checkbox", onchange: change((e) => (choice[key][i] = e.checked)) });
-      control[key].push(input);
-      return make("label", {}, input, ...before, label);
+    const change = (apply) => (event) => (apply(event.currentTarget), update());
+    const boxes = (key, title, labels) => {
+      control[key] = labels.map((_, i) => make("input", { type: "checkbox", onchange: change((e) => (choice[key][i] = e.checked)) }));
+      return make("fieldset", {}, make("legend", {}, title), ...labels.map((label, i) => make("label", {}, control[key][i], ...label)));
     };
     const swatch = (name) => {
       const row = tableOf("telescopes")?.body.find((r) => nameOf(r) === name);
-      return row && find("svg.swatch", row) ? [find("svg.swatch", row).cloneNode(true)] : [];
+      return find("svg.swatch", row ?? null)?.cloneNode(true) ?? "";
     };
-    control.telescopes = [];
-    control.bands = [];
     control.map = make("select", { id: "choose-map", onchange: change((e) => (choice.map = e.selectedIndex)) }, ...maps.map((m) => make("option", {}, m.version)));
     control.step = make("input", { id: "choose-time", type: "range", min: 0, max: steps.length - 1, oninput: change((e) => (choice.step = Number(e.value))) });
     control.visits = make("select", { id: "choose-visits", onchange: change((e) => (choice.visits = e.selectedIndex + 1)) }, ...Array.from({ length: data.visits }, (_, i) => make("option", {}, String(i + 1))));
     control.time = make("output", { for: "choose-time" });
     const field = (id, label, ...inputs) => make("div", {}, make("label", { for: id }, label), ...inputs);
     const reset = make("button", { type: "button", class: "tool", onclick: () => ((choice = everything()), update()) }, "Show everything");
-    const limits = data.whole ? "" : ` So that this page stays small, time is cut ${data.stepHours === 0 ? "after any exposure" : data.stepHours ? `every ${data.stepHours} h` : "nowhere"} and brackets, nights and revisits are not counted anew for a choice.`;
+    const cuts = { 0: "after any exposure", null: "nowhere" }[data.stepHours] ?? `every ${data.stepHours} h`;
+    const limits = data.whole ? "" : ` So that this page stays small, time is cut ${cuts}, and brackets, nights and revisits are not counted anew for a choice.`;
     panel.append(
       make("h2", { id: "choose-title" }, "Choose what counts"),
-      make("fieldset", {}, make("legend", {}, "Telescopes"), ...telescopes.map((t, i) => box("telescopes", i, t.name, ...swatch(t.name)))),
-      make("fieldset", {}, make("legend", {}, "Bands"), ...bands.map((b, i) => box("bands", i, b))),
+      boxes("telescopes", "Telescopes", names.map((name) => [swatch(name), name])),
+      boxes("bands", "Bands", bands.map((band) => [band])),
       make("div", { class: "fields" },
         field("choose-map", "Map version", control.map), field("choose-visits", "Visits, at least", control.visits),
         field("choose-time", "Exposures that ended by", control.step, control.time)),
@@ -642,21 +547,18 @@
     );
     panel.hidden = false;
   }
-
   // What keeps to the whole campaign says so while a choice is shown.
-  const followed = ["telescopes", "bands", "maps", ...(data.whole ? ["nights"] : []), ...(data.stepHours === 0 ? ["milestones"] : [])];
   const unmoved = [
     ...tables.filter((t) => !followed.includes(t.name) && t.table.closest("#telescopes, #maps, #time, #between, #depth, #distance")).map((t) => t.table.parentNode),
     ...findAll("main figure:not(#figure-credit, #figure-timeline)"),
     ...(data.stepHours === 0 ? [] : findAll("#figure-timeline")),
   ];
-  for (const element of unmoved) element.prepend(make("p", { class: "unmoved" }, element.id === "figure-zoom" ? "Outlined: the fields of the choice. Colours and caption: the whole campaign." : "The whole campaign, not the choice."));
+  for (const element of unmoved)
+    element.prepend(make("p", { class: "unmoved" }, element.id === "figure-zoom" ? "Outlined: the fields of the choice. Colours and caption: the whole campaign." : "The whole campaign, not the choice."));
 
   function update(address = true, remark = "") {
     const result = tally(choice), choosing = !isEverything(choice), step = steps[choice.step];
-    control.map.selectedIndex = choice.map;
-    control.visits.selectedIndex = choice.visits - 1;
-    control.step.value = choice.step;
+    [control.map.selectedIndex, control.visits.selectedIndex, control.step.value] = [choice.map, choice.visits - 1, choice.step];
     control.time.textContent = `${step.text}, ${step.since} after the event`;
     control.step.setAttribute("aria-valuetext", control.time.textContent);
     for (const key of ["telescopes", "bands"]) control[key].forEach((input, i) => (input.checked = choice[key][i]));
@@ -664,25 +566,20 @@
     restore();
     status.textContent = (choosing ? choiceText(choice) : "Everything is shown.") + remark;
     if (choosing) {
-      say(find(".headline"), headlineText(result));
+      say(".headline", headlineText(result));
       fillKeyFigures(result);
       fillTables(result);
-      for (const name of ["telescopes", "between"]) if (name === "telescopes") say(find(`#${name} .lead`), `On ${versionText(choice.map)}, for the choice above.`);
-      say(find("#table-telescopes caption"), `Each telescope of the choice on ${versionText(choice.map)}`);
-      say(find("#table-maps caption"), "The choice on every map version");
-      redraw("credit", () => creditBar(result));
-      if (data.stepHours === 0) redraw("timeline", () => timeline(result));
+      say("#telescopes .lead", `On ${versionText(choice.map)}, for the choice above.`);
+      say("#table-telescopes caption", `Each telescope of the choice on ${versionText(choice.map)}`);
+      say("#table-maps caption", "The choice on every map version");
+      redraw("credit", creditBar(result), "What several telescopes of the choice covered is shared equally among them, so that the shares add up to the total.");
+      if (data.stepHours === 0) redraw("timeline", timeline(result), "Each telescope of the choice counts all it covered, shared or not.");
     }
     for (const t of tables) applySort(t);
     showFields(result, choosing);
-    if (address) history.replaceState(null, "", toAddress(choice) || location.pathname + location.search);
+    if (address) history.replaceState(null, "", choosing ? toAddress(choice) : location.pathname + location.search);
   }
-  function read() {
-    const [asked, remark] = fromAddress();
-    choice = asked;
-    update(false, remark);
-  }
-
+  const read = () => update(false, fromAddress());
   layOverlay();
   buildControls();
   read();

@@ -12,6 +12,7 @@ import json
 import re
 import zlib
 from collections.abc import Mapping, Sequence
+from datetime import datetime, timedelta
 from typing import Any
 
 import numpy as np
@@ -32,6 +33,7 @@ Floats = NDArray[np.float64]
 
 # How a row's places lie to a credible region.
 _OUTSIDE, _INSIDE, _ACROSS = range(3)
+_MJD_EPOCH = datetime(1858, 11, 17)
 # Two sums of the same cells in another order agree this closely.
 _SAME = 1e-12
 
@@ -146,9 +148,16 @@ def _steps(sets: PageSets, event_mjd: float) -> list[dict[str, Any]]:
     """Return when each step ends: as a link states it, and in words."""
     found = []
     for mjd in sets.kinds.step_mjd.tolist():
-        iso, hours = mjd_to_iso(mjd), hours_since(mjd, event_mjd)
+        hours = hours_since(mjd, event_mjd)
+        # To the millisecond: exposures that ended within the same second are two steps.
+        until = _MJD_EPOCH + timedelta(milliseconds=round(mjd * 86_400_000))
         found.append(
-            {"until": iso, "hours": hours, "text": utc_text(iso), "since": hours_text(hours)}
+            {
+                "until": f"{until.isoformat(timespec='milliseconds')}Z",
+                "hours": hours,
+                "text": utc_text(mjd_to_iso(mjd)),
+                "since": hours_text(hours),
+            }
         )
     return found
 
