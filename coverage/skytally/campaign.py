@@ -331,7 +331,10 @@ class _Loader:
 
     def _without_base(self, text: str) -> str:
         """Name files as the campaign does, not as this machine does."""
-        return text if self.base == Path() else text.replace(f"{self.base}{os.sep}", "")
+        if self.base == Path():
+            return text
+        inside = text.replace(f"{self.base}{os.sep}", "")
+        return inside.replace(str(self.base), "the folder of the campaign file")
 
     def _dated(self, table: TelescopeTable, log: LogTable) -> LogTable:
         """Note when the log's file was last changed."""

@@ -48,7 +48,8 @@ def chart_overlays(results: Results, figures: Mapping[str, Drawing]) -> dict[str
     shown = fields[:MOST_FIELDS]
     hulls = sum(len(ring) for field in shown for ring in rings[field]) > MOST_CORNERS
     panels = []
-    for window, box in zip(_windows(results), _boxes(figures["zoom"])):
+    boxes = _boxes(figures["zoom"]) if "zoom" in figures else []
+    for window, box in zip(_windows(results), boxes):
         paths = []
         for field in shown:
             path = window.lines(rings[field])
