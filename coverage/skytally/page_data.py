@@ -188,7 +188,7 @@ class _Block:
 
     def _add(self, name: str, values: NDArray[Any]) -> None:
         self.columns.append((name, values.dtype.str.lstrip("<|"), int(values.size)))
-        planes = values.reshape(-1, 1).view(np.uint8).reshape(values.size, -1).T
+        planes = values.reshape(-1, 1).view(np.uint8).reshape(values.size, values.itemsize).T
         self._parts.append(planes.tobytes())
 
     def text(self) -> str:
