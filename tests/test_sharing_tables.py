@@ -266,7 +266,7 @@ def test_hostile_names_stay_text() -> None:
     page = Page(html)
     assert EVIL not in html
     # No script but the page's own two: its data and its code.
-    assert html.count("<script") == render_html(hand_made(*shots[:2]), {}).count("<script") == 2
+    assert html.count("<script") == 2
     assert plain(page.cells["pairs"][0][2]) == plain(f"and {EVIL}")
 
 

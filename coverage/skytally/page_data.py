@@ -65,7 +65,7 @@ def page_data(results: Results, figures: Mapping[str, Drawing]) -> Markup | None
             for m in results.maps
         ],
         "telescopes": [
-            {"name": t.name, "colour": style_of(index).colour}
+            {"name": t.name, "colour": style_of(index).colour, "dash": _dashes(index)}
             for index, t in enumerate(results.telescopes)
         ],
         "bands": _names(row.band for row in results.rows),
@@ -91,6 +91,12 @@ def page_data(results: Results, figures: Mapping[str, Drawing]) -> Markup | None
 def _names(values: Any) -> list[str]:
     """Return the distinct names, in the order of the rows."""
     return list(dict.fromkeys(value for value in values if value is not None))
+
+
+def _dashes(index: int) -> str:
+    """Return the dashes of a telescope's line as SVG has them."""
+    line = style_of(index).line
+    return "none" if isinstance(line, str) else " ".join(f"{part:g}" for part in line[1])
 
 
 def _indices(values: Sequence[str | None], names: Sequence[str]) -> list[int]:
