@@ -156,14 +156,15 @@ def findings_of(work: Work, folder: Path) -> tuple[Finding, ...]:
 class Verdict:
     """What the audit made of a case.
 
-    ``planted``, ``named`` and ``strays`` count rows: at fault, of these named by the finding,
-    and named though nothing is wrong with them.
+    ``planted``, ``least``, ``named`` and ``strays`` count rows: at fault, of these to be named
+    and named by the finding, and named though nothing is wrong with them.
     """
 
     case: Case
     telescope: str
     severity: str  # of the finding on the fault; empty if it was missed
     planted: int
+    least: int
     named: int
     strays: int
     text: str
@@ -174,7 +175,7 @@ class Verdict:
     @property
     def found(self) -> bool:
         """The fault's code, on its telescope, with some of its rows, and telling the truth."""
-        return bool(self.severity) and (self.named > 0 or self.planted == 0)
+        return bool(self.severity) and self.named >= self.least
 
 
 def judge(case: Case, folder: Path) -> Verdict:
@@ -195,6 +196,7 @@ def judge(case: Case, folder: Path) -> Verdict:
         name,
         hit.severity if hit else "",
         len(rows),
+        planted.least if rows else 0,
         len(rows & set(hit.rows)) if hit else 0,
         len(set(hit.rows) - touched) if hit and rows else 0,
         hits[0].text if hits else "",

@@ -82,10 +82,14 @@ class Work:
 
 @dataclass(frozen=True)
 class Planted:
-    """The rows, from 0, that a fault is in; rows that it also touches; a further check."""
+    """The rows, from 0, that a fault is in, how many of them must be named, and what else.
+
+    ``near`` are rows that the fault also touches, ``says`` checks the finding's text.
+    """
 
     rows: Sequence[int] | np.ndarray
     near: Sequence[int] | np.ndarray = ()
+    least: int = 1
     subject: str = ""
     says: Callable[[str], bool] = lambda _: True
 
@@ -94,7 +98,8 @@ class Planted:
 
 
 def _all(work: Work, **more: object) -> Planted:
-    return Planted(np.arange(len(work.log)), **more)
+    """The whole log: most rows must be named."""
+    return Planted(np.arange(len(work.log)), least=len(work.log) // 2 + 1, **more)
 
 
 def _apart(scene: Scene, ra: float, dec: float) -> float:

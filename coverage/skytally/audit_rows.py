@@ -40,6 +40,9 @@ _LAST_DIGITS_ARCSEC = (60.0, 36.0, 15.0, 3.6)
 _ENOUGH_PAIRS = 3
 # A minute, 1e-4 day, a second, 1e-5 and 1e-6 day: how finely logs write their times.
 _TIME_STEPS_S = (60.0, 8.64, 1.0, 0.864, 0.0864)
+# An hour, 0.01 day and 0.001 day: too coarse to tell which exposures began together.
+_COARSE_STEPS_S = (3600.0, 864.0, 86.4)
+_ENOUGH_STARTS = 3  # that all fall on such a step by no chance
 _REGION_ROUNDING_DEG = 0.001
 _NUMBER = re.compile(r"[-+]?[0-9]+(?:\.[0-9]*)?")
 # Copies of one exposure are few.
@@ -81,8 +84,13 @@ def time_resolution_s(start_mjd: Floats) -> float:
         The coarsest usual step (seconds) that every time is a multiple of; 0 for
         times finer than 1e-6 day.
     """
+    return _step_s(start_mjd, _TIME_STEPS_S)
+
+
+def _step_s(start_mjd: Floats, steps_s: Sequence[float]) -> float:
+    """First of some steps that every time of day is a multiple of; 0 if of none."""
     seconds = (start_mjd - np.floor(start_mjd)) * SECONDS_PER_DAY
-    for step in _TIME_STEPS_S:
+    for step in steps_s:
         # An MJD as a double is good to a microsecond.
         if bool((np.abs(seconds - step * np.round(seconds / step)) < 2e-5).all()):
             return step
@@ -306,7 +314,8 @@ def _detectors(log: LogTable, order: Ints, slack: float) -> tuple[set[int], Ints
     key = np.array([f"{log.start_mjd[i]!r} {log.band[i]}" for i in order])
     _, group, size = np.unique(key, return_inverse=True, return_counts=True)
     shared = (size[group] > 1) & (log.duration_s[order] > slack)
-    if 2 * int(shared.sum()) <= order.size:
+    coarse = size.size >= _ENOUGH_STARTS and _step_s(log.start_mjd, _COARSE_STEPS_S) > 0
+    if coarse or 2 * int(shared.sum()) <= order.size:
         return set(), order
     longest = np.lexsort((-log.duration_s[order], group))
     kept = np.sort(longest[np.unique(group[longest], return_index=True)[1]])
