@@ -419,7 +419,7 @@
     for (const { group, points, at } of ends) {
       const path = points.map((point, i) => `${i ? `H${x(point.hours).toFixed(1)}V` : `M${x(point.hours).toFixed(1)} ${bottom}V`}${y(point.p).toFixed(1)}`).join("") + `H${right}`;
       const t = telescopes[group - 1];
-      svg.append(make("path", { d: path, fill: "none", stroke: t?.colour ?? INK, "stroke-width": t ? 1.1 : 1.7 }));
+      svg.append(make("path", { d: path, fill: "none", stroke: t?.colour ?? INK, "stroke-width": t ? 1.1 : 1.7, "stroke-dasharray": t?.dash ?? "none" }));
       above = Math.min(at + 2.5, above - 8);
       svg.append(text(right + 5, above, t?.name ?? "all together"), rule(right, at, right + 4, above - 2.5));
     }
