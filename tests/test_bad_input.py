@@ -14,7 +14,7 @@ import pytest
 from bad_input_cases import CAMPAIGNS, MAPS
 from bad_input_changes import Case
 from bad_input_data_cases import CAMERAS, COMMANDS, IMAGES, LOGS, OUTPUTS, REGION_CASES, ROWS
-from skytally import outputs
+from quick_outputs import quick_renderers
 from skytally.cli import app
 from skytally.scaffold import write_campaign
 from typer.testing import CliRunner
@@ -50,9 +50,7 @@ def night(sample: Path, tmp_path: Path) -> Path:
 @pytest.fixture(autouse=True)
 def _quick_renderers(monkeypatch: pytest.MonkeyPatch) -> None:
     """What a page looks like is no matter here; that none is left behind is."""
-    monkeypatch.setattr(outputs, "draw_figures", lambda results: {})
-    monkeypatch.setattr(outputs, "render_html", lambda results, figures: "<p></p>\n")
-    monkeypatch.setattr(outputs, "render_pdf", lambda results, figures: b"%PDF-")
+    quick_renderers(monkeypatch)
 
 
 def arguments(case: Case, folder: Path) -> list[str]:

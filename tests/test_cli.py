@@ -16,7 +16,8 @@ import pytest
 import skytally
 from astropy.coordinates import SkyCoord
 from astropy.table import Table
-from skytally import cli, outputs
+from quick_outputs import no_pdf, quick_renderers
+from skytally import cli
 from skytally.account import account
 from skytally.campaign import load_campaign
 from skytally.cli import app
@@ -50,10 +51,7 @@ def campaign(tmp_path: Path) -> Path:
 
 @pytest.fixture
 def _quick_renderers(monkeypatch: pytest.MonkeyPatch) -> None:
-    """The renderers have tests of their own; here only the command matters."""
-    monkeypatch.setattr(outputs, "render_html", lambda results, figures: "<p></p>\n")
-    monkeypatch.setattr(outputs, "render_pdf", lambda results, figures: b"%PDF-")
-    monkeypatch.setattr(outputs, "draw_figures", lambda results: {})
+    quick_renderers(monkeypatch)
 
 
 def test_help_and_import_load_nothing_heavy() -> None:
@@ -131,10 +129,7 @@ def test_report_writes_the_folder_and_prints_the_answer(campaign: Path, tmp_path
 def test_a_report_without_pdf_ends_with_three(
     campaign: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    def fail(results: object, figures: object) -> bytes:
-        raise OutputError("the PDF could not be made", remedy="Install libpango-1.0-0.")
-
-    monkeypatch.setattr(outputs, "render_pdf", fail)
+    quick_renderers(monkeypatch, no_pdf)
     done = run("report", campaign, "--out", tmp_path / "out")
     assert done.exit_code == 3
     assert "libpango" in done.stderr

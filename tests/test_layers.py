@@ -28,7 +28,7 @@ TABLE = (
     "scaffold wording figure_style projection plots limit_plots sky_picture sky_chart figures "
     "limit_figures",
     "report_tables page_charts page_data limit_tables sharing_tables audit_tables house_style "
-    "report one_telescope circular_text circular_tables circular region_files outputs "
+    "report one_telescope circular_text circular_tables circular region_files paper outputs "
     "terminal api check_text where_text where_json",
     "cli __main__",
 )

@@ -10,6 +10,7 @@ from dataclasses import replace
 from pathlib import Path
 
 import pytest
+from quick_outputs import no_pdf, quick_renderers
 from skytally import outputs
 from skytally.circular import render_circular
 from skytally.errors import OutputError
@@ -37,12 +38,7 @@ EVERYTHING = {
 
 @pytest.fixture(autouse=True)
 def _quick_renderers(monkeypatch: pytest.MonkeyPatch) -> None:
-    """The renderers have tests of their own; here only the files matter."""
-    monkeypatch.setattr(
-        outputs, "render_html", lambda results, figures, style: f"<p>{results.event.name}</p>\n"
-    )
-    monkeypatch.setattr(outputs, "render_pdf", lambda results, figures, style: b"%PDF-")
-    monkeypatch.setattr(outputs, "draw_figures", lambda results: {})
+    quick_renderers(monkeypatch)
 
 
 def tree(folder: Path) -> dict[str, bytes]:
@@ -191,10 +187,7 @@ def test_without_a_pdf_the_rest_is_written_and_no_old_pdf_stays(
 ) -> None:
     write_outputs(small_results(), tmp_path)
 
-    def fail(results: Results, figures: object, style: object) -> bytes:
-        raise OutputError("the PDF could not be made", remedy="Install libpango-1.0-0.")
-
-    monkeypatch.setattr(outputs, "render_pdf", fail)
+    quick_renderers(monkeypatch, no_pdf)
     with pytest.raises(OutputError, match="libpango"):
         write_outputs(small_results(), tmp_path)
     assert tree(tmp_path).keys() == EVERYTHING - {"report.pdf"}
@@ -283,7 +276,8 @@ def test_progress_names_each_file_in_turn(tmp_path: Path) -> None:
     seen: list[tuple[str, float]] = []
     write_outputs(small_results(), tmp_path, lambda stage, done: seen.append((stage, done)))
     files = {stage.removeprefix("Writing ") for stage, _ in seen}
-    assert files == {name.partition("/")[0] for name in EVERYTHING} - {"manifest.json"}
+    named = {name.partition("/")[0] for name in EVERYTHING} - {"manifest.json"}
+    assert files == named | {"Drawing the figures"}
     fractions = [done for _, done in seen]
     assert fractions == sorted(fractions)
     assert 0 <= fractions[0] < fractions[-1] < 1

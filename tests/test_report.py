@@ -18,7 +18,7 @@ import pypdf
 import pytest
 from sample_results import NAMES, sample_map, sample_results
 from skytally.errors import OutputError
-from skytally.report import _fetcher, render_html, render_pdf
+from skytally.report import render_html, render_pdf
 from skytally.results import Results
 from skytally.wording import headline, row_probability
 from space_results import FINDING, SOURCES, with_space
@@ -432,21 +432,6 @@ def test_no_character_of_ours_lacks_a_glyph(
     text = "".join(p.extract_text() for p in pypdf.PdfReader(io.BytesIO(data)).pages)
     assert {"²", "³", "σ", "–", "“", "≥", "Ω"} <= set(text)
     assert "\ufffd" not in text
-
-
-@pytest.mark.parametrize(
-    "url",
-    [
-        "file:///etc/passwd",
-        "http://127.0.0.1:9/x.png",
-        "https://localhost/x",
-        "skytally-font:../../matplotlibrc",
-        "skytally-font:unknown.ttf",
-    ],
-)
-def test_the_paper_form_reads_nothing_but_its_own(url: str) -> None:
-    with pytest.raises(ValueError, match=r"disallowed protocol|there is no font"):
-        _fetcher().fetch(url)
 
 
 class _NoPango(importlib.abc.MetaPathFinder):

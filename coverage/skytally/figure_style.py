@@ -152,6 +152,8 @@ class Drawing:
         Sentences that state what the figure concludes, from the data.
     alt : str
         What a reader who does not see it needs to know.
+    height_in : float
+        Height in inches; its width is the text width.
     svg : str
         A self-contained ``<svg>`` element for an HTML page.
     """
@@ -160,6 +162,7 @@ class Drawing:
     title: str
     caption: str
     alt: str
+    height_in: float
     svg: str
 
 
@@ -176,10 +179,8 @@ class Sketch:
 
     Attributes
     ----------
-    name, title, caption, alt : str
+    name, title, caption, alt, height_in
         As in `Drawing`.
-    height_in : float
-        Its height in inches; its width is the text width.
     make : callable
         Makes it, of this height, with `new_figure`.
     """
@@ -202,7 +203,7 @@ class Sketch:
             stream = io.StringIO()
             figure.savefig(stream, format="svg", metadata={"Date": None}, transparent=True)
         svg = _clean(stream.getvalue(), self.name, self.alt)
-        return Drawing(self.name, self.title, self.caption, self.alt, svg)
+        return Drawing(self.name, self.title, self.caption, self.alt, self.height_in, svg)
 
 
 def short_label(text: str, most: int = 28) -> str:

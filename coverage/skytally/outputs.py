@@ -21,7 +21,6 @@ import unicodedata
 from collections.abc import Callable, Iterable, Iterator, Mapping
 from contextlib import contextmanager, suppress
 from dataclasses import asdict
-from functools import cache
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 
@@ -29,13 +28,14 @@ from skytally import __version__
 from skytally.circular import render_circular
 from skytally.errors import OutputError
 from skytally.figure_style import Drawing
-from skytally.figures import draw_figures
+from skytally.figures import sketch_figures
 from skytally.footprints import Progress
 from skytally.house_style import HouseStyle
 from skytally.leftover import LeftOver
 from skytally.moc import write_moc
+from skytally.paper import Paper, open_paper
 from skytally.region_files import region_to_write
-from skytally.report import render_html, render_pdf
+from skytally.report import render_html, render_paper
 from skytally.results import Results
 from skytally.serialise import to_json, to_table
 from skytally.skymap_io import write_skymap
@@ -110,38 +110,52 @@ def write_outputs(
     """
     failures: list[OutputError] = []
 
-    @cache
-    def figures() -> Mapping[str, Drawing]:
-        return draw_figures(results)
-
-    def pdf(path: Path) -> None:
-        try:
-            _put(path, render_pdf(results, figures(), style))
-        except OutputError as error:
-            failures.append(error)
-
-    # Beside each, the fraction of the time that the earlier ones have taken.
-    writers: dict[str, tuple[float, Callable[[Path], None]]] = {
-        "tally.json": (0.0, lambda path: _put(path, to_json(results))),
-        "tally.ecsv": (0.02, lambda path: _put(path, _ecsv(results))),
-        "circular.txt": (0.04, lambda path: _put(path, render_circular(results))),
-        "circular-short.txt": (0.04, lambda path: _put(path, render_circular(results, "short"))),
-        "circulars": (0.04, lambda path: _render_circulars(results, path)),
-        "regions": (0.05, lambda path: _render_regions(results, path)),
-        "report.html": (0.15, lambda path: _put(path, render_html(results, figures(), style))),
-        "report.pdf": (0.5, pdf),
-    }
+    def say(what: str, done: float) -> None:
+        if progress is not None:
+            progress(what, done)
 
     def render(folder: Path) -> None:
-        for name, (done, write) in writers.items():
-            if progress is not None:
-                progress(f"Writing {name}", done)
-            write(folder / name)
+        with open_paper() as paper:
+            say("Drawing the figures", 0.0)
+            figures = _draw(results, style, paper)
+            # Beside each, the fraction of the time that the earlier ones have taken.
+            writers: dict[str, tuple[float, Callable[[Path], None]]] = {
+                "report.html": (0.4, lambda path: _put(path, render_html(results, figures, style))),
+                "tally.json": (0.45, lambda path: _put(path, to_json(results))),
+                "tally.ecsv": (0.46, lambda path: _put(path, _ecsv(results))),
+                "circular.txt": (0.47, lambda path: _put(path, render_circular(results))),
+                "circular-short.txt": (
+                    0.47,
+                    lambda path: _put(path, render_circular(results, "short")),
+                ),
+                "circulars": (0.47, lambda path: _render_circulars(results, path)),
+                "regions": (0.48, lambda path: _render_regions(results, path)),
+                "report.pdf": (0.6, lambda path: _put(path, paper.pdf())),
+            }
+            for name, (done, write) in writers.items():
+                say(f"Writing {name}", done)
+                try:
+                    write(folder / name)
+                except OutputError as error:
+                    if name != "report.pdf":
+                        raise
+                    failures.append(error)
 
     written = _publish(Path(out_dir), "report", results, render)
     if failures:
         raise failures[0]
     return written
+
+
+def _draw(results: Results, style: HouseStyle | None, paper: Paper) -> dict[str, Drawing]:
+    """Draw the figures, and hand page and drawings over as they are made."""
+    sketches = sketch_figures(results)
+    paper.send_page(render_paper(results, sketches, style))
+    figures = {}
+    for name, sketch in sketches.items():
+        figures[name] = sketch.draw()
+        paper.send_drawing(name, figures[name].svg)
+    return figures
 
 
 def write_regions(

@@ -2,22 +2,18 @@
 
 from __future__ import annotations
 
-import hashlib
 import re
 from collections.abc import Mapping
-from pathlib import Path
-from typing import Any
 
-import matplotlib
 from markupsafe import Markup
 
 from skytally.audit_tables import audit_tables
-from skytally.errors import OutputError
-from skytally.figure_style import Drawing
+from skytally.figure_style import WIDTH_IN, Drawing, Sketch
 from skytally.figures import draw_figures
 from skytally.house_style import HouseStyle, own_template
 from skytally.limit_tables import limit_tables
 from skytally.page_data import page_data
+from skytally.paper import figure_place, make_pdf
 from skytally.report_tables import key_figures, tables
 from skytally.results import Results
 from skytally.sharing_tables import sharing_tables
@@ -30,16 +26,7 @@ from skytally.wording import (
     version_text,
 )
 
-__all__ = ["render_html", "render_pdf"]
-
-_FONT_SCHEME = "skytally-font:"
-_FONTS = frozenset(
-    f"{name}.ttf"
-    for name in (
-        *("DejaVuSans", "DejaVuSans-Bold", "DejaVuSans-Oblique", "DejaVuSansMono"),
-        *("STIXGeneral", "STIXGeneralBol", "STIXGeneralItalic", "STIXGeneralBolIta"),
-    )
-)
+__all__ = ["render_html", "render_paper", "render_pdf"]
 
 
 def render_html(
@@ -64,7 +51,10 @@ def render_html(
     InputError
         If one of these templates fails.
     """
-    return _render(results, figures, style, "screen.css", paper=False)
+    figures = draw_figures(results) if figures is None else figures
+    elements = {name: drawing.svg for name, drawing in figures.items()}
+    data = page_data(results, figures)
+    return _render(results, figures, elements, style, data=data, paper=False)
 
 
 def render_pdf(
@@ -83,45 +73,22 @@ def render_pdf(
     OutputError
         If the text layout library that WeasyPrint needs is not installed.
     """
-    page = _render(results, figures, style, "print.css", paper=True)
-    # Imported here: without Pango the import itself fails, and then everything
-    # but the PDF must still work.
-    try:
-        from weasyprint import HTML
-        from weasyprint.text.fonts import FontConfiguration
-    except OSError as error:
-        raise OutputError(
-            f"the PDF cannot be made because the Pango text library is missing ({error})",
-            remedy="On Debian or Ubuntu install it with: apt-get install "
-            "libpango-1.0-0 libpangoft2-1.0-0 libharfbuzz-subset0",
-        ) from error
-    document = HTML(string=page, url_fetcher=_fetcher(), base_url=None)
-    return bytes(
-        document.write_pdf(
-            font_config=FontConfiguration(),
-            pdf_tags=True,
-            pdf_identifier=hashlib.sha256(page.encode("utf-8", "replace")).digest()[:16],
-        )
-    )
+    figures = draw_figures(results) if figures is None else figures
+    page = render_paper(results, figures, style)
+    return make_pdf(page, lambda name: figures[name].svg)
 
 
-def _fetcher() -> Any:
-    """Return a fetcher that hands out our fonts and data URIs, and refuses everything else."""
-    from weasyprint.urls import URLFetcher, URLFetcherResponse
-
-    folder = Path(matplotlib.get_data_path()) / "fonts" / "ttf"
-
-    class OwnFilesOnly(URLFetcher):  # type: ignore[misc]
-        def fetch(self, url: str, headers: dict[str, str] | None = None) -> Any:
-            if url.startswith(_FONT_SCHEME):
-                name = url.removeprefix(_FONT_SCHEME)
-                if name not in _FONTS:
-                    raise ValueError(f"there is no font {name!r}")
-                body = (folder / name).read_bytes()
-                return URLFetcherResponse(url, body, {"Content-Type": "font/ttf"})
-            return super().fetch(url, headers)
-
-    return OwnFilesOnly(allowed_protocols=("data",))
+def render_paper(
+    results: Results,
+    figures: Mapping[str, Drawing] | Mapping[str, Sketch],
+    style: HouseStyle | None = None,
+) -> str:
+    """Return the page that `skytally.paper.make_pdf` lays out, with a place for each figure."""
+    places = {
+        name: figure_place(name, figure.alt, WIDTH_IN, figure.height_in)
+        for name, figure in figures.items()
+    }
+    return _render(results, figures, places, style, data=None, paper=True)
 
 
 def _screen_style() -> str:
@@ -132,23 +99,23 @@ def _screen_style() -> str:
 
 def _render(
     results: Results,
-    figures: Mapping[str, Drawing] | None,
+    figures: Mapping[str, Drawing] | Mapping[str, Sketch],
+    elements: Mapping[str, str],
     style: HouseStyle | None,
-    sheet: str,
     *,
+    data: Markup | None,
     paper: bool,
 ) -> str:
-    figures = draw_figures(results) if figures is None else figures
-    data = None if paper else page_data(results, figures)
+    """Fill in the template, with an element of HTML for each figure."""
     context = dict(
         results=results,
         paper=paper,
-        style=Markup(f"\n{own_template(sheet) if paper else _screen_style()}"),
+        style=Markup(f"\n{own_template('print.css') if paper else _screen_style()}"),
         script=Markup(f"\n{own_template('report.js')}"),
         data=data,
         headline=headline(results),
         key_figures=key_figures(results),
-        figures={name: (d, Markup(d.svg)) for name, d in figures.items()},
+        figures={name: (figures[name], Markup(element)) for name, element in elements.items()},
         tables=tables(results)
         | sharing_tables(results)
         | limit_tables(results)
