@@ -22,8 +22,8 @@ TABLE = (
     "campaign_model campaign_data campaign_sources campaign positions_io claims_io",
     "selection footprints patchwork covered field_extinction overlay held touching other_fields",
     "refinement depth tally page_sets sharing reach seen limits exclusion leftover galaxies "
-    "where recounts explanations claim_text claims pointings readings audit_maps audit_rows audit_times "
-    "audit_depth audit_positions audit_footprints audit",
+    "where recounts explanations claim_text claims pointings readings audit_maps audit_rows "
+    "audit_times audit_depth audit_positions audit_footprints audit",
     "results account serialise",
     "scaffold wording figure_style projection plots limit_plots sky_picture sky_chart figures "
     "limit_figures",
