@@ -46,6 +46,9 @@ from skytally.wording import (
 
 EXAMPLE = Path(__file__).parent.parent / "examples/lantern-7/campaign.toml"
 WIDTHS = (360, 768, 1440)
+# A busy machine is slow, not wrong.
+PATIENCE_MS = 120_000
+expect.set_options(timeout=PATIENCE_MS)
 
 
 @dataclass(frozen=True, eq=False)
@@ -115,6 +118,7 @@ class Visit:
 def visit(browser: Browser, example: Example) -> Iterator[Visit]:
     """A fresh visit with scripts on; afterwards nothing may have gone wrong or out."""
     context = browser.new_context(viewport={"width": 1440, "height": 900})
+    context.set_default_timeout(PATIENCE_MS)
     visit = Visit(context.new_page())
     yield visit
     context.close()
@@ -436,6 +440,7 @@ def test_a_link_with_unknown_names_says_so(example: Example, visit: Visit) -> No
 
 def test_without_scripts_the_page_reads_as_before(browser: Browser, example: Example) -> None:
     context = browser.new_context(java_script_enabled=False)
+    context.set_default_timeout(PATIENCE_MS)
     visit = Visit(context.new_page())
     page = visit.open(example.url)
     assert not page.locator("#choose").is_visible()
@@ -544,6 +549,7 @@ def test_tables_sort_and_keep_their_sum_last(example: Example, visit: Visit) -> 
 
 def test_what_is_copied_is_plain_text(example: Example, browser: Browser) -> None:
     context = browser.new_context()
+    context.set_default_timeout(PATIENCE_MS)
     context.grant_permissions(["clipboard-read", "clipboard-write"])
     page = context.new_page()
     page.goto(example.url)
