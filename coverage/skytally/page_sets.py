@@ -18,8 +18,8 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from skytally.covered import Coverage, visits_of
-from skytally.grouping import expand_ranges, sum_by
+from skytally.covered import Coverage, exposures_of
+from skytally.grouping import Lists, expand_ranges, sum_by
 from skytally.observations import Observations
 from skytally.spans import DEG2_PER_SR, Ints
 from skytally.tally import SetWorth
@@ -245,7 +245,7 @@ def _gather_within(
     Also returns the visits that are told apart, and the length of a step in hours.
     """
     o = coverage.observations
-    visits = _Visits(*coverage.visits, coverage.centre.sets)
+    visits = _Visits.of(coverage.exposures)
 
     def fits(gathered: _Gathered, forms: int, width: int) -> bool:
         # Inside a credible region about two rows in three are worth all or nothing.
@@ -253,7 +253,7 @@ def _gather_within(
         return bool(gathered.rows * columns * width + gathered.entries <= most_bytes)
 
     if visits.group.size <= most_bytes:
-        brackets = [_Visits(*visits_of(p, o), p.sets) for p in (coverage.inner, coverage.outer)]
+        brackets = [_Visits.of(exposures_of(p, o)) for p in (coverage.inner, coverage.outer)]
         for parts in ([visits, *brackets], [visits]):
             gathered = _Gathered.of(parts, VisitKinds.whole(o))
             if fits(gathered, len(parts), _WHOLE_BYTES):
@@ -273,11 +273,16 @@ def _gather_within(
 
 @dataclass(frozen=True, eq=False)
 class _Visits:
-    """Pairs of set and exposure, sets rising."""
+    """Pairs of set and exposure, shape (visits,), sets rising."""
 
-    group: Ints
-    exposure: Ints
+    group: NDArray[np.integer]
+    exposure: NDArray[np.integer]
     sets: int
+
+    @classmethod
+    def of(cls, exposures: Lists) -> _Visits:
+        """Pair each set with the exposures in its list."""
+        return cls(exposures.owner, exposures.items, len(exposures))
 
     def first_of_each(self, o: Observations, most: int) -> _Visits:
         """Keep of each set, telescope and band those that ended first."""
@@ -285,14 +290,21 @@ class _Visits:
         order = np.lexsort((o.end_mjd, pair))
         rank = np.empty(len(o), dtype=np.int64)
         rank[order] = np.arange(len(o))
-        # One sort of whole numbers: far quicker than that of several columns.
-        group, place = np.divmod(np.sort(self.group * len(o) + rank[self.exposure]), len(o))
-        mine = group * (int(pair.max()) + 1) + pair[order][place]
-        fresh = np.diff(mine, prepend=-1) != 0
+        # One sort of whole numbers, far quicker than that of several columns; in
+        # place, for there may be many millions.
+        key = self.group * np.int64(len(o))
+        key += rank[self.exposure]
+        key.sort()
+        place = (key % len(o)).astype(np.int32)
+        key //= len(o)
+        sorted_pair = pair[order].astype(np.int32)[place]
+        fresh = np.ones(key.size, dtype=bool)
+        fresh[1:] = (key[1:] != key[:-1]) | (sorted_pair[1:] != sorted_pair[:-1])
         kept = fresh.copy()
         for later in range(1, most):
             kept[later:] |= fresh[:-later]
-        return replace(self, group=group[kept], exposure=order[place[kept]])
+        group, exposure = key[kept].astype(np.int32), order.astype(np.int32)[place[kept]]
+        return replace(self, group=group, exposure=exposure)
 
 
 @dataclass(frozen=True, eq=False)
@@ -303,7 +315,7 @@ class _Gathered:
     ----------
     kinds : VisitKinds
         What is told apart.
-    group, kind : int64 arrays, shape (visits,)
+    group, kind : int arrays, shape (visits,)
         The sets of all patchworks, one after the other, and their visits.
     bounds : int64 array
         Where each patchwork's sets begin, and the number of all.
@@ -314,8 +326,8 @@ class _Gathered:
     """
 
     kinds: VisitKinds
-    group: Ints
-    kind: Ints
+    group: NDArray[np.integer]
+    kind: NDArray[np.integer]
     bounds: Ints
     row: Ints
     begins: Ints
@@ -326,8 +338,9 @@ class _Gathered:
         """Gather the sets of some patchworks."""
         name = np.random.default_rng(_SEED).integers(1, 2**63, len(kinds), dtype=np.uint64)
         bounds = np.cumsum([0] + [part.sets for part in parts])
-        group = np.concatenate([part.group + base for part, base in zip(parts, bounds)])
-        kind = kinds.of_exposure[np.concatenate([part.exposure for part in parts])]
+        group = np.concatenate([part.group + int(base) for part, base in zip(parts, bounds)])
+        exposure = np.concatenate([part.exposure for part in parts])
+        kind = kinds.of_exposure.astype(np.int32)[exposure]
         begins = np.searchsorted(group, np.arange(bounds[-1] + 1))
         count = np.diff(begins)
         key = np.zeros(bounds[-1], dtype=np.uint64)
