@@ -27,6 +27,9 @@ from skytally.errors import OutputError
 
 __all__ = ["Paper", "figure_place", "make_pdf", "open_paper", "serve"]
 
+# A reader finds the way in so many without a list of contents.
+_FEW_PAGES = 6
+
 _FONT = "skytally-font:"
 _FONTS = frozenset(
     f"{name}.ttf"
@@ -64,23 +67,26 @@ def make_pdf(page: str, drawings: Drawings) -> bytes:
     OutputError
         If the text layout library that WeasyPrint needs is not installed.
     """
-    html, font_configuration = _weasyprint()
+    html, css, font_configuration = _weasyprint()
     document = html(string=page, url_fetcher=_fetcher(drawings), base_url=None)
-    return bytes(
-        document.write_pdf(
-            font_config=font_configuration(),
-            pdf_tags=True,
-            pdf_identifier=hashlib.sha256(page.encode("utf-8", "replace")).digest()[:16],
-        )
-    )
+    options = {
+        "pdf_tags": True,
+        "pdf_identifier": hashlib.sha256(page.encode("utf-8", "replace")).digest()[:16],
+    }
+    fonts = font_configuration()
+    laid = document.render(fonts, **options)
+    if len(laid.pages) <= _FEW_PAGES:
+        without = css(string="nav { display: none !important }")
+        laid = document.render(fonts, stylesheets=[without], **options)
+    return bytes(laid.write_pdf(**options))
 
 
-def _weasyprint() -> tuple[Any, Any]:
+def _weasyprint() -> tuple[Any, Any, Any]:
     """Import what lays out pages."""
     # Not at the top: without Pango the import itself fails, and then everything
     # but the PDF must still work.
     try:
-        from weasyprint import HTML
+        from weasyprint import CSS, HTML
         from weasyprint.text.fonts import FontConfiguration
     except OSError as error:
         raise OutputError(
@@ -88,7 +94,7 @@ def _weasyprint() -> tuple[Any, Any]:
             remedy="On Debian or Ubuntu install it with: apt-get install "
             "libpango-1.0-0 libpangoft2-1.0-0 libharfbuzz-subset0",
         ) from error
-    return HTML, FontConfiguration
+    return HTML, CSS, FontConfiguration
 
 
 def _fetcher(drawings: Drawings) -> Any:
