@@ -44,7 +44,7 @@ from skytally.projection import (
     zoom_window,
 )
 from skytally.results import Results
-from skytally.sky_chart import credible_parts
+from skytally.sky_parts import credible_parts
 from skytally.sky_picture import Layer, paint_sky
 from skytally.skymap import SkyMap
 from skytally.spans import LINE_ORDER, Spans, cell_to_span
@@ -436,7 +436,7 @@ def test_pictures_mix_shade_and_inks_sample_by_sample() -> None:
                     continue
                 seen.add(layer.hatch)
                 lined = layer.hatch is not None and hatch_mask(layer.hatch, row.shape)[y, x]
-                ink = 0.8 if layer.hatch is None else 0.85 if lined else 0.3
+                ink = 0.8 if layer.hatch is None else 0.85 if lined else 0.2
                 colour = ink * np.array(to_rgb(layer.colour)) + (1 - ink) * colour
             wanted.append(255 * colour)
         assert min(np.abs(picture[y, x, :3] - one).max() for one in wanted) < 0.51

@@ -21,15 +21,15 @@ TABLE = (
     "log_columns log_regions log_io image_io region_text camera_io light_curve_io campaign_faults "
     "campaign_model campaign_data campaign_sources campaign positions_io claims_io",
     "selection footprints patchwork covered field_extinction overlay held touching other_fields",
-    "refinement depth tally page_sets sharing reach seen limits exclusion leftover galaxies "
-    "where recounts explanations claim_text claims pointings readings audit_maps audit_rows "
-    "audit_times audit_depth audit_positions audit_footprints audit",
+    "refinement depth deepest tally page_sets sharing reach seen limits exclusion leftover "
+    "galaxies where recounts explanations claim_text claims pointings readings audit_maps "
+    "audit_rows audit_times audit_depth audit_positions audit_footprints audit",
     "results account serialise",
-    "scaffold wording figure_style projection plots limit_plots sky_picture sky_chart figures "
-    "limit_figures",
-    "report_tables page_charts page_data limit_tables sharing_tables audit_tables house_style "
-    "report one_telescope circular_text circular_tables circular region_files paper outputs "
-    "terminal api check_text where_text where_json",
+    "scaffold wording figure_style projection plots limit_plots sky_picture sky_parts sky_frame "
+    "sky_chart depth_chart figures limit_figures",
+    "report_tables depth_tables page_charts page_data limit_tables sharing_tables audit_tables "
+    "house_style report one_telescope circular_text circular_tables circular region_files paper "
+    "outputs terminal api check_text where_text where_json",
     "cli __main__",
 )
 LAYERS = {"": 0} | {name: layer for layer, names in enumerate(TABLE) for name in names.split()}

@@ -15,6 +15,7 @@ from skytally.campaign import LoadedCampaign, Site, Telescope
 from skytally.claims import check_claims
 from skytally.cosmology import Cosmology
 from skytally.covered import Coverage, TallySettings
+from skytally.deepest import DeepestLimits
 from skytally.exclusion import (
     AbsoluteLimit,
     DepthHistogram,
@@ -147,6 +148,7 @@ def account(
             _covered(footprints),
             footprints.outlines,
             merger.take([m.label for m in campaign.maps]),
+            DeepestLimits.of(coverage),
         ),
         findings=findings,
         silenced=silenced,

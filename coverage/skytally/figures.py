@@ -7,6 +7,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 
+from skytally.depth_chart import depth_chart_of
 from skytally.figure_style import Drawing, Sketch
 from skytally.limit_figures import limit_sketches
 from skytally.plots import (
@@ -23,9 +24,7 @@ from skytally.plots import (
 )
 from skytally.results import Results
 from skytally.sky_chart import (
-    LEAST_PART,
-    Part,
-    credible_parts,
+    middle_ra,
     versions_figure,
     versions_height,
     whole_sky_figure,
@@ -33,12 +32,14 @@ from skytally.sky_chart import (
     zoom_figure,
     zoom_height,
 )
+from skytally.sky_parts import Part, Zoom, zooms
 from skytally.wording import (
     NBSP,
     area_text,
     count,
     hours_text,
     join_words,
+    limit_rows,
     limit_terms,
     magnitude_text,
     percent,
@@ -70,10 +71,10 @@ def sketch_figures(results: Results) -> dict[str, Sketch]:
         where several telescopes did; ``depth`` where any exposure has a limit;
         those of `limit_sketches` where the newest map carries distances.
     """
-    parts = _zoomed(credible_parts(results.sky.maps[-1]))
-    sketches = [_whole_sky(results, parts), _zoom(results, parts)]
+    shown = zooms(results.sky.maps[-1])
+    sketches = [_whole_sky(results, shown), _zoom(results, shown)]
     if len(results.maps) > 1:
-        sketches.append(_versions(results, parts))
+        sketches.append(_versions(results, shown[0].part))
     if results.row().probability > 0:
         sketches.append(_timeline(results))
     sharing = [
@@ -83,11 +84,12 @@ def sketch_figures(results: Results) -> dict[str, Sketch]:
         sketches.append(_credit(results))
     if depth_bands(results):
         sketches.append(_depth(results))
+        sketches += _depth_chart(results, shown[0].part)
     sketches += limit_sketches(results)
     return {sketch.name: sketch for sketch in sketches}
 
 
-def _whole_sky(results: Results, parts: list[Part]) -> Sketch:
+def _whole_sky(results: Results, shown: list[Zoom]) -> Sketch:
     total = results.row()
     version = version_text(results.newest.version)
     used = sum(bool(region) for region in results.sky.covered)
@@ -111,11 +113,11 @@ def _whole_sky(results: Results, parts: list[Part]) -> Sketch:
         f"{finding} Mollweide projection, equal area; right ascension increases to the left.",
         f"Whole-sky chart of {version} with the footprints of each telescope. {finding}",
         whole_sky_height(results),
-        lambda: whole_sky_figure(results, parts),
+        lambda: whole_sky_figure(results, shown),
     )
 
 
-def _zoom(results: Results, parts: list[Part]) -> Sketch:
+def _zoom(results: Results, shown: list[Zoom]) -> Sketch:
     total = results.row()
     area = results.newest.area_90_deg2
     region = f"90{NBSP}% region"
@@ -124,27 +126,20 @@ def _zoom(results: Results, parts: list[Part]) -> Sketch:
         f"{percent(total.area_in_90_deg2 / area)} is covered; "
         f"what is covered there holds {percent(total.probability_in_90)} of all probability."
     )
-    if len(parts) > 1:
-        finding += (
-            f" The region has separate parts; the two shown hold "
-            f"{percent(parts[0].probability, 0)} and {percent(parts[1].probability, 0)}."
-        )
+    if len(shown) > 1:
+        first, second = (percent(zoom.part.probability, 0) for zoom in shown)
+        finding += f" It has separate parts: A holds {first} of all probability, B {second}."
     return Sketch(
         "zoom",
         f"The {region}",
         f"{finding} Lambert equal-area projection; the bar is true to scale.",
         f"Chart of the {region} with its contours and the footprints of each telescope. {finding}",
-        zoom_height(results, parts),
-        lambda: zoom_figure(results, parts),
+        zoom_height(results, shown),
+        lambda: zoom_figure(results, shown),
     )
 
 
-def _zoomed(parts: list[Part]) -> list[Part]:
-    """Keep the two most probable parts, the second only if it matters."""
-    return [p for p in parts[:2] if p is parts[0] or p.probability >= LEAST_PART]
-
-
-def _versions(results: Results, parts: list[Part]) -> Sketch:
+def _versions(results: Results, middle: Part) -> Sketch:
     shares = [
         f"{percent(results.row(map=m.version).probability)} of “{m.version}”" for m in results.maps
     ]
@@ -156,7 +151,7 @@ def _versions(results: Results, parts: list[Part]) -> Sketch:
         "filled: everything observed.",
         f"A small whole-sky chart for each map version. {finding}",
         versions_height(results),
-        lambda: versions_figure(results, parts),
+        lambda: versions_figure(results, middle),
     )
 
 
@@ -230,3 +225,41 @@ def _depth(results: Results) -> Sketch:
         depth_height(results),
         lambda: depth_figure(results),
     )
+
+
+def _depth_chart(results: Results, middle: Part) -> list[Sketch]:
+    """Return the chart of depths, where any place has a limit."""
+    terms = limit_terms(results.settings, limit_rows(results))
+    chart = depth_chart_of(results, terms, middle_ra(middle))
+    if chart is None:
+        return []
+    depths = [chart.deepest.band_depth(band) for band in chart.bands]
+    most = max(depths, key=lambda depth: depth.area_deg2)
+    area = area_text(most.area_deg2, most.area_deg2, most.area_deg2)
+    sky = f"In {most.band}, the band with most sky," if len(depths) > 1 else f"In {most.band}"
+    finding = f"{sky} {area} have a limit: "
+    finding += (
+        f"half of it reaches {magnitude_text(most.over_50)}, 90{NBSP}% "
+        f"{magnitude_text(most.over_90)}; the deepest place {magnitude_text(most.deepest)}."
+        if most.shallowest < most.deepest
+        else f"{magnitude_text(most.deepest)} everywhere."
+    )
+    note = (
+        f" The {MOST_BANDS} most used bands are shown."
+        if len(depth_bands(results)) > MOST_BANDS
+        else ""
+    )
+    scale = ", each band on a scale of its own" if len(depths) > 1 else ""
+    if chart.is_open:
+        scale += "; the palest shade takes in all that is shallower"
+    return [
+        Sketch(
+            "depth-chart",
+            "How deep, place by place",
+            f"{finding} Each place by its deepest single exposure{scale}. Contours: "
+            f"50{NBSP}% and 90{NBSP}% (dashed) of {version_text(results.newest.version)}.{note}",
+            f"Charts of the deepest limit of each place, one per band. {finding}",
+            chart.height_in,
+            lambda: chart.draw(results.sky.maps[-1]),
+        )
+    ]

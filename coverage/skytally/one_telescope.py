@@ -61,6 +61,7 @@ def only_telescope(results: Results, telescope: str) -> Results:
             sky,
             covered=sky.covered[index : index + 1],
             outlines=sky.outlines[index : index + 1],
+            deepest=None,
         ),
         exclusions=(),
         fading_planes=(),

@@ -11,9 +11,9 @@ from numpy.typing import NDArray
 from scipy.spatial import ConvexHull, QhullError
 
 from skytally.figure_style import Drawing
-from skytally.projection import Window, zoom_window
+from skytally.projection import Window
 from skytally.results import Results
-from skytally.sky_chart import LEAST_PART, credible_parts
+from skytally.sky_parts import zooms
 
 __all__ = ["chart_overlays"]
 
@@ -49,7 +49,7 @@ def chart_overlays(results: Results, figures: Mapping[str, Drawing]) -> dict[str
     hulls = sum(len(ring) for field in shown for ring in rings[field]) > MOST_CORNERS
     panels = []
     boxes = _boxes(figures["zoom"]) if "zoom" in figures else []
-    for window, box in zip(_windows(results), boxes):
+    for window, box in zip((zoom.window for zoom in zooms(results.sky.maps[-1])), boxes):
         paths = []
         for field in shown:
             path = window.lines(rings[field])
@@ -83,14 +83,6 @@ def _worth_by_field(results: Results) -> dict[int, float]:
         field: exposure.probability_newest
         for field, exposure in zip(sets.footprint.tolist(), results.exposures)
     }
-
-
-def _windows(results: Results) -> list[Window]:
-    """Return the windows of the zoom, as the chart lays them."""
-    parts = credible_parts(results.sky.maps[-1])
-    parts = [p for p in parts[:2] if p is parts[0] or p.probability >= LEAST_PART]
-    aspects = (0.45, 0.7) if len(parts) == 1 else (0.7, 1.25)
-    return [zoom_window(part.lonlat_deg, aspects=aspects) for part in parts]
 
 
 def _boxes(drawing: Drawing) -> Iterator[list[float]]:

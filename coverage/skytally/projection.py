@@ -10,7 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
-from functools import cached_property
+from functools import cached_property, lru_cache
 
 import astropy.units as u
 import numpy as np
@@ -144,10 +144,8 @@ class Window:
             Plane coordinates to draw as one path.
         """
         gap = np.full((1, 2), np.nan)
-        pieces = []
-        for ring in rings:
-            pieces += [_follow(np.concatenate((ring, ring[:1]))), gap]
-        return self.trace(np.concatenate(pieces)) if pieces else np.empty((0, 2))
+        pieces = [piece for ring in rings for piece in (ring, ring[:1], gap)]
+        return self.trace(_follow(np.concatenate(pieces))) if pieces else np.empty((0, 2))
 
     def trace(self, lonlat_deg: Floats) -> Floats:
         """Project a line (n, 2) vertex by vertex; NaN interrupts it, and so does the seam."""
@@ -171,19 +169,25 @@ class Window:
 
 
 def _follow(line: Floats) -> Floats:
-    """Insert vertices so that no step along a great circle exceeds 1.5 degrees."""
+    """Insert vertices so that no step along a great circle exceeds 1.5 degrees.
+
+    Rows of NaN, shape (2,), part one line from the next.
+    """
     vector = lonlat_to_vector(line[:, 0], line[:, 1])
     chord = np.linalg.norm(np.diff(vector, axis=0), axis=1)
-    steps = np.ceil(np.degrees(chord) / _STRAIGHT_DEG).astype(int).clip(1)
+    steps = np.ceil(np.degrees(np.nan_to_num(chord)) / _STRAIGHT_DEG).astype(int).clip(1)
     if (steps == 1).all():
         return line
     row = np.repeat(np.arange(steps.size), steps)
-    part = (np.arange(row.size) - np.repeat(np.cumsum(steps) - steps, steps)) / steps[row]
-    between = vector[row] * (1 - part[:, None]) + vector[row + 1] * part[:, None]
-    between = np.concatenate((between, vector[-1:]))
-    lon = np.degrees(np.arctan2(between[:, 1], between[:, 0])) % 360
-    lat = np.degrees(np.arctan2(between[:, 2], np.hypot(between[:, 0], between[:, 1])))
-    return np.stack((lon, lat), axis=1)
+    number = np.arange(row.size) - np.repeat(np.cumsum(steps) - steps, steps)
+    added = np.flatnonzero(number)
+    part = (number / steps[row])[added, None]
+    between = vector[row[added]] * (1 - part) + vector[row[added] + 1] * part
+    followed = np.concatenate((line[row], line[-1:]))
+    x, y, z = between.T
+    followed[added, 0] = np.degrees(np.arctan2(y, x)) % 360
+    followed[added, 1] = np.degrees(np.arctan2(z, np.hypot(x, y)))
+    return followed
 
 
 def _break(plane: Floats, seam: float, near: NDArray[np.bool_]) -> Floats:
@@ -258,10 +262,11 @@ class GraticuleLine:
     value_deg: float
 
 
-def graticule(window: Window) -> list[GraticuleLine]:
+@lru_cache(maxsize=4)
+def graticule(window: Window) -> tuple[GraticuleLine, ...]:
     """Return meridians and parallels at round numbers, about four each way across the window."""
     if window.code == "MOL":
-        return _graticule(window, (30.0, 30.0), (-180.0, 180.0), (-90.0, 90.0))
+        return tuple(_graticule(window, (30.0, 30.0), (-180.0, 180.0), (-90.0, 90.0)))
     x, y = window.grid(41)
     columns, rows = np.meshgrid(x, y)
     plane = np.stack((columns.ravel(), rows.ravel()), axis=1)
@@ -271,7 +276,7 @@ def graticule(window: Window) -> list[GraticuleLine]:
     steps = _nice(_RA_STEPS, _ra_extent(window, x)), _nice(_DEC_STEPS, float(np.ptp(lat)))
     turns = max(float(turn.min()) - steps[0], -180.0), min(float(turn.max()) + steps[0], 180.0)
     lats = max(float(lat.min()) - steps[1], -90.0), min(float(lat.max()) + steps[1], 90.0)
-    return _graticule(window, steps, turns, lats)
+    return tuple(_graticule(window, steps, turns, lats))
 
 
 def _ra_extent(window: Window, x: Floats) -> float:
@@ -343,6 +348,7 @@ def dec_label(lat_deg: float, step_deg: float) -> str:
     return f"{text}{minutes % 60:02d}′" if step_deg < 1 else text
 
 
+@lru_cache(maxsize=4)
 def galactic_plane(window: Window) -> Floats:
     """Return the Galactic equator in the plane, to be drawn as one path."""
     longitude = np.linspace(0.0, 360.0, 1441)

@@ -8,6 +8,7 @@ from collections.abc import Mapping
 from markupsafe import Markup
 
 from skytally.audit_tables import audit_tables
+from skytally.depth_tables import depth_tables
 from skytally.figure_style import WIDTH_IN, Drawing, Sketch
 from skytally.figures import draw_figures
 from skytally.house_style import HouseStyle, own_template
@@ -119,6 +120,7 @@ def _render(
         tables=tables(results)
         | sharing_tables(results)
         | limit_tables(results)
+        | depth_tables(results)
         | audit_tables(results),
         terms=limit_terms(results.settings, limit_rows(results)),
         sources=[(source.name, *source_words(source)) for source in results.sources],

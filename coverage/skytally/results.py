@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from skytally.campaign_data import ReportText
 from skytally.claims import ClaimVerdict
+from skytally.deepest import DeepestLimits
 from skytally.exclusion import (
     AbsoluteLimit,
     DepthHistogram,
@@ -183,12 +184,15 @@ class SkyData:
         regions were given outright as MOC.
     sets : PageSets or None
         Rows of like visits from which any choice of exposures can be tallied.
+    deepest : DeepestLimits or None
+        The deepest limit of every place by band.
     """
 
     maps: tuple[SkyMap, ...]
     covered: tuple[Spans, ...]
     outlines: tuple[tuple[NDArray[np.float64], ...], ...]
     sets: PageSets | None = None
+    deepest: DeepestLimits | None = None
 
 
 @dataclass(frozen=True)

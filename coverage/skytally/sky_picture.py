@@ -26,7 +26,7 @@ TAIL = 1 / _STEPS
 _LIGHT, _DARK = np.array(to_rgb("#f1f3f5")), np.array(to_rgb("#8894a0"))
 _RAMP = _LIGHT + (_DARK - _LIGHT) * (np.arange(_STEPS + 1)[:, None] / _STEPS)
 _RAMP[:2] = 1.0
-_EVEN_INK, _HATCH_INK, _BETWEEN = 0.8, 0.85, 0.3
+_EVEN_INK, _HATCH_INK, _BETWEEN = 0.8, 0.85, 0.2
 
 
 @dataclass(frozen=True, eq=False)
@@ -56,20 +56,44 @@ def paint_sky(position: Ints, skymap: SkyMap, layers: Sequence[Layer]) -> Bytes:
         Red, green, blue and opacity, which is 0 off the sky.
     """
     on_sky = position >= 0
-    shade = _shade(skymap.credible_level_at(position), skymap.density_at(position))
+    shade = np.append(_shade(skymap.credible_levels, skymap.density_per_sr), np.int8(0))
+    shade = shade[skymap.cell_at(position)]
     image = np.empty((*position.shape, 4), dtype=np.uint8)
     image[..., :3] = _bytes(_RAMP)[shade]
     image[..., 3] = 255 * on_sky
     # Regions cover little of a chart, so only what they cover is mixed as floats.
-    inside = [layer.region.contains(position) & on_sky for layer in layers]
-    inked = np.logical_or.reduce(inside) if inside else np.zeros_like(on_sky)
+    members, place = _sharing(layers, position)
+    inked = np.append(members.any(axis=0), False)[place] & on_sky
     y, x = np.nonzero(inked)
+    place = place[inked]
     colour = _RAMP[shade[inked]]
-    for layer, held in zip(layers, inside):
-        opacity = (_ink(layer.hatch, x, y) * held[inked])[:, None]
-        colour = colour * (1 - opacity) + np.array(to_rgb(layer.colour)) * opacity
+    for layer, member in zip(layers, members):
+        mine = np.flatnonzero(member[place])
+        opacity = _ink(layer.hatch, x[mine], y[mine])[:, None]
+        colour[mine] = colour[mine] * (1 - opacity) + np.array(to_rgb(layer.colour)) * opacity
     image[inked, :3] = _bytes(colour)
     return image
+
+
+def _sharing(layers: Sequence[Layer], position: Ints) -> tuple[NDArray[np.bool_], Ints]:
+    """Cut the line at the edges of all regions, so that one search finds those of a position.
+
+    Returns
+    -------
+    members : bool array, shape (layers, n)
+        Whose each piece of the line is.
+    place : int64 array, as the positions
+        The piece of each; −1 before the first.
+    """
+    edges = [layer.region.edges for layer in layers]
+    owner = np.repeat(np.arange(len(layers)), [one.size for one in edges])
+    every = np.concatenate(edges) if edges else np.empty(0, dtype=np.int64)
+    order = np.argsort(every, kind="stable")
+    members = np.zeros((len(layers), order.size), dtype=bool)
+    for number, member in enumerate(members):
+        # Each edge of a region enters or leaves it.
+        np.logical_xor.accumulate(owner[order] == number, out=member)
+    return members, np.searchsorted(every[order], position, side="right") - 1
 
 
 def ramp_key() -> Floats:

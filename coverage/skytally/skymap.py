@@ -172,21 +172,25 @@ class SkyMap:
         inside = self.credible_cells(level)
         return Measure(self.starts[inside], self.stops[inside], self.density_per_sr[inside])
 
-    def density_at(self, position: Ints) -> Floats:
-        """Probability per steradian at positions on the line; zero off the map."""
-        position = np.asarray(position, dtype=np.int64)
-        row = np.searchsorted(self.starts, position, side="right") - 1
-        safe = np.maximum(row, 0)
-        inside = (row >= 0) & (position < self.stops[safe])
-        return np.where(inside, self.density_per_sr[safe], 0.0)
-
-    def credible_level_at(self, position: Ints) -> Floats:
-        """Probability of the smallest credible region that holds each position; 1 off the map."""
-        position = np.asarray(position, dtype=np.int64)
+    @cached_property
+    def credible_levels(self) -> Floats:
+        """Probability of the smallest credible region that holds each cell, shape (n,)."""
         order, held = self._descending
         level = np.empty(order.size)
         level[order] = held / held[-1]
+        return level
+
+    def cell_at(self, position: Ints) -> Ints:
+        """Find the row of the cell that holds each position on the line; −1 off the map."""
+        position = np.asarray(position, dtype=np.int64)
         row = np.searchsorted(self.starts, position, side="right") - 1
-        safe = np.maximum(row, 0)
-        inside = (row >= 0) & (position < self.stops[safe])
-        return np.where(inside, level[safe], 1.0)
+        inside = (row >= 0) & (position < self.stops[np.maximum(row, 0)])
+        return np.where(inside, row, -1)
+
+    def density_at(self, position: Ints) -> Floats:
+        """Probability per steradian at positions on the line; zero off the map."""
+        return np.append(self.density_per_sr, 0.0)[self.cell_at(position)]
+
+    def credible_level_at(self, position: Ints) -> Floats:
+        """Probability of the smallest credible region that holds each position; 1 off the map."""
+        return np.append(self.credible_levels, 1.0)[self.cell_at(position)]
