@@ -29,6 +29,7 @@ class PlainMap:
     label: str
     issued_s: int | None
     cells: list[tuple[int, int, float]]
+    distances: list[tuple[float, float, float]] | None = None  # μ, σ, N of each cell, Mpc
 
 
 @dataclass(frozen=True)
@@ -54,10 +55,33 @@ class PlainExposure:
     duration_s: int
     depth: float | None
     pixels: frozenset[int]
+    extinction: float | None = None  # A_b as the log states it
 
     @property
     def end_s(self) -> int:
         return self.start_s + self.duration_s
+
+
+@dataclass(frozen=True)
+class PlainSource:
+    """A source in plain terms; ``magnitude`` by band, or one number for any band.
+
+    It rises in proportion to time until ``rise_days``, then fades; ``curve``, by
+    band, is interpolated instead. Efficiency: ``plateau``/(1 + exp((m − limit −
+    offset)/width)), a step with width 0.
+    """
+
+    name: str
+    magnitude: float | dict[str, float]
+    fade_per_day: float = 0.0
+    rise_days: float = 0.0
+    curve: dict[str, list[tuple[float, float]]] | None = None
+    flat: bool = False
+    offset: float = 0.0
+    width: float = 0.0
+    plateau: float = 1.0
+    visits: int = 1
+    gap_s: int = 0
 
 
 @dataclass(frozen=True)
@@ -71,19 +95,34 @@ class PlainCampaign:
     significance: float = 5.0
     visits: int = 2
     gap_s: int = 1800
+    dust: list[tuple[int, int, float]] | None = None  # (order, cell, E(B−V)); holes have none
+    coefficients: dict[str, float] = field(default_factory=dict)  # A_b / E(B−V)
+    sources: tuple[PlainSource, ...] = ()
 
 
 @dataclass(frozen=True)
 class Judged:
-    """An exposure with what the campaign's rules make of it."""
+    """An exposure with what the campaign's rules make of it.
+
+    ``limit`` is in the campaign's system and significance, ``depth`` the same less
+    the field's extinction where that is known.
+    """
 
     telescope: str
     band: str
     night: str
     start_s: int
     end_s: int
-    depth: float | None
+    limit: float | None
+    stated_extinction: float | None
+    extinction: float | None
     pixels: frozenset[int]
+
+    @property
+    def depth(self) -> float | None:
+        if self.limit is None or self.extinction is None:
+            return self.limit
+        return self.limit - self.extinction
 
     def named(self, selection: Selection) -> bool:
         own = (self.telescope, self.band, self.night)
@@ -100,8 +139,9 @@ class Numbers:
 
 
 def judge(campaign: PlainCampaign) -> list[Judged]:
-    """Apply nights, masks and magnitudes."""
+    """Apply nights, masks, magnitudes and extinction."""
     rules = {t.name: t for t in campaign.telescopes}
+    reddening = {} if campaign.dust is None else dust_of(campaign)
     judged = []
     for e in campaign.exposures:
         rule = rules[e.telescope]
@@ -116,6 +156,8 @@ def judge(campaign: PlainCampaign) -> list[Judged]:
                 e.start_s,
                 e.end_s,
                 limit(campaign, rule, e),
+                e.extinction,
+                extinction(campaign, e, pixels, reddening),
                 pixels,
             )
         )
@@ -138,6 +180,27 @@ def limit(campaign: PlainCampaign, rule: PlainTelescope, e: PlainExposure) -> fl
         return depth
     offset = rule.vega_offset[e.band]
     return depth + offset if campaign.system == "AB" else depth - offset
+
+
+def dust_of(campaign: PlainCampaign) -> dict[int, float]:
+    """E(B−V) of every pixel of the twin's order that the dust map knows."""
+    found = {}
+    for order, cell, ebv in campaign.dust or ():
+        step = 4 ** (campaign.order - order)
+        found.update(dict.fromkeys(range(cell * step, (cell + 1) * step), ebv))
+    return found
+
+
+def extinction(
+    campaign: PlainCampaign, e: PlainExposure, pixels: frozenset[int], reddening: dict[int, float]
+) -> float | None:
+    """A_b: the log's own, or the field's mean E(B−V), holes left out, times the coefficient."""
+    if e.extinction is not None:
+        return e.extinction
+    known = [reddening[p] for p in pixels if p in reddening]
+    if not known or e.band not in campaign.coefficients:
+        return None
+    return campaign.coefficients[e.band] * math.fsum(known) / len(known)
 
 
 def flat(skymap: PlainMap, pixels: list[int], order: int) -> dict[int, float]:
@@ -246,6 +309,7 @@ def tally_one(
         "probability_revisited": revisited,
         "first_start": iso(campaign, min((e.start_s for e in mine), default=None)),
         "last_end": iso(campaign, max((e.end_s for e in mine), default=None)),
+        **correction(mine),
         **depths(mine, {p: visits[p] for p in covered}, weight),
     }
     return Numbers(values, timeline({p: visits[p] for p in covered}, weight, area))
@@ -269,6 +333,16 @@ def timeline(
         )
         for end in sorted(set(first.values()))
     }
+
+
+def correction(mine: list[Judged]) -> dict[str, float | str | None]:
+    """Whether the limits are corrected for extinction, and by how much at the median."""
+    limited = [e for e in mine if e.limit is not None]
+    known = [e.extinction for e in limited if e.extinction is not None]
+    if not known:
+        return {"extinction": "not corrected", "extinction_median": None}
+    state = "corrected" if len(known) == len(limited) else "partly corrected"
+    return {"extinction": state, "extinction_median": statistics.median(known)}
 
 
 def depths(

@@ -5,8 +5,8 @@ random and seeded; their exposures hand regions made of HEALPix cells, so both
 sides see the very same sky and must agree to rounding.
 """
 
-from dataclasses import dataclass, replace
-from datetime import UTC, datetime, timedelta
+from dataclasses import replace
+from datetime import timedelta
 
 import healpy
 import numpy as np
@@ -17,221 +17,15 @@ from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 from skytally.account import account
 from skytally.cameras import CircleCamera, MosaicCamera
-from skytally.campaign import Site
 from skytally.observations import night_of
 from skytally.skymap import SkyMap
 from skytally.skymap_io import circle_skymap, read_skymap
 from skytally.spans import Spans, cell_to_span
 from skytally.tally import maps_in_force
-from tally_twin import PlainCampaign, PlainExposure, PlainMap, PlainTelescope, tally
-
-EVENT = datetime(1858, 11, 17, tzinfo=UTC) + timedelta(days=EVENT_MJD)
-ORDER = 9  # of the twin's pixels: the deepest order in any random region or map
-BIRDS = ("Heron", "Plover", "Avocet", "Dunlin", "Curlew")
-DAY = 86400
+from tally_twin import tally
+from twin_campaigns import DAY, EVENT, load, random_plan, with_exposures
 
 seeds = st.integers(0, 2**32 - 1)
-
-
-# --- random campaigns, told to both sides -------------------------------------------
-
-
-@dataclass(frozen=True)
-class Plan:
-    """One random campaign in plain terms; regions as (order, cell) lists."""
-
-    plain: PlainCampaign
-    regions: tuple[tuple[tuple[int, int], ...], ...]  # per exposure
-    masks: dict
-    searchable: dict
-
-
-def pixels_of(cells):
-    """Pixels of the twin's order in cells of any order up to it."""
-    return frozenset(
-        pixel
-        for order, cell in cells
-        for pixel in range(cell << 2 * (ORDER - order), (cell + 1) << 2 * (ORDER - order))
-    )
-
-
-def spans_of(cells):
-    order, cell = np.array(sorted(set(cells)), dtype=np.int64).reshape(-1, 2).T
-    return Spans.from_cells(order, cell)
-
-
-def random_cells(rng, windows, least, most):
-    """A patch of the windows: a block of order 6 or 7, some of its order-8 and 9 cells left out."""
-    window = int(rng.choice(windows))
-    level = int(rng.integers(6, 8))
-    block = (window << 2 * (level - 5)) + int(rng.integers(4 ** (level - 5)))
-    cells = []
-    for child in range(block << 2 * (8 - level), (block + 1) << 2 * (8 - level)):
-        chance = rng.uniform()
-        if chance < least:
-            continue
-        if chance < most:
-            cells.append((8, child))
-        else:
-            cells.extend((9, 4 * child + k) for k in rng.permutation(4)[: rng.integers(1, 4)])
-    return tuple((int(o), int(c)) for o, c in cells) or ((level, block),)
-
-
-def random_map(rng, label, issued_s, windows):
-    """Cells of mixed orders, finer near the windows; some maps leave sky unlisted."""
-    finest = int(rng.integers(5, ORDER + 1))
-    leaves, pending = [], [(0, cell) for cell in range(12)]
-    while pending:
-        order, cell = pending.pop()
-        if order < 5:
-            near = any(w >> 2 * (5 - order) == cell for w in windows)
-        else:
-            near = any(w == cell >> 2 * (order - 5) for w in windows)
-        if near and order < finest and rng.uniform() < 0.93:
-            pending.extend((order + 1, 4 * cell + k) for k in range(4))
-        else:
-            leaves.append((order, cell, near and order >= 3))
-    unlisted, dark = rng.choice([0, 0.2]), rng.choice([0, 0.1])
-    weights = []
-    for order, cell, near in leaves:
-        density = rng.lognormal(sigma=1.5) * (3e4 if near else 1.0)
-        chance = rng.uniform()
-        if chance < unlisted and len(leaves) > 12:
-            continue
-        weights.append((order, cell, 0.0 if chance > 1 - dark else density / 4.0**order))
-    total = sum(w for *_, w in weights)
-    return PlainMap(label, issued_s, [(o, c, w / total) for o, c, w in weights])
-
-
-def random_maps(rng, windows):
-    count = int(rng.integers(1, 4))
-    issued = sorted(int(s) for s in rng.integers(0, 3 * DAY, count))
-    known = {"all": [True] * count, "none": [False] * count, "some": rng.uniform(size=count) < 0.5}
-    kind = rng.choice(list(known))
-    if kind == "some":
-        rng.shuffle(issued)  # the file's order stands where a version states no time
-        known["some"][0] = False
-    return [
-        random_map(rng, f"version {i}", s if known[kind][i] else None, windows)
-        for i, s in enumerate(issued)
-    ]
-
-
-def random_exposures(rng, rule, windows, bands, blind):
-    """One telescope's log; some exposures repeat an earlier region or an earlier moment."""
-    exposures, regions = [], []
-    for _ in range(int(rng.integers(0, 9)) or int(rng.integers(0, 2))):
-        band = str(rng.choice(bands))
-        region = random_cells(rng, windows, 0.15, 0.9)
-        start = int(rng.integers(0, 3 * DAY))
-        if exposures and rng.uniform() < 0.45:
-            pick = int(rng.integers(len(exposures)))
-            region = regions[pick]
-            # A revisit after the very gap that counts, just under it, or at any time.
-            start = exposures[pick].start_s + int(rng.choice([1800, 1799, 600, start]))
-        missing = rng.uniform() < blind or (not band and rule.depth_system == "Vega")
-        depth = None if missing else round(float(rng.normal(21, 0.8)), 1)
-        duration = int(rng.choice([0, 30, 60, 90, 3000]))
-        exposures.append(PlainExposure(rule.name, band, start, duration, depth, pixels_of(region)))
-        regions.append(region)
-    return exposures, regions
-
-
-def random_plan(seed):
-    rng = np.random.default_rng(seed)
-    first = int(rng.integers(12 * 4**5))
-    windows = [first, first ^ 1, int(rng.integers(12 * 4**5))]
-    bands = list(rng.permutation(["g", "r", "i", ""])[: rng.integers(1, 5)])
-    rules, exposures, regions, masks, searchable = [], [], [], {}, {}
-    for name in BIRDS[: rng.integers(1, 6)]:
-        if rng.uniform() < 0.3:
-            masks[name] = random_cells(rng, windows, 0.3, 0.9)
-        if rng.uniform() < 0.2:
-            searchable[name] = tuple((5, w) for w in windows[1:]) + random_cells(
-                rng, windows, 0.2, 0.9
-            )
-        rule = PlainTelescope(
-            name,
-            None if rng.uniform() < 0.3 else round(float(rng.uniform(-180, 360)), 3),
-            "Vega" if rng.uniform() < 0.2 else "AB",
-            float(rng.choice([3.0, 5.0])),
-            {"g": -0.08, "r": 0.16, "i": 0.37},
-            pixels_of(masks.get(name, ())),
-            pixels_of(searchable[name]) if name in searchable else None,
-        )
-        more, where = random_exposures(rng, rule, windows, bands, rng.choice([0, 0.3, 1]))
-        rules.append(rule)
-        exposures += more
-        regions += where
-    plain = PlainCampaign(
-        event=EVENT,
-        maps=random_maps(rng, windows),
-        telescopes=rules,
-        exposures=exposures,
-        order=ORDER,
-        significance=float(rng.choice([5.0, 3.0])),
-        visits=int(rng.integers(1, 4)),
-        gap_s=int(rng.choice([1800, 0, 7200])),
-    )
-    return Plan(plain, tuple(regions), masks, searchable)
-
-
-def skymap_of(plain):
-    order, cell, amount = (np.array(column) for column in zip(*plain.cells))
-    start, stop = cell_to_span(order, cell)
-    rank = np.argsort(start)
-    density = amount * 12 * 4.0**order / (4 * np.pi)
-    issued = None if plain.issued_s is None else EVENT_MJD + plain.issued_s / DAY
-    return SkyMap(
-        start[rank],
-        stop[rank],
-        density[rank],
-        int(order.max()),
-        label=plain.label,
-        issued_mjd=issued,
-    )
-
-
-def telescope_of(plan, rule):
-    """A telescope whose every exposure hands its region outright."""
-    mine = [i for i, e in enumerate(plan.plain.exposures) if e.telescope == rule.name]
-    own = [plan.plain.exposures[i] for i in mine]
-    number = {}
-    texts = [f"region {number.setdefault(plan.regions[i], i)}" for i in mine]
-    log = log_table(
-        rule.name,
-        np.full(len(own), np.nan),
-        np.nan,
-        start=[EVENT_MJD + e.start_s / DAY for e in own],
-        duration=[e.duration_s for e in own],
-        band=[e.band for e in own],
-        depth=[np.nan if e.depth is None else e.depth for e in own],
-    )
-    region = np.array(texts, dtype=object) if texts else np.empty(0, dtype=object)
-    one = telescope(
-        rule.name,
-        None,
-        replace(log, region=region),
-        depth_system=rule.depth_system,
-        depth_significance=rule.depth_significance,
-        vega_offsets=rule.vega_offset,
-        mask=(spans_of(plan.masks[rule.name]),) if rule.name in plan.masks else (),
-        searchable=spans_of(plan.searchable[rule.name]) if rule.name in plan.searchable else None,
-        regions={text: spans_of(plan.regions[i]) for text, i in zip(texts, mine)},
-    )
-    site = None if rule.longitude_deg is None else Site(rule.longitude_deg, 0.0, 0.0)
-    return replace(one, site=site)
-
-
-def load(plan):
-    """The plan as the package sees it."""
-    return campaign(
-        [telescope_of(plan, rule) for rule in plan.plain.telescopes],
-        [skymap_of(m) for m in plan.plain.maps],
-        significance=plan.plain.significance,
-        revisit_visits=plan.plain.visits,
-        revisit_gap_minutes=plan.plain.gap_s / 60,
-    )
 
 
 # --- the twin --------------------------------------------------------------------------
@@ -338,12 +132,6 @@ def assert_same(one, two, but=(), tolerance=1e-12):
                 assert other == pytest.approx(value, rel=tolerance, abs=tolerance), (key, name)
             else:
                 assert other == value, (key, name)
-
-
-def with_exposures(plan, keep):
-    """The same campaign with the exposures numbered in ``keep``, in that order."""
-    plain = replace(plan.plain, exposures=[plan.plain.exposures[i] for i in keep])
-    return replace(plan, plain=plain, regions=tuple(plan.regions[i] for i in keep))
 
 
 @given(seeds)
