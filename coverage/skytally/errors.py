@@ -20,6 +20,13 @@ __all__ = [
 ]
 
 
+def _shown(text: str) -> str:
+    """Return text that steers no terminal: file and column names are whatever a file holds."""
+    if text.isprintable():
+        return text
+    return "".join(c if c.isprintable() or c in "\n\u00a0" else "?" for c in text)
+
+
 class SkytallyError(Exception):
     """Base of all errors raised on purpose.
 
@@ -45,19 +52,19 @@ class SkytallyError(Exception):
         column: str | None = None,
         remedy: str | None = None,
     ) -> None:
-        super().__init__(message)
-        self.message = message
+        self.message = _shown(message)
+        super().__init__(self.message)
         self.file = None if file is None else str(file)
         self.row = row
         self.column = column
-        self.remedy = remedy
+        self.remedy = None if remedy is None else _shown(remedy)
 
     @property
     def place(self) -> str:
         """File, row and column in words; empty when none is known."""
         parts = []
         if self.file is not None:
-            parts.append(self.file)
+            parts.append(_shown(self.file))
         if self.row is not None:
             parts.append(f"row {self.row}")
         if self.column is not None:

@@ -19,7 +19,8 @@ from astropy.wcs.utils import wcs_to_celestial_frame
 from numpy.typing import NDArray
 
 from skytally.errors import LogError, RegionError
-from skytally.local_files import is_url
+from skytally.fits_layout import walk_headers
+from skytally.local_files import is_url, open_bounded
 from skytally.log_cells import (
     TIME_SCALES,
     CellFault,
@@ -36,9 +37,12 @@ from skytally.shapes import lonlat_to_vector
 __all__ = ["ImageOptions", "read_images"]
 
 _EDGE_STEPS = 8
-_HDU_LIMIT = 2_000
+# That a compressed file may expand to; headers may stand anywhere in it.
+SIZE_LIMIT_BYTES = 4 << 30
 # Of an edge's length; a straight chord this close changes no area by as much as 0.1 %.
 _STRAIGHT = 1e-4
+
+_NO_DATA = fits.PrimaryHDU().header.tostring().encode()
 
 Values = dict[str, Any]
 
@@ -168,15 +172,19 @@ def _headers(path: Path) -> tuple[list[fits.Header], bytes]:
     if not path.is_file():
         raise _Aside("unreadable", f"{path.name!r} is no regular file; narrow the pattern.")
     try:
-        with warnings.catch_warnings(), path.open("rb") as stream:
+        with (
+            warnings.catch_warnings(),
+            open_bounded(path, size_limit_bytes=SIZE_LIMIT_BYTES, error=LogError) as stream,
+        ):
             warnings.simplefilter("ignore")
             # Other archives would be unpacked to disk whole before a header is seen.
-            if not stream.read(10).startswith((b"SIMPLE  =", b"\x1f\x8b")):
-                raise OSError("it begins neither as FITS nor as gzip")
+            if not stream.read(9) == b"SIMPLE  =":
+                raise OSError("it begins neither as FITS nor as gzip of it")
             stream.seek(0)
-            with fits.open(stream, memmap=False, lazy_load_hdus=True) as hdus:
-                headers = [hdu.header for _, hdu in zip(range(_HDU_LIMIT), hdus)]
+            headers = [_header(x) for x, _ in walk_headers(stream, path.name, LogError)]
             text = "".join(x.tostring() for x in headers).encode("utf-8", "replace")
+    except LogError as fault:
+        raise _Aside("unreadable", f"{path.name!r}: {fault.message}. {fault.remedy}") from fault
     except Exception as exc:  # damaged FITS raises many kinds
         reason = next(iter(str(exc).strip().splitlines()), type(exc).__name__)
         raise _Aside(
@@ -185,6 +193,16 @@ def _headers(path: Path) -> tuple[list[fits.Header], bytes]:
     if not headers:
         raise _Aside("unreadable", f"{path.name!r} holds no FITS header; fetch it again.")
     return headers, text
+
+
+def _header(text: bytes) -> fits.Header:
+    """Read a header; of a compressed image that of the image."""
+    if b"ZIMAGE  =" not in text:
+        return fits.Header.fromstring(text)
+    # The library translates it when it opens a file, which here has no data.
+    with fits.HDUList.fromstring(_NO_DATA + text) as hdus:
+        header: fits.Header = hdus[1].header
+        return header
 
 
 def _value(headers: list[fits.Header], keyword: str | None) -> str:

@@ -15,15 +15,31 @@ import re
 import tempfile
 import warnings
 import zlib
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from stat import S_ISDIR, S_ISREG
-from typing import Any
+from typing import Any, BinaryIO, cast
 
 from astropy.io import fits
 
-from skytally.errors import InputError, OutputError
+from skytally.errors import InputError, OutputError, UsageError
+from skytally.fits_layout import check_shared_bytes, walk_headers
 
-__all__ = ["expand", "header_value", "is_url", "open_fits", "read_local_file", "write_whole"]
+__all__ = [
+    "SIZE_VARIABLE",
+    "expand",
+    "header_value",
+    "is_url",
+    "open_bounded",
+    "open_fits",
+    "read_local_file",
+    "size_limit",
+    "write_whole",
+]
+
+# The one way to raise the limits: who runs the tool may, what is read may not.
+SIZE_VARIABLE = "SKYTALLY_SIZE_LIMIT_MIB"
 
 _CHUNK = 1 << 22
 # Two letters at least, so that a Windows drive is a path; pathlib folds "//" into "/".
@@ -33,6 +49,36 @@ _URL = re.compile(r"\s*[A-Za-z][A-Za-z0-9+.-]+:/")
 def is_url(text: str) -> bool:
     """Tell whether a text names something by URL rather than by local path."""
     return _URL.match(text) is not None
+
+
+def size_limit(usual_bytes: int) -> int:
+    """Return the largest size of a file: the usual one, or what the environment states instead.
+
+    Raises
+    ------
+    UsageError
+        If `SIZE_VARIABLE` holds no whole number above 0.
+    """
+    stated = os.environ.get(SIZE_VARIABLE, "").strip()
+    if not stated:
+        return usual_bytes
+    if not (stated.isascii() and stated.isdigit() and len(stated) <= 9 and int(stated) > 0):
+        raise UsageError(
+            f"the environment variable {SIZE_VARIABLE} holds {stated[:40]!r}, expected a whole "
+            "number of MiB",
+            remedy=f"Set it like this: {SIZE_VARIABLE}=4096, or unset it.",
+        )
+    return int(stated) << 20
+
+
+def _too_large(
+    what: str, limit_bytes: int, path: str | Path, error: type[InputError]
+) -> InputError:
+    return error(
+        f"{what} more than the limit of {_size_text(limit_bytes)}",
+        file=path,
+        remedy=f"Check that it is the right file; if it is, set {SIZE_VARIABLE} to a larger limit.",
+    )
 
 
 def _size_text(size: float) -> str:
@@ -53,7 +99,7 @@ def read_local_file(
     path : str or Path
         The file; anything that looks like a URL is refused.
     size_limit_bytes : int
-        A larger file is refused before it is read.
+        A larger file is refused before it is read, unless `SIZE_VARIABLE` allows it.
     error : type
         Which of our exceptions to raise.
 
@@ -84,13 +130,8 @@ def read_local_file(
                 file=path,
                 remedy="Give the path of the file itself.",
             )
-        if status.st_size > size_limit_bytes:
-            raise error(
-                f"the file holds {_size_text(status.st_size)}, "
-                f"more than the limit of {_size_text(size_limit_bytes)}",
-                file=path,
-                remedy="Check that it is the right file.",
-            )
+        if status.st_size > (limit := size_limit(size_limit_bytes)):
+            raise _too_large(f"the file holds {_size_text(status.st_size)},", limit, path, error)
         with open(path, "rb") as stream:
             # Reading by the limit would ask for that much memory.
             data = stream.read(status.st_size)
@@ -128,6 +169,7 @@ def expand(
         return data
     whole = io.BytesIO()  # grows in place, and hands out its bytes without a copy
     begun = False
+    limit = size_limit(size_limit_bytes)
     try:
         with gzip.GzipFile(fileobj=io.BytesIO(data)) as stream:
             while chunk := stream.read(_CHUNK):
@@ -135,13 +177,8 @@ def expand(
                     return chunk
                 begun = True
                 whole.write(chunk)
-                if whole.tell() > size_limit_bytes:
-                    raise error(
-                        f"the compressed file expands to more than the limit of "
-                        f"{_size_text(size_limit_bytes)}",
-                        file=path,
-                        remedy="Check that it is the right file.",
-                    )
+                if whole.tell() > limit:
+                    raise _too_large("the compressed file expands to", limit, path, error)
     except EOFError as cause:
         raise error(
             "the compressed file ends too early",
@@ -155,6 +192,55 @@ def expand(
             remedy="Copy or download it again.",
         ) from cause
     return whole.getvalue()
+
+
+class _Bounded(io.BufferedIOBase):
+    """A stream that is read or skipped up to a limit, wherever the reader means to go."""
+
+    def __init__(self, stream: gzip.GzipFile, limit: int, excess: InputError) -> None:
+        self._stream = stream
+        self._limit = limit
+        self._excess = excess
+
+    def seek(self, offset: int, whence: int = os.SEEK_SET) -> int:
+        """Go to a place counted from the beginning."""
+        if offset > self._limit:
+            raise self._excess
+        return self._stream.seek(offset, whence)
+
+    def read(self, size: int | None = -1) -> bytes:
+        """Read as usual, or raise when that passes the limit."""
+        left = self._limit - self._stream.tell()
+        data = self._stream.read(left + 1 if size is None or size < 0 else min(size, left + 1))
+        if len(data) > left:
+            raise self._excess
+        return data
+
+
+@contextmanager
+def open_bounded(
+    path: str | Path, *, size_limit_bytes: int, error: type[InputError]
+) -> Iterator[BinaryIO]:
+    """Open a local regular file to read parts of it, plain or as its gzip expands.
+
+    A plain file may have any size, since what is not read costs nothing; of a
+    compressed one no more than the limit is expanded.
+
+    Raises
+    ------
+    InputError
+        Of the type ``error``, when the limit is passed.
+    """
+    limit = size_limit(size_limit_bytes)
+    excess = _too_large("the compressed file expands to", limit, path, error)
+    with open(path, "rb") as stream:
+        packed = stream.read(2) == b"\x1f\x8b"
+        stream.seek(0)
+        if not packed:
+            yield stream
+            return
+        with gzip.GzipFile(fileobj=stream) as expanded:
+            yield cast(BinaryIO, _Bounded(expanded, limit, excess))
 
 
 def open_fits(data: bytes, path: str | Path, *, error: type[InputError]) -> fits.HDUList:
@@ -171,6 +257,9 @@ def open_fits(data: bytes, path: str | Path, *, error: type[InputError]) -> fits
             file=path,
             remedy="Check that it is the right file.",
         )
+    end = max((end for _, end in walk_headers(io.BytesIO(data), path, error)), default=len(data))
+    if end < len(data):
+        data = data[:end]  # what follows is no FITS
     with warnings.catch_warnings():
         # A file cut short is warned about and then read as empty: we look ourselves.
         warnings.simplefilter("ignore")
@@ -186,7 +275,7 @@ def open_fits(data: bytes, path: str | Path, *, error: type[InputError]) -> fits
             ) from cause
         for hdu in hdus[:count]:
             if isinstance(hdu, fits.BinTableHDU):
-                _check_whole(hdu, path, error)
+                _check_whole(hdu, len(data), path, error)
     return hdus
 
 
@@ -201,12 +290,15 @@ def _beginning(data: bytes) -> str:
     return f"a file that begins with the bytes {data[:8].hex(' ')}"
 
 
-def _check_whole(hdu: fits.BinTableHDU, path: str | Path, error: type[InputError]) -> None:
-    """Refuse a table with fewer rows than its header announces."""
+def _check_whole(
+    hdu: fits.BinTableHDU, size: int, path: str | Path, error: type[InputError]
+) -> None:
+    """Refuse a table with fewer rows than its header announces, or more bytes than the file."""
     try:
         announced = hdu.header["NAXIS2"]
         found = len(hdu.data)
         trouble = f"it ends after {found} of {announced} rows" if found < announced else None
+        trouble = trouble or check_shared_bytes(hdu, size)
     except Exception:  # see above
         trouble = "its rows cannot be read"
     if trouble:
