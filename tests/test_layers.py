@@ -17,9 +17,10 @@ TABLE = (
     "cosmology times grouping",
     "shapes pieces raster working_order skymap cameras observations volume sources dust space "
     "visibility",
-    "healpix_table skymap_circle skymap_frames skymap_table skymap_io dust_io table_io log_cells "
-    "log_columns log_regions log_io image_io region_text camera_io light_curve_io campaign_faults "
-    "campaign_model campaign_data campaign_sources campaign positions_io claims_io",
+    "healpix_table skymap_circle skymap_frames skymap_table skymap_io dust_io ecsv_header "
+    "votable_check table_io log_cells log_columns log_regions log_io image_io region_text "
+    "camera_io light_curve_io campaign_faults campaign_model campaign_data campaign_sources "
+    "campaign positions_io claims_io",
     "selection footprints patchwork covered field_extinction overlay held touching other_fields",
     "refinement depth deepest tally page_sets sharing reach seen limits exclusion leftover "
     "galaxies where recounts explanations claim_text claims pointings readings audit_maps "

@@ -319,7 +319,7 @@ class _Loader:
         if log is None:
             return None, {}
         folder = Path(name).parent
-        log, regions, files = resolve_regions(self._named(log), self.base / folder)
+        log, regions, files = resolve_regions(self._named(log), self.base / folder, self.base)
         self.inputs.append(("log", name, log.sha256))
         self.inputs.extend((role, str(folder / file), digest) for role, file, digest in files)
         if len(log) == 0:

@@ -35,11 +35,16 @@ from skytally.campaign_model import (
     TelescopeTable,
 )
 from skytally.errors import CampaignError
+from skytally.local_files import SIZE_VARIABLE, size_limit
 
 __all__ = ["Entry", "ParsedCampaign", "key_path", "parse_campaign"]
 
 SIZE_LIMIT_BYTES = 4_000_000
 SHOWN_CHARACTERS = 70
+SYNTAX_CHARACTERS = 200
+# A file of nothing but faults would take minutes to word.
+FAULTS_LIMIT = 100
+TABLES_LIMIT = 5_000
 
 Place = tuple[str | int, ...]
 AnyTable = TypeVar("AnyTable", bound=Table)
@@ -222,13 +227,15 @@ def _read_file(path: Path) -> bytes:
         raise CampaignError(
             ["a device or a pipe, not a plain file. Name the TOML file."], file=path
         )
+    limit = size_limit(SIZE_LIMIT_BYTES)
     with path.open("rb") as stream:
-        content = stream.read(SIZE_LIMIT_BYTES + 1)
-    if len(content) > SIZE_LIMIT_BYTES:
+        content = stream.read(limit + 1)
+    if len(content) > limit:
         raise CampaignError(
             [
-                f"is larger than {SIZE_LIMIT_BYTES // 1_000_000} MB, so it is hardly a campaign "
-                "file. Name the TOML file, not a log or a map."
+                f"is larger than {limit / 1e6:.0f} MB, the limit, so it is hardly a campaign file. "
+                "Name the TOML file, not a log or a map; if it is one, set "
+                f"{SIZE_VARIABLE} to a larger limit."
             ],
             file=path,
         )
@@ -257,8 +264,9 @@ def _toml(content: bytes, path: Path) -> dict[str, Any]:
 def _syntax_fault(said: str, text: str) -> str:
     """Word a TOML syntax error with its line, column and the line itself."""
     lines = text.splitlines() or [""]
-    found = re.search(r"\s*\(at (?:line (\d+), column (\d+)|end of document)\)$", said)
-    what = said[: found.start()] if found else said
+    found = re.search(r"\(at (?:line (\d+), column (\d+)|end of document)\)$", said)
+    # What was said may quote the file at length; a key is quoted whole.
+    what = (said[: found.start()] if found else said).rstrip()[:SYNTAX_CHARACTERS]
     line = int(found[1]) if found and found[1] else len(lines)
     column = int(found[2]) if found and found[2] else len(lines[-1]) + 1
     source = lines[line - 1].strip() if line <= len(lines) else ""
@@ -273,9 +281,11 @@ def _syntax_fault(said: str, text: str) -> str:
 
 def _top_faults(raw: dict[str, Any]) -> Iterator[str]:
     known = (*_SINGLE, *_LISTED)
-    for key in raw:
-        if key not in known:
-            yield f"{_bare(key)}: unknown table. {_whereto(key, known, ())}"
+    unknown = [key for key in raw if key not in known]
+    for key in unknown[:FAULTS_LIMIT]:
+        yield f"{_bare(key)}: unknown table. {_whereto(key, known, ())}"
+    if len(unknown) > FAULTS_LIMIT:
+        yield f"{len(unknown) - FAULTS_LIMIT} more tables are unknown."
 
 
 def _rows(raw: dict[str, Any], key: str, problems: list[str]) -> list[Any]:
@@ -288,6 +298,10 @@ def _rows(raw: dict[str, Any], key: str, problems: list[str]) -> list[Any]:
         problems.append(f"{key}: missing, expected at least one {key}. {hint}")
     elif not isinstance(value, list):
         problems.append(f"{key}: got {shown(value)}, expected a list of tables. {hint}")
+    elif len(value) > TABLES_LIMIT:
+        problems.append(
+            f"{key}: {len(value)} tables, expected at most {TABLES_LIMIT}. Split the campaign."
+        )
     else:
         return value
     return []
@@ -303,7 +317,10 @@ def _checked(
     try:
         return table.model_validate(value, context=context)
     except ValidationError as faults:
-        problems.extend(_sentence(e, place, value) for e in faults.errors(include_url=False))
+        found = faults.errors(include_url=False)
+        problems.extend(_sentence(e, place, value) for e in found[:FAULTS_LIMIT])
+        if (more := len(found) - FAULTS_LIMIT) > 0:
+            problems.append(f"{key_path(place, (), value)}: {more} more faults.")
     return None
 
 
@@ -523,6 +540,8 @@ def shown(value: object, *, quoted: bool = True) -> str:
             text = f"a list of {len(value)}" if value else "an empty list"
         case datetime() | date() | time():
             text = value.isoformat()
+        case int() if value.bit_length() > 4 * SHOWN_CHARACTERS:
+            text = hex(value)  # Decimal digits of a number of any size are refused.
         case _:
             text = str(value)
     # What a terminal would obey instead of showing must not reach it.

@@ -139,6 +139,18 @@ def _cosmology(name: str) -> str:
     raise _refusal("a cosmology that astropy knows", f"{hint}Known are {', '.join(known)}.")
 
 
+def _brief(value: object) -> str:
+    """Show one value; what holds others has no depth that is safe to show."""
+    match value:
+        case dict():
+            return "a table"
+        case list():
+            return "a list"
+        case int() if value.bit_length() > 128:
+            return "a number of many digits"
+    return f"{value!r:.40}"
+
+
 def _number(value: object, low: float, high: float, what: str) -> float:
     """Check one number of a table by band; nan fails every comparison."""
     if isinstance(value, bool) or not isinstance(value, int | float) or not low <= value <= high:
@@ -151,7 +163,7 @@ def _per_band(value: object, low: float, high: float, what: str) -> dict[str, fl
     if not isinstance(value, dict) or not value:
         raise _refusal(f"a table in braces with {what} for each band")
     return {
-        _name(band): _number(one, low, high, f"in band {band!r}, which holds {one!r:.40}, {what}")
+        _name(band): _number(one, low, high, f"in band {band!r}, which holds {_brief(one)}, {what}")
         for band, one in value.items()
     }
 

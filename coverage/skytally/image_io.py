@@ -41,6 +41,10 @@ _EDGE_STEPS = 8
 SIZE_LIMIT_BYTES = 4 << 30
 # Of an edge's length; a straight chord this close changes no area by as much as 0.1 %.
 _STRAIGHT = 1e-4
+_FRAMES = ("icrs", "fk5", "fk4", "galactic")
+# The SIP convention (ASP Conference Series 347, 491, 2005) goes up to order 9.
+_DISTORTION_ORDERS = ("A_ORDER", "B_ORDER", "AP_ORDER", "BP_ORDER")
+_DISTORTION_LIMIT = 9
 
 _NO_DATA = fits.PrimaryHDU().header.tostring().encode()
 
@@ -320,6 +324,7 @@ def _rings(headers: list[fits.Header]) -> Iterator[NDArray[np.float64]]:
                 continue
             with warnings.catch_warnings():
                 warnings.simplefilter("ignore")
+                _check_distortion(header)
                 wcs = WCS(header)
                 if not wcs.has_celestial:
                     continue
@@ -333,6 +338,14 @@ def _rings(headers: list[fits.Header]) -> Iterator[NDArray[np.float64]]:
                 "CTYPE1",
             ) from exc
         yield ring
+
+
+def _check_distortion(header: fits.Header) -> None:
+    """Refuse a distortion whose table of coefficients would fill the memory."""
+    for key in _DISTORTION_ORDERS:
+        order = header.get(key, 0)
+        if not isinstance(order, int) or not 0 <= order <= _DISTORTION_LIMIT:
+            raise ValueError(f"{key} is {order!r:.40}, expected 0 to {_DISTORTION_LIMIT}")
 
 
 def _ring(wcs: WCS) -> NDArray[np.float64]:
@@ -351,6 +364,9 @@ def _ring(wcs: WCS) -> NDArray[np.float64]:
     if _is_straight(vector):
         world = world[::_EDGE_STEPS]
     frame = wcs_to_celestial_frame(wcs)
+    if frame.name not in _FRAMES:
+        # Others turn with the Earth or the Sun, whose tables the library would fetch.
+        raise ValueError(f"positions in the frame {frame.name!r}, expected {', '.join(_FRAMES)}")
     if frame.name != "icrs":
         icrs = SkyCoord(world * units.deg, frame=frame).icrs
         world = np.stack((icrs.ra.deg, icrs.dec.deg), axis=1)

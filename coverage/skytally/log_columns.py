@@ -9,7 +9,7 @@ from difflib import get_close_matches
 from pathlib import Path
 
 from skytally.errors import LogError
-from skytally.table_io import TextTable
+from skytally.table_io import TextTable, split_unit
 
 __all__ = ["ALIASES", "find_columns", "listed", "mapping_remedy", "normalise_name"]
 
@@ -55,7 +55,7 @@ ALIASES: dict[str, tuple[str, ...]] = {
 
 def normalise_name(name: str) -> str:
     """Lower case, no unit in brackets, spaces and dashes as underscores."""
-    bare = re.sub(r"\s*[(\[][^()\[\]]*[)\]]\s*$", "", name.strip())
+    bare, _ = split_unit(name.strip())
     return re.sub(r"[\s.\-]+", "_", bare.lower())
 
 

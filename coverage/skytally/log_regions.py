@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import hashlib
+import os
+from collections.abc import Iterable
 from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 
-from skytally.errors import SkytallyError
+from skytally.errors import RegionError, SkytallyError
 from skytally.moc import read_moc
 from skytally.observations import LogTable, SetAside
 from skytally.region_text import parse_region
@@ -24,8 +26,19 @@ def is_moc_path(text: str) -> bool:
     return text.strip().lower().endswith(_MOC_ENDINGS)
 
 
+def _inside(path: Path, folders: Iterable[Path]) -> Path:
+    """Return the path, links followed, if it lies in one of some folders."""
+    real = os.path.realpath(path)
+    if any(Path(real).is_relative_to(os.path.realpath(folder)) for folder in folders):
+        return path
+    raise RegionError(
+        "this file lies outside the folders of the log and of the campaign",
+        remedy="Copy it beside the log, and name the copy.",
+    )
+
+
 def resolve_regions(
-    log: LogTable, base: Path
+    log: LogTable, base: Path, campaign: Path | None = None
 ) -> tuple[LogTable, dict[str, Shape], list[tuple[str, str, str]]]:
     """Turn a log's region cells into shapes; rows whose region fails are set aside.
 
@@ -35,6 +48,9 @@ def resolve_regions(
         As read.
     base : Path
         Folder that relative MOC paths start from: that of the log.
+    campaign : Path, optional
+        Folder of the campaign file. A MOC lies inside this one or that of the
+        log: a log comes from somebody else, who has no say over other files.
 
     Returns
     -------
@@ -51,7 +67,7 @@ def resolve_regions(
     for text in sorted(set(log.region) - {""}):
         try:
             if is_moc_path(text):
-                path = base / text
+                path = _inside(base / text, (base, campaign or base))
                 shapes[text] = read_moc(path)
                 digest = hashlib.sha256(path.read_bytes()).hexdigest()
                 inputs.append(("region", text, digest))

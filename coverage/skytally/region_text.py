@@ -28,7 +28,7 @@ VERTEX_LIMIT = 2_000
 _CACHED_LENGTH = 4_096
 
 _ATOM = re.compile(r"'[^']*'|[(),]|[^\s(),']+|'")
-_NUMBER = re.compile(r"[+-]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[eE][+-]?[0-9]+)?")
+_NUMBER = re.compile(r"[+-]?(?:[0-9]+(?:\.[0-9]*)?|\.[0-9]+)(?:[eE][+-]?[0-9]+)?")
 
 _FRAMES = {"ICRS": "ICRS", "FK5": "FK5", "J2000": "FK5", "GALACTIC": "GALACTIC"}
 _OTHER_FRAMES = frozenset(

@@ -14,28 +14,29 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
-from xml.parsers import expat
 
 import numpy as np
 from astropy.io import fits, votable
 from astropy.table import Table
-from astropy.table.meta import get_header_from_yaml
 
+from skytally.ecsv_header import EcsvFault, read_ecsv_header
 from skytally.errors import InputError
 from skytally.local_files import expand, open_fits
+from skytally.votable_check import check_votable
 
-__all__ = ["SIZE_LIMIT_BYTES", "TextTable", "parse_table"]
+__all__ = ["SIZE_LIMIT_BYTES", "TextTable", "parse_table", "split_unit"]
 
 SIZE_LIMIT_BYTES = 256 * 1024**2
 
 _CELL_LIMIT = 1_100_000
 _COLUMN_LIMIT = 2_000
+_ROW_LIMIT = 5_000_000
+# Rows times columns; each cell takes some sixty bytes of memory.
+_CELLS_LIMIT = 20_000_000
 _DELIMITERS = (",", ";", "\t")
 _UTF16 = (b"\xff\xfe", b"\xfe\xff")
-_BRACKETED = re.compile(r"\s*[(\[]([^()\[\]]*)[)\]]\s*$")
 # How the VOTable reader writes a fault: file, line, column, code and a sentence.
 _LIBRARY_REASON = re.compile(r"\S*:\d+:\d+: [EW]\d+: (.+)")
-_TEXT_ENCODINGS = frozenset({"utf-8", "us-ascii", "ascii", "iso-8859-1", "latin-1"})
 
 
 @dataclass(frozen=True)
@@ -114,6 +115,7 @@ def parse_table(
     except UnicodeDecodeError:
         text = raw.decode("latin-1")
         notes = ("The file is not UTF-8 and was read as Latin-1; check names with accents.",)
+    _check_counts(1, max(text.count("\n"), text.count("\r")), file, error)
     lines = re.split(r"\r\n|\n|\r", text)  # splitlines() also splits at control characters
     if lines[0].startswith("# %ECSV"):
         return _ecsv(lines, file, error, notes)
@@ -203,14 +205,40 @@ def _csv(
             row=number,
             remedy="The first line that is not a comment must name the columns.",
         )
+    _check_counts(len(header), len(lines), file, error)
     names, units = _split_units(header)
     return _collect("CSV", names, units, records, separator, notes)
 
 
 def _split_units(header: list[str]) -> tuple[tuple[str, ...], tuple[str, ...]]:
     """Read a unit in brackets at the end of a column name: `exptime (min)`."""
-    found = [_BRACKETED.search(name) for name in header]
-    return tuple(header), tuple(m.group(1).strip().lower() if m else "" for m in found)
+    return tuple(header), tuple(split_unit(name)[1] for name in header)
+
+
+def split_unit(name: str) -> tuple[str, str]:
+    """Split a column name into what stands before a unit in brackets at its end, and the unit."""
+    text = name.rstrip()
+    opened = max(text.rfind("("), text.rfind("["))
+    inside = text[opened + 1 : -1]
+    if opened < 0 or text[-1] not in ")]" or ")" in inside or "]" in inside:
+        return name, ""
+    return text[:opened].rstrip(), inside.strip().lower()
+
+
+def _check_counts(columns: int, rows: int, file: str | Path, error: type[InputError]) -> None:
+    """Refuse a table whose cells would fill the memory."""
+    for count, limit, what in (
+        (columns, _COLUMN_LIMIT, "columns"),
+        (rows, _ROW_LIMIT, "rows"),
+        (columns * rows, _CELLS_LIMIT, "cells"),
+    ):
+        if count > limit:
+            raise error(
+                f"the table has {count:,} {what}, expected at most {limit:,}",
+                file=file,
+                remedy="Check that it is the right file; leave out columns that nobody needs, or "
+                "split it.",
+            )
 
 
 def _collect(
@@ -253,16 +281,15 @@ def _ecsv(
     """Read ECSV: units from the YAML header, cells by the CSV reader."""
     header = [x[2:] for x in lines[: _first_data_line(lines)] if x.startswith("# ")]
     try:
-        meta: dict[str, Any] = get_header_from_yaml(header[1:])
-        described = {str(x["name"]): str(x.get("unit", "") or "") for x in meta["datatype"]}
-        delimiter = str(meta.get("delimiter", " "))
-    except Exception as exc:  # the YAML reader raises many kinds
+        described, delimiter = read_ecsv_header(header[1:])
+    except EcsvFault as exc:
         raise error(
-            "the ECSV header cannot be read",
+            f"the ECSV header cannot be read ({exc})",
             file=file,
             row=1,
             remedy="Write the table again, or save it as plain CSV.",
         ) from exc
+    _check_counts(len(described), len(lines), file, error)
     if delimiter not in {" ", ","}:
         raise error(
             f"the ECSV delimiter is {delimiter!r}, expected a space or a comma",
@@ -274,7 +301,7 @@ def _ecsv(
     number, names = next(records, (1, "no line is left after comments"))
     if isinstance(names, str) or names != list(described):
         raise error(
-            f"the ECSV header describes the columns {', '.join(described)}, "
+            f"the ECSV header describes the columns {', '.join(list(described)[:20])[:400]}, "
             "but the line below it names others",
             file=file,
             row=number,
@@ -299,6 +326,8 @@ def _fits_table(raw: bytes, file: str | Path, error: type[InputError]) -> TextTa
                 file=file,
                 remedy='Give images with images = "...", and a log as a table.',
             )
+        header = tables[0].header
+        _check_counts(header.get("TFIELDS", 0), header.get("NAXIS2", 0), file, error)
         try:
             with warnings.catch_warnings():
                 warnings.simplefilter("ignore")  # odd units and the like: cells stay text
@@ -317,7 +346,7 @@ def _first_of(count: int) -> tuple[str, ...]:
 
 
 def _votable(raw: bytes, file: str | Path, error: type[InputError]) -> TextTable:
-    _refuse_references(raw, file, error)
+    check_votable(raw, file, error)
     try:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")  # small breaches of the standard are common
@@ -338,49 +367,6 @@ def _votable(raw: bytes, file: str | Path, error: type[InputError]) -> TextTable
     return _from_astropy("VOTable", table, kinds, _first_of(len(elements)), file, error)
 
 
-def _refuse_references(raw: bytes, file: str | Path, error: type[InputError]) -> None:
-    """Walk the XML with a bare parser and refuse whatever points outside the file."""
-
-    def refuse(what: str) -> InputError:
-        return error(
-            f"the VOTable {what}",
-            file=file,
-            remedy="Save the table with its data inside, as TABLEDATA.",
-        )
-
-    def declaration(_version: str, encoding: str | None, _standalone: int) -> None:
-        if encoding is not None and encoding.lower() not in _TEXT_ENCODINGS:
-            raise refuse(f"is encoded as {encoding!r}, expected UTF-8")
-
-    def doctype(*_: object) -> None:
-        raise refuse("has a DOCTYPE, which may pull in other files or entities")
-
-    def start(name: str, attributes: dict[str, str]) -> None:
-        if name.rpartition(":")[2].upper() != "STREAM":
-            return
-        for key, value in attributes.items():
-            key = key.rpartition(":")[2].lower()
-            if key == "href":
-                raise refuse(f"takes its data from {value[:80]!r}, another file or a URL")
-            if key == "encoding" and value.lower() not in {"base64", "none", ""}:
-                raise refuse(f"holds a stream encoded as {value[:40]!r}, expected base64")
-
-    parser = expat.ParserCreate()
-    parser.XmlDeclHandler = declaration
-    parser.StartDoctypeDeclHandler = doctype
-    parser.EntityDeclHandler = doctype
-    parser.StartElementHandler = start
-    try:
-        parser.Parse(raw, True)
-    except expat.ExpatError as exc:
-        raise error(
-            f"the XML is not well formed ({exc})",
-            file=file,
-            row=exc.lineno,
-            remedy="Fetch or write the file again.",
-        ) from exc
-
-
 def _from_astropy(
     kind: str,
     table: Table,
@@ -390,12 +376,7 @@ def _from_astropy(
     error: type[InputError],
 ) -> TextTable:
     """Turn a typed table into text cells; masked cells become empty."""
-    if len(table.columns) > _COLUMN_LIMIT:
-        raise error(
-            f"the table has {len(table.columns)} columns, expected at most {_COLUMN_LIMIT}",
-            file=file,
-            remedy="Leave out what does not belong to the log.",
-        )
+    _check_counts(len(table.columns), len(table), file, error)
     columns = tuple(
         _cells(table[name], shape_kinds.get(name, "").lower()) for name in table.colnames
     )

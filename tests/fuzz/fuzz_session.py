@@ -18,10 +18,20 @@ from typing import NoReturn
 
 from fuzz_build import BUILDERS
 from fuzz_mutate import mutate
-from fuzz_targets import TARGETS, Target, seeds
+from fuzz_targets import CORPUS, TARGETS, Target, seeds
 from skytally.errors import SkytallyError
 
-__all__ = ["FOUND", "Bug", "Counts", "case", "furnish", "run_case", "run_cases", "saved_cases"]
+__all__ = [
+    "FOUND",
+    "Bug",
+    "Counts",
+    "case",
+    "furnish",
+    "keep",
+    "run_case",
+    "run_cases",
+    "saved_cases",
+]
 
 FOUND = Path(__file__).parent / "found"
 # Of processor time; a case takes a few thousandths of a second.
@@ -79,10 +89,7 @@ def furnish(folder: Path) -> None:
     for name, source in names.items():
         path = folder / name
         path.parent.mkdir(parents=True, exist_ok=True)
-        path.write_bytes((TARGETS_CORPUS / source).read_bytes())
-
-
-TARGETS_CORPUS = Path(__file__).parent / "corpus"
+        path.write_bytes((CORPUS / source).read_bytes())
 
 
 def run_case(target: Target, data: bytes, seed: str, folder: Path) -> Bug | str:
