@@ -81,6 +81,13 @@ def _name(text: str) -> str:
     return text
 
 
+def _shown(text: str) -> str:
+    """Refuse text with characters that would steer what shows it."""
+    if not all(c.isprintable() or c in "\n\u00a0" for c in text):
+        raise _refusal("text of characters that can be seen")
+    return text
+
+
 def _pattern(text: str) -> str:
     """Refuse what cannot name a file on this machine."""
     if _URL.match(text):
@@ -185,6 +192,7 @@ def _file_alone(key: str) -> BeforeValidator:
 
 
 Name = Annotated[str, AfterValidator(_name)]
+Shown = Annotated[str, AfterValidator(_shown)]
 FilePattern = Annotated[str, AfterValidator(_pattern)]
 LocalFile = Annotated[str, AfterValidator(_local_file)]
 RegionOrMoc = Annotated[str, AfterValidator(_region_or_moc)]
@@ -335,7 +343,7 @@ class LogFileTable(Table):
     time_scale: Literal["utc", "tai", "tt", "tdb"] = Field(
         default="utc", description="the time scale of the log's times"
     )
-    accept: list[str] | None = Field(
+    accept: list[Shown] | None = Field(
         default=None,
         min_length=1,
         description='the accepted values of the quality column: ["done"]',
@@ -545,7 +553,7 @@ class ReportTable(Table):
     affiliations: list[Name] = Field(
         default_factory=list, description="a list of affiliations in quotes"
     )
-    thanks: str = Field(default="", max_length=4000, description="the acknowledgements in quotes")
+    thanks: Shown = Field(default="", max_length=4000, description="the acknowledgements in quotes")
 
 
 # Which model stands where; numbers of [[map]], [[telescope]] and [[source]] are left out.

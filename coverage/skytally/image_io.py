@@ -29,6 +29,7 @@ from skytally.log_cells import (
     read_duration,
     read_times,
     shown,
+    visible,
 )
 from skytally.observations import LogTable, SetAside
 from skytally.region_text import parse_region
@@ -120,7 +121,7 @@ def read_images(
     names = sorted(glob.glob(pattern, root_dir=base, recursive=True))
     if not names:
         raise LogError(
-            f"no file in {base} matches this pattern",
+            f"no file in {visible(str(base))} matches this pattern",
             file=pattern,
             remedy="Check the folder; a relative pattern counts from the campaign file.",
         )
@@ -137,7 +138,10 @@ def read_images(
             _check_place(frame, options, first)
         except _Aside as exc:
             aside.append(
-                SetAside(telescope, name, row, frame.exposure, exc.reason, exc.detail, exc.keyword)
+                SetAside(
+                    *(telescope, visible(name), row, frame.exposure),
+                    *(exc.reason, exc.detail, exc.keyword),
+                )
             )
             continue
         frames.append(frame)
@@ -219,14 +223,14 @@ def _value(headers: list[fits.Header], keyword: str | None) -> str:
         except fits.VerifyError:
             continue  # a card that is no FITS says nothing
         if value is not None and not isinstance(value, fits.card.Undefined):
-            text = str(value).strip()
+            text = visible(str(value).strip())
             if text:
                 return text
     return ""
 
 
 def _fill(frame: _Frame, headers: list[fits.Header], options: ImageOptions) -> None:
-    frame.exposure = _value(headers, options.exposure) or Path(frame.name).name
+    frame.exposure = _value(headers, options.exposure) or visible(Path(frame.name).name)
     frame.start_mjd = _start(headers, options.start)
     frame.band = _value(headers, options.band) or options.default_band or ""
     frame.duration_s = _number(headers, options.duration, _duration, options.default_duration)

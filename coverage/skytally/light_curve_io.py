@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from skytally.errors import InputError
 from skytally.local_files import read_local_file
-from skytally.log_cells import CellFault, read_cells, read_number, shown
+from skytally.log_cells import CellFault, read_cells, read_number, shown, visible
 from skytally.log_columns import normalise_name
 from skytally.table_io import TextTable, parse_table
 
@@ -63,7 +63,7 @@ def read_light_curve(path: str | Path) -> dict[str, tuple[Floats, Floats]]:
         )
     days = _numbers(table, at["days"], 0.0, DAYS_LIMIT, path)
     magnitude = _numbers(table, at["magnitude"], -MAGNITUDE_LIMIT, MAGNITUDE_LIMIT, path)
-    bands = table.columns[at["band"]]
+    bands = [visible(band) for band in table.columns[at["band"]]]
     curves = {}
     for band in dict.fromkeys(bands):
         rows = np.array([i for i, b in enumerate(bands) if b == band], dtype=np.int64)

@@ -28,6 +28,7 @@ __all__ = [
     "read_right_ascension",
     "read_times",
     "shown",
+    "visible",
 ]
 
 TIME_SCALES = ("utc", "tai", "tt", "tdb")
@@ -99,6 +100,17 @@ def shown(value: str) -> str:
         return "nothing"
     clean = "".join(c if c.isprintable() else "?" for c in value)
     return repr(clean if len(clean) <= 60 else clean[:57] + "...")
+
+
+def visible(text: str) -> str:
+    """Return a name from a file with a mark for each character that is not to be seen.
+
+    Such characters steer a terminal, turn the direction of writing round, or make
+    two names look like one. Names that differ still differ from one without them.
+    """
+    if text.isprintable():
+        return text
+    return "".join(c if c.isprintable() else "\ufffd" for c in text)
 
 
 def read_cells(

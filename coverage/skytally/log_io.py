@@ -28,6 +28,7 @@ from skytally.log_cells import (
     read_right_ascension,
     read_times,
     shown,
+    visible,
 )
 from skytally.log_columns import ALIASES, find_columns, listed, mapping_remedy, normalise_name
 from skytally.log_regions import is_moc_path
@@ -165,7 +166,7 @@ class _Reading:
         )
         self._at = find_columns(table, options.columns, path, self._notes)
         self._names = [
-            _text(cell) or f"row {row}"
+            visible(_text(cell)) or f"row {row}"
             for cell, row in zip(self._cells("exposure"), table.rows, strict=True)
         ]
 
@@ -178,7 +179,7 @@ class _Reading:
         self._check_regions(region)
         angle = self._angle()
         duration = self._duration(start)
-        band = [_text(x) or self._options.band or "" for x in self._cells("band")]
+        band = [visible(_text(x)) or self._options.band or "" for x in self._cells("band")]
         depth = self._magnitude("depth", self._options.depth)
         extinction = self._extinction()
         fov = self._fields_of_view(region, ra, dec)

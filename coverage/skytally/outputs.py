@@ -24,6 +24,8 @@ from dataclasses import asdict
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 
+from astropy.table import MaskedColumn
+
 from skytally import __version__
 from skytally.circular import render_circular
 from skytally.errors import OutputError
@@ -73,6 +75,7 @@ _RESERVED = frozenset(
     {"all", "con", "prn", "aux", "nul"}
     | {f"{port}{digit}" for port in ("com", "lpt") for digit in range(10)}
 )
+_FORMULA = frozenset("=+-@")
 _NO_ROOM = {errno.ENOSPC, errno.EDQUOT, errno.EFBIG}
 _NO_RIGHT = {errno.EACCES, errno.EPERM, errno.EROFS}
 
@@ -206,8 +209,26 @@ def file_stems(names: Iterable[str]) -> tuple[str, ...]:
 
 def _ecsv(results: Results) -> str:
     text = io.StringIO()
-    to_table(results).write(text, format="ascii.ecsv")
+    table = to_table(results)
+    for name in table.colnames:
+        column = table[name]
+        if column.dtype.kind == "U":
+            table[name] = MaskedColumn(
+                [_inert(cell) for cell in column.filled("")],
+                mask=column.mask,
+                description=column.description,
+            )
+    table.write(text, format="ascii.ecsv")
     return text.getvalue().rstrip("\n") + "\n"
+
+
+def _inert(cell: str) -> str:
+    """Return text that a spreadsheet shows rather than computes.
+
+    It takes the apostrophe for the sign of text (common practice). Numbers, which may
+    begin with a minus sign, have columns of their own.
+    """
+    return f"'{cell}" if cell[:1] in _FORMULA else cell
 
 
 def _render_circulars(results: Results, folder: Path) -> None:

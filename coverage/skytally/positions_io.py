@@ -23,6 +23,7 @@ from skytally.log_cells import (
     read_number,
     read_right_ascension,
     shown,
+    visible,
 )
 from skytally.log_columns import listed, normalise_name
 from skytally.table_io import SIZE_LIMIT_BYTES, TextTable, parse_table
@@ -237,7 +238,7 @@ class _Reading:
         self._at = _find_columns(table, path, self._notes)
         names = self._cells("name")
         self._names = [
-            f"row {row}" if name.lower() in MISSING_WORDS else name
+            f"row {row}" if name.lower() in MISSING_WORDS else visible(name)
             for name, row in zip(names, table.rows, strict=True)
         ]
 
