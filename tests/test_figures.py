@@ -183,13 +183,9 @@ def test_the_galactic_plane_passes_the_galactic_centre() -> None:
 
 
 def test_telescopes_differ_in_colour_or_in_line_and_hatch() -> None:
-    styles = [style_of(index) for index in range(42)]
-    assert len({(s.colour, s.hatch) for s in styles}) == 42
-    assert len({(s.colour, str(s.line), s.marker) for s in styles}) == 42
-    hatches = [hatch_mask(number, (40, 40)) for number in range(6)]
-    for first in range(6):
-        for second in range(first):
-            assert (hatches[first] != hatches[second]).mean() > 0.1
+    styles = [style_of(index) for index in range(84)]
+    assert len({(s.colour, s.hatch) for s in styles}) == 84
+    assert len({(s.colour, str(s.line), s.marker) for s in styles}) == 84
 
 
 def luminance(colour: str) -> float:
@@ -400,7 +396,10 @@ def test_the_chart_shows_as_much_as_was_counted(results: Results) -> None:
 
 
 def test_pictures_mix_shade_and_inks_sample_by_sample() -> None:
-    """Each sample by hand: its share of the probability, then ink over ink (common practice)."""
+    """Each sample by hand: its share of the probability, then ink over ink, each the product of
+    its colour and the shade (multiply and source-over: W3C Compositing and Blending Level 1;
+    from memory).
+    """
     rng = np.random.default_rng(5)
     skymap = sample_map("1 first", 1.0)
     row = rng.integers(0, skymap.starts.size, (17, 23))
@@ -431,13 +430,14 @@ def test_pictures_mix_shade_and_inks_sample_by_sample() -> None:
             part = step / 20
             colour = np.array(to_rgb("#f1f3f5")) * (1 - part) + np.array(to_rgb("#8894a0")) * part
             colour = np.ones(3) if step < 2 or here == 0 else colour
+            paper = colour
             for layer, region in zip(layers, regions):
                 if not ((region.starts <= place) & (place < region.stops)).any():
                     continue
                 seen.add(layer.hatch)
                 lined = layer.hatch is not None and hatch_mask(layer.hatch, row.shape)[y, x]
                 ink = 0.8 if layer.hatch is None else 0.85 if lined else 0.2
-                colour = ink * np.array(to_rgb(layer.colour)) + (1 - ink) * colour
+                colour = ink * paper * np.array(to_rgb(layer.colour)) + (1 - ink) * colour
             wanted.append(255 * colour)
         assert min(np.abs(picture[y, x, :3] - one).max() for one in wanted) < 0.51
     assert seen == {1, 4, None}

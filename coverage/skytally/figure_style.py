@@ -56,6 +56,7 @@ WIDTH_IN = 6.7
 # Okabe and Ito, Color Universal Design (2008; from memory): told apart with any
 # common colour vision. Its yellow is left out: too pale on white.
 _COLOURS = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#56B4E9", "#000000")
+# Twelve of each kind, so that in grey as well a dozen telescopes can be told apart.
 _LINES: tuple[str | tuple[int, tuple[float, ...]], ...] = (
     "-",
     (0, (5, 1.5)),
@@ -63,9 +64,16 @@ _LINES: tuple[str | tuple[int, tuple[float, ...]], ...] = (
     (0, (6, 1.5, 1.2, 1.5)),
     (0, (2.5, 1)),
     (0, (8, 1.5, 1.2, 1.5, 1.2, 1.5)),
+    (0, (12, 2)),
+    (0, (1.2, 3.5)),
+    (0, (5, 4)),
+    (0, (8, 1.5, 2.5, 1.5)),
+    (0, (4, 1.2, 4, 1.2, 1.2, 1.2)),
+    (0, (12, 1.5, 1.2, 1.5, 1.2, 1.5, 1.2, 1.5)),
 )
-_MARKERS = ("o", "s", "^", "D", "v", "P")
-# Patterns repeat every 10 samples: x + y, x − y, x, y, both diagonals, dots.
+_MARKERS = ("o", "s", "^", "D", "v", "P", "X", "<", "*", ">", "p", "d")
+# Patterns repeat every 10 samples: x + y, x − y, x, y, both diagonals, dots; then
+# every 20, broader: the same four directions in bands, a grid, and a chequer.
 _HATCH_PERIOD = 10
 _HATCHES: tuple[Callable[[NDArray[np.int64], NDArray[np.int64]], NDArray[np.bool_]], ...] = (
     lambda x, y: (x + y) % _HATCH_PERIOD < 2,
@@ -74,6 +82,12 @@ _HATCHES: tuple[Callable[[NDArray[np.int64], NDArray[np.int64]], NDArray[np.bool
     lambda x, y: x % _HATCH_PERIOD < 2,
     lambda x, y: ((x + y) % _HATCH_PERIOD < 2) | ((x - y) % _HATCH_PERIOD < 2),
     lambda x, y: (x % (_HATCH_PERIOD // 2) < 2) & (y % (_HATCH_PERIOD // 2) < 2),
+    lambda x, y: (x + y) % (2 * _HATCH_PERIOD) < 8,
+    lambda x, y: (x - y) % (2 * _HATCH_PERIOD) < 8,
+    lambda x, y: y % (2 * _HATCH_PERIOD) < 8,
+    lambda x, y: x % (2 * _HATCH_PERIOD) < 8,
+    lambda x, y: (x % _HATCH_PERIOD < 2) | (y % _HATCH_PERIOD < 2),
+    lambda x, y: (x // _HATCH_PERIOD + y // _HATCH_PERIOD) % 2 == 0,
 )
 
 _RC: dict[str, Any] = {
@@ -116,7 +130,7 @@ class TelescopeStyle:
 def style_of(index: int) -> TelescopeStyle:
     """Return the style of the telescope with this index.
 
-    Seven colours and six hatches have no common factor: 42 styles differ.
+    Seven colours and twelve hatches have no common factor: 84 styles differ.
     """
     turn = index % len(_HATCHES)
     return TelescopeStyle(

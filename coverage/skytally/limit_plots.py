@@ -192,7 +192,7 @@ def _shades(number: int) -> list[tuple[float, float, float]]:
 def histogram_height(histograms: Sequence[DepthHistogram]) -> float:
     """Return the height of `histogram_figure`, inches."""
     rows = -(-min(len(histograms), MOST_BANDS) // 4)
-    return 0.2 + _PANEL_STEP * (rows - 1) + _PANEL + 0.45
+    return 0.2 + _PANEL_STEP * (rows - 1) + _PANEL + 0.36
 
 
 def histogram_figure(histograms: Sequence[DepthHistogram]) -> Figure:

@@ -16,7 +16,6 @@ from skytally.figure_style import (
     INK,
     RULE,
     WIDTH_IN,
-    hatch_mask,
     new_figure,
     plain_axes,
     short_label,
@@ -44,7 +43,9 @@ __all__ = [
 # Lines that can carry a label at their end without crowding.
 MOST_LABELS = 9
 MOST_BANDS = 8
-TIMELINE_IN, CREDIT_IN = 2.9, 1.45
+TIMELINE_IN, CREDIT_IN = 2.9, 1.2
+# From this probability covered on, one bar has room for the shares as well.
+_ONE_BAR = 0.3
 _SAMPLES_PER_INCH = 192
 _VECTOR_POINTS = 2000
 # Height of a band's panel with its axis and title, inches, and of the panel alone.
@@ -181,40 +182,52 @@ def _mark_versions(axes: Axes, versions: Sequence[tuple[float, str]], *, is_log:
 
 
 def credit_figure(results: Results) -> Figure:
-    """Draw the shares of the covered probability that add up to the total, and the rest."""
+    """Draw the shares of the covered probability that add up to the total, and the rest.
+
+    One bar is all probability. Where little is covered, the shares have a second one.
+    """
     total = results.row().probability
     credit = [results.row(telescope=t.name).probability_credit for t in results.telescopes]
     shares = [(index, value) for index, value in enumerate(credit) if value > 0]
     shares.sort(key=lambda share: -share[1])
+    is_one = total >= _ONE_BAR
+    scale, rows = (1.0, (0.5, 0.83)) if is_one else (1 / total, (0.42, 0.62))
     figure = new_figure(CREDIT_IN)
     axes = figure.add_axes((0.005, 0.0, 0.99, 1.0))
     axes.set_xlim(0, 1)
     axes.set_ylim(0, 1)
     axes.axis("off")
-    _bar(axes, 0.0, total, (0.74, 0.87), _even(INK, 0.75))
-    _bar(axes, total, 1.0, (0.74, 0.87), _hatched_rest(1 - total))
+    upper = rows if is_one else (0.74, 0.87)
+    _bar(axes, total, 1.0, upper, _hatched_rest(1 - total))
     _sided_text(axes, total)
-    for above, below in ((0.0, 0.0), (total, 1.0)):
-        axes.plot([above, below], [0.74, 0.62], color=GREY, lw=0.5)
-    left = 0.0
+    if not is_one:
+        _bar(axes, 0.0, total, upper, _even(INK, 0.75))
+        for above, below in ((0.0, 0.0), (total, 1.0)):
+            axes.plot([above, below], [0.74, 0.62], color=GREY, lw=0.5)
+    left, tall = 0.0, round((rows[1] - rows[0]) * CREDIT_IN * _SAMPLES_PER_INCH)
     unnamed = []
     for index, value in shares:
-        width = value / total
-        picture = swatch(index, max(2, round(width * WIDTH_IN * _SAMPLES_PER_INCH)), 60)
-        _bar(axes, left, left + width, (0.42, 0.62), picture)
+        width = value * scale
+        picture = swatch(index, _columns(width), tall)
+        _bar(axes, left, left + width, rows, picture)
         name, amount = short_label(results.telescopes[index].name, 16), percent(value)
         # About 0.065 inches a letter at this size.
         if width * WIDTH_IN > 0.065 * max(len(name), len(amount)) + 0.05:
             middle = left + width / 2
-            axes.text(middle, 0.38, name, fontsize=7, ha="center", va="top")
-            axes.text(middle, 0.25, amount, fontsize=7, ha="center", va="top")
+            axes.text(middle, rows[0] - 0.05, name, fontsize=7, ha="center", va="top")
+            axes.text(middle, rows[0] - 0.19, amount, fontsize=7, ha="center", va="top")
         else:
             unnamed.append(f"{name} {amount}")
         left += width
-    axes.text(1.0, 0.1, _listed(unnamed), fontsize=7, ha="right", va="top")
+    axes.text(1.0, 0.12, _listed(unnamed), fontsize=7, ha="right", va="top")
     axes.set_xlim(0, 1)
     axes.set_ylim(0, 1)
     return figure
+
+
+def _columns(width: float) -> int:
+    """Return the samples across a part of the bar."""
+    return max(2, round(width * WIDTH_IN * _SAMPLES_PER_INCH))
 
 
 def _listed(names: Sequence[str], most: int = 4) -> str:
@@ -251,10 +264,10 @@ def _even(colour: str, opacity: float) -> NDArray[np.float64]:
 
 
 def _hatched_rest(width: float) -> NDArray[np.float64]:
-    """Return the picture of what nobody covered: pale diagonal lines."""
-    shape = 30, max(2, round(width * WIDTH_IN * _SAMPLES_PER_INCH))
-    picture = np.ones((*shape, 4))
-    picture[hatch_mask(0, shape), :3] = to_rgb(RULE)
+    """Return the picture of what nobody covered: pale lines, wider apart than any hatch."""
+    y, x = np.indices((60, _columns(width)))
+    picture = np.ones((*x.shape, 4))
+    picture[(x + 2 * y) % 30 < 3, :3] = to_rgb(RULE)
     return picture
 
 

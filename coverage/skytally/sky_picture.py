@@ -66,11 +66,14 @@ def paint_sky(position: Ints, skymap: SkyMap, layers: Sequence[Layer]) -> Bytes:
     inked = np.append(members.any(axis=0), False)[place] & on_sky
     y, x = np.nonzero(inked)
     place = place[inked]
-    colour = _RAMP[shade[inked]]
+    paper = _RAMP[shade[inked]]
+    colour = paper.copy()
     for layer, member in zip(layers, members):
         mine = np.flatnonzero(member[place])
         opacity = _ink(layer.hatch, x[mine], y[mine])[:, None]
-        colour[mine] = colour[mine] * (1 - opacity) + np.array(to_rgb(layer.colour)) * opacity
+        # Darkened by the paper, or in grey a pale ink would not show on a dark shade.
+        ink = paper[mine] * np.array(to_rgb(layer.colour))
+        colour[mine] = colour[mine] * (1 - opacity) + ink * opacity
     image[inked, :3] = _bytes(colour)
     return image
 
