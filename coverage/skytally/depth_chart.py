@@ -33,6 +33,7 @@ from skytally.sky_frame import (
     whole_sky_frame,
     zoom_frame,
 )
+from skytally.sky_parts import Part, middle_ra
 from skytally.skymap import SkyMap
 from skytally.spans import LINE_ORDER, Ints
 
@@ -49,6 +50,9 @@ _SHALLOW = 0.05
 _ROUND = (0.05, 0.1, 0.2, 0.25, 0.5, 1.0, 2.0, 5.0, 50.0)
 # Beyond this radius about its middle a region is shown on the whole sky, degrees.
 _WIDEST_DEG = 50.0
+# What lies within this radius can always be shown together, degrees.
+_NEAR_DEG = 6.0
+_WIDEST_IN = 3.6
 _LEFT, _BETWEEN, _RIGHT = 0.42, 0.16, 0.06
 # Above each chart its band and its bar, below a column the labels and what limits mean.
 _HEAD, _FOOT, _TERMS, _BAR = 0.44, 0.32, 0.22, 0.08
@@ -86,6 +90,8 @@ class DepthChart:
         """Width and height of a panel, inches."""
         columns = self._columns
         width = (WIDTH_IN - _LEFT - _RIGHT - _BETWEEN * (columns - 1)) / columns
+        if self.window.code == "ZEA":
+            width = min(width, _WIDEST_IN)
         return width, width * self.window.aspect
 
     @property
@@ -156,7 +162,7 @@ class DepthChart:
             axes.set_yticklabels([])
 
 
-def depth_chart_of(results: Results, terms: str, middle_ra_deg: float) -> DepthChart | None:
+def depth_chart_of(results: Results, terms: str, part: Part) -> DepthChart | None:
     """Lay out the chart of depths; None without a limit anywhere.
 
     Parameters
@@ -165,8 +171,8 @@ def depth_chart_of(results: Results, terms: str, middle_ra_deg: float) -> DepthC
         With the deepest limits of every place.
     terms : str
         System, significance and extinction of the limits.
-    middle_ra_deg : float
-        Right ascension in the middle, where the whole sky must be shown.
+    part : Part
+        The most probable part of the newest map, which is shown as well where it is near.
     """
     deepest = results.sky.deepest
     if deepest is None:
@@ -177,7 +183,7 @@ def depth_chart_of(results: Results, terms: str, middle_ra_deg: float) -> DepthC
     limited = np.asarray(np.isfinite(deepest.limit[rows]).any(axis=0))
     if not limited.any():
         return None
-    window = _window(_directions(deepest, limited), middle_ra_deg)
+    window = _window(_directions(deepest, limited), part)
     return DepthChart(tuple(bands), deepest, window, terms)
 
 
@@ -190,14 +196,27 @@ def _directions(deepest: DeepestLimits, chosen: NDArray[np.bool_]) -> Floats:
     return np.stack((lon.to_value(u.deg), lat.to_value(u.deg)), axis=1)
 
 
-def _window(lonlat_deg: Floats, middle_ra_deg: float) -> Window:
-    """Return the window about directions: the whole sky where they are spread too wide."""
+def _window(lonlat_deg: Floats, part: Part) -> Window:
+    """Return the window of directions and a part near by: the whole sky if they are far spread."""
+    both = np.concatenate((lonlat_deg, part.lonlat_deg))
+    for shown in (both, lonlat_deg):
+        extent = _radius_deg(shown)
+        # The part is there for comparison and must not make what is charted small.
+        least = max(2.5 * _radius_deg(lonlat_deg), _NEAR_DEG)
+        if extent < _WIDEST_DEG and (shown is lonlat_deg or extent < least):
+            return zoom_window(shown, margin=0.06, aspects=(0.6, 1.1))
+    return whole_sky_window(middle_ra(part))
+
+
+def _radius_deg(lonlat_deg: Floats) -> float:
+    """Return how far directions reach from their middle, degrees; 180 without one."""
     vector = lonlat_to_vector(*lonlat_deg.T)
     middle = vector.sum(axis=0)
     length = float(np.linalg.norm(middle))
-    if length < 1e-9 or (vector @ middle).min() < np.cos(np.radians(_WIDEST_DEG)) * length:
-        return whole_sky_window(middle_ra_deg)
-    return zoom_window(lonlat_deg, margin=0.06, aspects=(0.6, 1.1))
+    if length < 1e-9:
+        return 180.0
+    cosine = float((vector @ middle).min()) / length
+    return float(np.degrees(np.arccos(np.clip(cosine, -1, 1))))
 
 
 def limit_steps(limit: Floats, area: Floats) -> tuple[Floats, bool]:

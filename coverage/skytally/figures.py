@@ -24,7 +24,6 @@ from skytally.plots import (
 )
 from skytally.results import Results
 from skytally.sky_chart import (
-    middle_ra,
     versions_figure,
     versions_height,
     whole_sky_figure,
@@ -164,9 +163,12 @@ def _timeline(results: Results) -> Sketch:
     )
     final = total.probability[-1]
     half = next(h for h, p in zip(total.hours, total.probability) if p >= final / 2)
+    last = hours_text(total.hours[-1])
     finding = (
         f"Half of the {percent(final)} finally covered was reached {hours_text(half)} after the "
-        f"event, the last new sky at {hours_text(total.hours[-1])}."
+        f"event, the last new sky at {last}."
+        if len(total.hours) > 1
+        else f"All of the {percent(final)} covered was reached at once, {last} after the event."
     )
     lines = telescope_timelines(results)
     note = (
@@ -179,7 +181,7 @@ def _timeline(results: Results) -> Sketch:
         "Probability against time",
         f"{finding} Each telescope counts all it covered, shared or not; dotted uprights: "
         f"map versions issued. Probabilities are those of "
-        f"{version_text(results.newest.version)}.{note}",
+        f"{version_text(results.newest.version)}.{note} Every step stands in tally.json.",
         f"Step plot of the probability covered against hours since the event. {finding}",
         TIMELINE_IN,
         lambda: timeline_figure(results),
@@ -193,7 +195,8 @@ def _credit(results: Results) -> Sketch:
     alone = sum(row.probability_unique for row in rows)
     finding = (
         f"{best.telescope} has the largest share, {percent(best.probability_credit / total, 0)} of "
-        f"what is covered; {percent(min(alone / total, 1.0), 0)} of it was seen by one alone."
+        f"what is covered; {percent(min(alone / total, 1.0), 0)} of it was seen by one "
+        "telescope alone."
     )
     return Sketch(
         "credit",
@@ -210,9 +213,13 @@ def _depth(results: Results) -> Sketch:
     rows = depth_bands(results)
     depth, band = max((e.depth, str(e.band)) for e in results.exposures if e.depth is not None)
     without = sum(e.depth is None for e in results.exposures)
-    finding = (
-        f"The deepest exposure reached {magnitude_text(depth)} in {band}; "
-        f"{count('exposure', without)} of {len(results.exposures)} came without a limit."
+    finding = f"The deepest exposure reached {magnitude_text(depth)} in {band}"
+    finding += (
+        f"; {count('exposure', without)} of {len(results.exposures)} came without a limit."
+        if without
+        else "; every exposure has a limit."
+        if len(results.exposures) > 1
+        else "; it is the only one."
     )
     note = f" The {MOST_BANDS} most used bands are shown." if len(rows) > MOST_BANDS else ""
     # Exposures are listed as logged; only the sums over them are corrected.
@@ -220,23 +227,24 @@ def _depth(results: Results) -> Sketch:
     return Sketch(
         "depth",
         "Limits against time",
-        f"{finding} One mark per exposure: {limit_terms(settings)}.{note}",
+        f"{finding} One mark per exposure: {limit_terms(settings)}.{note} Every exposure stands in "
+        "tally.json.",
         f"Plots of limiting magnitude against hours since the event, one per band. {finding}",
         depth_height(results),
         lambda: depth_figure(results),
     )
 
 
-def _depth_chart(results: Results, middle: Part) -> list[Sketch]:
+def _depth_chart(results: Results, part: Part) -> list[Sketch]:
     """Return the chart of depths, where any place has a limit."""
     terms = limit_terms(results.settings, limit_rows(results))
-    chart = depth_chart_of(results, terms, middle_ra(middle))
+    chart = depth_chart_of(results, terms, part)
     if chart is None:
         return []
     depths = [chart.deepest.band_depth(band) for band in chart.bands]
     most = max(depths, key=lambda depth: depth.area_deg2)
     area = area_text(most.area_deg2, most.area_deg2, most.area_deg2)
-    sky = f"In {most.band}, the band with most sky," if len(depths) > 1 else f"In {most.band}"
+    sky = f"In {most.band}, the band with most sky," if len(depths) > 1 else f"In {most.band},"
     finding = f"{sky} {area} have a limit: "
     finding += (
         f"half of it reaches {magnitude_text(most.over_50)}, 90{NBSP}% "

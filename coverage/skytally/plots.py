@@ -219,7 +219,8 @@ def credit_figure(results: Results) -> Figure:
         else:
             unnamed.append(f"{name} {amount}")
         left += width
-    axes.text(1.0, 0.12, _listed(unnamed), fontsize=7, ha="right", va="top")
+    words = _listed(unnamed, "then " if len(unnamed) < len(shares) else "")
+    axes.text(1.0, 0.12, words, fontsize=7, ha="right", va="top")
     axes.set_xlim(0, 1)
     axes.set_ylim(0, 1)
     return figure
@@ -230,12 +231,12 @@ def _columns(width: float) -> int:
     return max(2, round(width * WIDTH_IN * _SAMPLES_PER_INCH))
 
 
-def _listed(names: Sequence[str], most: int = 4) -> str:
+def _listed(names: Sequence[str], start: str, most: int = 4) -> str:
     """Name the segments too narrow for a label, in the order of the bar."""
     if not names:
         return ""
     more = f", {len(names) - most} more" if len(names) > most else ""
-    return f"then {', '.join(names[:most])}{more}"
+    return f"{start}{', '.join(names[:most])}{more}"
 
 
 def _sided_text(axes: Axes, total: float) -> None:
@@ -302,7 +303,8 @@ def depth_figure(results: Results) -> Figure:
     figure = new_figure(height)
     depths = [e.depth for e in results.exposures if e.depth is not None and e.band in bands]
     hours = [e.hours for e in results.exposures if e.depth is not None and e.band in bands]
-    room = 0.08 * max(np.ptp(depths), 0.5)
+    # No less than a magnitude: finer steps would look like differences.
+    room = max(0.08 * np.ptp(depths), (1 - np.ptp(depths)) / 2)
     left = 0.42 / WIDTH_IN
     width = (1 - left - 0.01 - 0.025 * (columns - 1)) / columns
     for place, band in enumerate(bands):

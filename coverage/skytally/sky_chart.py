@@ -34,13 +34,12 @@ from skytally.sky_frame import (
     whole_sky_frame,
     zoom_frame,
 )
-from skytally.sky_parts import ZOOM_GAP, ZOOM_LEFT, Part, Zoom
+from skytally.sky_parts import ZOOM_GAP, ZOOM_LEFT, Part, Zoom, middle_ra
 from skytally.sky_picture import TAIL, Layer, paint_sky, ramp_key
 from skytally.spans import Spans
 from skytally.wording import percent
 
 __all__ = [
-    "middle_ra",
     "versions_figure",
     "versions_height",
     "whole_sky_figure",
@@ -182,14 +181,6 @@ def versions_figure(results: Results, middle: Part) -> Figure:
 def _shown(results: Results) -> list[int]:
     """Return the telescopes that covered any sky."""
     return [index for index, region in enumerate(results.sky.covered) if region]
-
-
-def middle_ra(part: Part) -> float:
-    """Return the right ascension, a whole multiple of two hours, that centres a part."""
-    lon = np.radians(part.lonlat_deg[:, 0])
-    return (
-        float(30 * round(np.degrees(np.arctan2(np.sin(lon).sum(), np.cos(lon).sum())) / 30)) % 360
-    )
 
 
 def _by_telescope(results: Results) -> list[Layer]:

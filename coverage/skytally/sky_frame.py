@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import Any
 
 import numpy as np
 from matplotlib.axes import Axes
@@ -35,6 +36,16 @@ Floats = NDArray[np.float64]
 
 # Samples per inch: twice what a screen shows, so that print is clean as well.
 SAMPLES_PER_INCH = 192
+# Least distance of labels beside one another and of labels one above the other, inches.
+_TICK_WIDTH_IN, _TICK_HEIGHT_IN = 0.44, 0.2
+# Where else along a contour its label may stand, in parts of its length.
+_AROUND = (0.0, 0.2, -0.2, 0.4)
+_LABEL_BOX: dict[str, Any] = {
+    "boxstyle": "square,pad=0.1",
+    "facecolor": "white",
+    "edgecolor": "none",
+    "alpha": 0.8,
+}
 
 
 def samples_of(window: Window, width_in: float) -> Ints:
@@ -106,13 +117,13 @@ def _label_contour(
     for piece in longest:
         if len(piece) < 12 or np.hypot(*np.ptp(piece, axis=0)) < least:
             continue
-        place = piece[int(len(piece) * (0.3 if level > 0.6 else 0.65))]
         inset = 0.03 * (window.right - window.left)
-        if not (
-            window.left + inset < place[0] < window.right - inset
-            and window.bottom + inset < place[1] < window.top - inset
-        ):
-            place = piece[len(piece) // 2]
+        wanted = 0.3 if level > 0.6 else 0.65
+        places = piece[[int(len(piece) * (wanted + step) % len(piece)) for step in _AROUND]]
+        places = places[_well_inside(window, places, inset)]
+        if len(places) == 0:
+            continue
+        place = places[0]
         if any(np.hypot(*(place - other)) < 4 * inset for other in placed):
             continue
         placed.append(place)
@@ -132,6 +143,16 @@ def _label_contour(
                 "alpha": 0.85,
             },
         )
+
+
+def _well_inside(window: Window, plane: Floats, inset: float) -> NDArray[np.bool_]:
+    """Tell which points keep a distance from the frame, or from the rim of the whole sky."""
+    x, y = plane.T
+    inside = (window.left + inset < x) & (x < window.right - inset)
+    inside &= (window.bottom + inset < y) & (y < window.top - inset)
+    if window.code == "MOL":
+        inside &= np.hypot(x / (MOLLWEIDE_X - inset), y / (MOLLWEIDE_Y - inset)) < 1
+    return np.asarray(inside)
 
 
 def _plot_graticule(axes: Axes, lines: Sequence[GraticuleLine]) -> None:
@@ -158,7 +179,6 @@ def whole_sky_frame(axes: Axes, window: Window, *, labels: bool) -> None:
     axes.add_patch(rim)
     if not labels:
         return
-    box = {"boxstyle": "square,pad=0.1", "facecolor": "white", "edgecolor": "none", "alpha": 0.75}
     for line in lines:
         if line.is_meridian and line.value_deg % 60 == 0:
             x, y = window.project(np.array([[line.value_deg, 0.0]]))[0]
@@ -171,7 +191,7 @@ def whole_sky_frame(axes: Axes, window: Window, *, labels: bool) -> None:
                     ha="center",
                     va="center",
                     color=INK,
-                    bbox=box,
+                    bbox=_LABEL_BOX,
                     zorder=5,
                 )
         elif not line.is_meridian and line.value_deg:
@@ -186,17 +206,69 @@ def zoom_frame(axes: Axes, window: Window) -> None:
     lines = graticule(window)
     _plot_graticule(axes, lines)
     _plot_galactic_plane(axes, window)
+    if _shows_a_pole(window):
+        _label_lines(axes, window, lines)
+        return
     x_ticks, y_ticks = [], []
     for line in lines:
         if line.is_meridian:
             x_ticks += [(x, line.label) for x in _crossings(line.plane, 1, window.bottom)]
         else:
             y_ticks += [(y, line.label) for y in _crossings(line.plane, 0, window.left)]
-    x_ticks = _apart(x_ticks, window.left, window.right, 0.11)
-    y_ticks = _apart(y_ticks, window.bottom, window.top, 0.06)
+    wide, tall = _size_in(axes)
+    x_ticks = _apart(x_ticks, window.left, window.right, _TICK_WIDTH_IN / wide)
+    y_ticks = _apart(y_ticks, window.bottom, window.top, _TICK_HEIGHT_IN / tall)
     axes.set_xticks([x for x, _ in x_ticks], [label for _, label in x_ticks], fontsize=6)
     axes.set_yticks([y for y, _ in y_ticks], [label for _, label in y_ticks], fontsize=6)
     axes.tick_params(length=2.5, pad=1.5)
+
+
+def _size_in(axes: Axes) -> tuple[float, float]:
+    """Return width and height of a chart, inches."""
+    return axes.bbox.width / axes.figure.dpi, axes.bbox.height / axes.figure.dpi
+
+
+def _shows_a_pole(window: Window) -> bool:
+    x, y = window.project(np.array([[0.0, 90.0], [0.0, -90.0]])).T
+    inside = (window.left < x) & (x < window.right) & (window.bottom < y) & (y < window.top)
+    return bool(inside.any())
+
+
+def _label_lines(axes: Axes, window: Window, lines: Sequence[GraticuleLine]) -> None:
+    """Label lines where they run: about a pole they meet a frame anywhere, or nowhere.
+
+    Meridians at their ends, parallels one beside the other up the middle.
+    """
+    scale = (window.right - window.left) / _size_in(axes)[0]
+    across, up = 0.28 * scale, 0.1 * scale
+    middle = np.array([window.left + window.right, window.bottom + window.top]) / 2
+    placed: list[Floats] = []
+    for line in sorted(lines, key=lambda one: one.is_meridian):
+        x, y = line.plane.T
+        with np.errstate(invalid="ignore"):
+            inside = (x > window.left + across) & (x < window.right - across)
+            inside &= (y > window.bottom + up) & (y < window.top - up)
+            # Where the scale bar stands.
+            inside &= (x < window.right - 1.3 * scale) | (y > window.bottom + 0.4 * scale)
+        points = line.plane[inside]
+        if len(points) == 0:
+            continue
+        outward = np.abs(points - middle) @ [1.0, float(line.is_meridian)]
+        place = points[np.argmax(outward) if line.is_meridian else np.argmin(outward)]
+        if any((np.abs(place - other) < (2 * across, 1.5 * up)).all() for other in placed):
+            continue
+        placed.append(place)
+        axes.text(
+            float(place[0]),
+            float(place[1]),
+            line.label.replace("\n", " "),
+            fontsize=5.5,
+            ha="center",
+            va="center",
+            color=INK,
+            zorder=5,
+            bbox=_LABEL_BOX,
+        )
 
 
 def _crossings(plane: Floats, axis: int, edge: float) -> list[float]:
@@ -237,10 +309,5 @@ def scale_bar(axes: Axes, window: Window) -> None:
         ha="center",
         va="bottom",
         zorder=7,
-        bbox={
-            "boxstyle": "square,pad=0.1",
-            "facecolor": "white",
-            "edgecolor": "none",
-            "alpha": 0.75,
-        },
+        bbox=_LABEL_BOX,
     )

@@ -23,6 +23,7 @@ __all__ = [
     "Part",
     "Zoom",
     "credible_parts",
+    "middle_ra",
     "zooms",
 ]
 
@@ -159,3 +160,11 @@ def _directions(starts: Ints, stops: Ints, cells: Ints) -> Floats:
     chosen = chosen[:: max(1, chosen.size // 4000)]
     lon, lat = healpix_to_lonlat(chosen, 1 << LINE_ORDER, order="nested")
     return np.stack((lon.to_value(u.deg), lat.to_value(u.deg)), axis=1)
+
+
+def middle_ra(part: Part) -> float:
+    """Return the right ascension, a whole multiple of two hours, that centres a part."""
+    lon = np.radians(part.lonlat_deg[:, 0])
+    return (
+        float(30 * round(np.degrees(np.arctan2(np.sin(lon).sum(), np.cos(lon).sum())) / 30)) % 360
+    )
