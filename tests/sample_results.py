@@ -113,7 +113,9 @@ def _rings(index: int, detectors: int, size_deg: float) -> MosaicCamera:
     return MosaicCamera(corners, tuple(f"d{n}" for n in range(len(corners))))
 
 
-def _shots(skymap: SkyMap, telescopes: int, exposures: int, *, covered: bool) -> list[_Shot]:
+def _shots(
+    skymap: SkyMap, telescopes: int, exposures: int, bands: int, *, covered: bool
+) -> list[_Shot]:
     """Point at the map's best cells, spaced out; visit every third field twice."""
     random = np.random.default_rng(7)
     vector = _centres(ORDER)
@@ -133,7 +135,7 @@ def _shots(skymap: SkyMap, telescopes: int, exposures: int, *, covered: bool) ->
         shots.append(
             _Shot(
                 telescope,
-                number // telescopes % (1 if telescope == 1 else len(BANDS)),
+                number // telescopes % (1 if telescope == 1 else bands),
                 start,
                 start + 0.0014 * (1 + telescope % 4),
                 None if number % 11 == 0 else 19.0 + telescope % 5 * 0.6 + random.normal(0, 0.15),
@@ -238,7 +240,7 @@ def _night(shot: _Shot) -> str:
 
 
 def _selections(
-    shots: list[_Shot], names: Sequence[str]
+    shots: list[_Shot], names: Sequence[str], bands: Sequence[str]
 ) -> list[tuple[tuple[str | None, str | None, str | None], object, dict[object, list[_Shot]]]]:
     """Every selection with its key among its peers, in the order of the rows."""
     kinds = {
@@ -247,10 +249,10 @@ def _selections(
             {i: [s for s in shots if s.telescope == i] for i in range(len(names))},
             lambda key: (names[key], None, None),
         ),
-        "band": (_grouped(shots, lambda s: s.band), lambda key: (None, BANDS[key], None)),
+        "band": (_grouped(shots, lambda s: s.band), lambda key: (None, bands[key], None)),
         "both": (
             _grouped(shots, lambda s: (s.telescope, s.band)),
-            lambda key: (names[key[0]], BANDS[key[1]], None),
+            lambda key: (names[key[0]], bands[key[1]], None),
         ),
         "night": (_grouped(shots, _night), lambda key: (None, None, key)),
     }
@@ -285,9 +287,11 @@ def _map_info(skymap: SkyMap, *, distance: bool) -> MapInfo:
     )
 
 
-def _as_pointed(flats: list[_Flat], shots: list[_Shot], names: Sequence[str]) -> list[AsPointed]:
+def _as_pointed(
+    flats: list[_Flat], shots: list[_Shot], names: Sequence[str], bands: Sequence[str]
+) -> list[AsPointed]:
     found = []
-    for selection, key, peers in _selections(shots, names):
+    for selection, key, peers in _selections(shots, names, bands):
         for number in range(-1, len(flats)):
             mine = [s for s in peers[key] if _force(flats, s) == number]
             if mine:
@@ -312,6 +316,7 @@ def _force(flats: list[_Flat], shot: _Shot) -> int:
 def sample_results(
     *,
     names: Sequence[str] = NAMES,
+    bands: Sequence[str] = BANDS,
     exposures: int = 60,
     maps: Sequence[SkyMap] | None = None,
     distance: bool = False,
@@ -328,6 +333,8 @@ def sample_results(
     ----------
     names : sequence of str
         Telescopes, one or more.
+    bands : sequence of str
+        What they observe in, by turns; the second telescope in the first alone.
     exposures : int
         Accepted exposures in all; zero for a campaign where nothing counts.
     maps : sequence of SkyMap, optional
@@ -346,7 +353,7 @@ def sample_results(
             sample_map("2 update", 9.0, spread_deg=20.0, width_deg=3.0),
         )
     maps = tuple(maps)
-    shots = _shots(maps[-1], len(names), exposures, covered=covered)
+    shots = _shots(maps[-1], len(names), exposures, len(bands), covered=covered)
     if not covered:
         # Off the map altogether: its density is zero in the emptiest cells only nearly.
         shots = [s for s in shots if maps[-1].density_at(_starts(s.cells)).sum() == 0]
@@ -354,7 +361,7 @@ def sample_results(
         for shot in shots:
             shot.depth = None
     flats = [_Flat(m) for m in maps]
-    listed = _selections(shots, names)
+    listed = _selections(shots, names, bands)
     mine = {i: [s for s in shots if s.telescope == i] for i in range(len(names))}
     rings = []
     for index in range(len(names)):
@@ -389,7 +396,7 @@ def sample_results(
                 "rectangle 1.5 x 1.1 deg",
                 1.6,
                 "+21.4100 deg east, -31.0700 deg, 1790 m" if index else None,
-                tuple(sorted({BANDS[s.band] for s in mine[index]})),
+                tuple(sorted({bands[s.band] for s in mine[index]})),
                 len(mine[index]),
                 len(mine[index]),
                 11 if mine[index] else None,
@@ -422,8 +429,8 @@ def sample_results(
             for flat in flats
             for selection, key, peers in listed
         ),
-        as_pointed=tuple(_as_pointed(flats, shots, names)),
-        exposures=tuple(_exposure(flats, names, n, shot) for n, shot in enumerate(shots)),
+        as_pointed=tuple(_as_pointed(flats, shots, names, bands)),
+        exposures=tuple(_exposure(flats, names, bands, n, shot) for n, shot in enumerate(shots)),
         set_aside=lost,
         notes=(f"{names[0]}: 1 row repeats an earlier one and is counted once.",),
         sky=SkyData(
@@ -440,7 +447,9 @@ def _starts(cells: np.ndarray) -> np.ndarray:
     return cell_to_span(ORDER, cells)[0]
 
 
-def _exposure(flats: list[_Flat], names: Sequence[str], number: int, shot: _Shot) -> ExposureInfo:
+def _exposure(
+    flats: list[_Flat], names: Sequence[str], bands: Sequence[str], number: int, shot: _Shot
+) -> ExposureInfo:
     force = _force(flats, shot)
     return ExposureInfo(
         telescope=names[shot.telescope],
@@ -449,7 +458,7 @@ def _exposure(flats: list[_Flat], names: Sequence[str], number: int, shot: _Shot
         start=mjd_to_iso(shot.start),
         end=mjd_to_iso(shot.end),
         hours=hours_since(shot.start, EVENT_MJD),
-        band=BANDS[shot.band],
+        band=bands[shot.band],
         ra_deg=shot.ra,
         dec_deg=shot.dec,
         area_deg2=float(shot.cells.size * CELL_DEG2),

@@ -167,6 +167,7 @@ def test_settings_depth_defaults_and_report_arrive(folder: Path) -> None:
         '[settings]\nmagnitude_system = "Vega"\nsignificance = 3\nbracket = 0.01\n'
         "revisit = { visits = 3, gap_minutes = 45.5 }\n"
         '[report]\nauthors = ["A. Observer"]\naffiliations = ["Somewhere"]\nthanks = "All."\n'
+        'paper = "Letter"\n'
         "[[map]]",
     )
     text += (
@@ -175,7 +176,7 @@ def test_settings_depth_defaults_and_report_arrive(folder: Path) -> None:
     )
     campaign = load_campaign(write(folder, text))
     assert campaign.settings == CampaignSettings("Vega", 3.0, 3, 45.5, 0.01)
-    assert campaign.report == ReportText(("A. Observer",), ("Somewhere",), "All.")
+    assert campaign.report == ReportText(("A. Observer",), ("Somewhere",), "All.", "Letter")
     plover = campaign.telescopes[1]
     assert (plover.depth_system, plover.depth_significance) == ("Vega", 3.0)
     assert plover.vega_offsets == {"r": 0.16}

@@ -519,4 +519,6 @@ def _audit(*tables: AuditTable) -> AuditOptions:
 
 
 def _report(table: ReportTable) -> ReportText:
-    return ReportText(tuple(table.authors), tuple(table.affiliations), table.thanks)
+    return ReportText(
+        tuple(table.authors), tuple(table.affiliations), table.thanks, table.paper
+    )

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import Literal
 
 from skytally.cameras import Camera
 from skytally.claims_io import Claim
@@ -81,11 +82,12 @@ class AuditOptions:
 
 @dataclass(frozen=True)
 class ReportText:
-    """Who signs the report: authors, their affiliations, acknowledgements."""
+    """Who signs the report: authors, affiliations, acknowledgements; and on what paper."""
 
     authors: tuple[str, ...] = ()
     affiliations: tuple[str, ...] = ()
     thanks: str = ""
+    paper: Literal["A4", "Letter"] = "A4"
 
 
 @dataclass(frozen=True, eq=False)

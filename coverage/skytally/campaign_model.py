@@ -545,7 +545,7 @@ class SourceTable(Table):
 
 
 class ReportTable(Table):
-    """``[report]``: who signs the report."""
+    """``[report]``: who signs the report, and on what paper it is set."""
 
     authors: list[Name] = Field(
         default_factory=list, description='a list of names: ["A. Observer", "B. Observer"]'
@@ -554,6 +554,9 @@ class ReportTable(Table):
         default_factory=list, description="a list of affiliations in quotes"
     )
     thanks: Shown = Field(default="", max_length=4000, description="the acknowledgements in quotes")
+    paper: Literal["A4", "Letter"] = Field(
+        default="A4", description="the size of the PDF's sheets, A4 or Letter"
+    )
 
 
 # Which model stands where; numbers of [[map]], [[telescope]] and [[source]] are left out.

@@ -92,9 +92,18 @@ def render_paper(
     return _render(results, figures, places, style, data=None, paper=True)
 
 
-def _screen_style() -> str:
+# As wide between the margins as A4, for which all else is made.
+_LETTER = "@page { size: letter; margin: 24mm 22.95mm; }\n"
+
+
+def _paper_style(results: Results) -> str:
+    """Return the style of the sheets."""
+    return own_template("print.css") + (_LETTER if results.report.paper == "Letter" else "")
+
+
+def _screen_style(results: Results) -> str:
     """Return the style of the page: as on paper when it is printed, without fonts of its own."""
-    paper = re.sub(r"@font-face \{.*?\}\n", "", own_template("print.css"))
+    paper = re.sub(r"@font-face \{.*?\}\n", "", _paper_style(results))
     return f"@media screen {{\n{own_template('screen.css')}}}\n@media print {{\n{paper}}}\n"
 
 
@@ -111,7 +120,7 @@ def _render(
     context = dict(
         results=results,
         paper=paper,
-        style=Markup(f"\n{own_template('print.css') if paper else _screen_style()}"),
+        style=Markup(f"\n{_paper_style(results) if paper else _screen_style(results)}"),
         script=Markup(f"\n{own_template('report.js')}"),
         data=data,
         headline=headline(results),
