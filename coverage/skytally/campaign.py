@@ -519,6 +519,4 @@ def _audit(*tables: AuditTable) -> AuditOptions:
 
 
 def _report(table: ReportTable) -> ReportText:
-    return ReportText(
-        tuple(table.authors), tuple(table.affiliations), table.thanks, table.paper
-    )
+    return ReportText(tuple(table.authors), tuple(table.affiliations), table.thanks, table.paper)

@@ -311,14 +311,19 @@ def swatch(index: int, width: int = 34, height: int = 20) -> NDArray[np.float64]
 
 
 @cache
-def swatch_svg(index: int) -> str:
-    """Return the same key as an ``<svg>`` element to stand beside a name."""
+def swatch_uri(index: int) -> str:
+    """Return the same key as a PNG in a ``data:`` URI."""
     rows = np.rint(255 * swatch(index)).astype(np.uint8)
     stream = io.BytesIO()
     image.imsave(stream, rows, format="png", metadata={"Software": "skytally"})
-    data = base64.b64encode(stream.getvalue()).decode()
+    return f"data:image/png;base64,{base64.b64encode(stream.getvalue()).decode()}"
+
+
+@cache
+def swatch_svg(index: int) -> str:
+    """Return the same key as an ``<svg>`` element to stand beside a name."""
+    height, width, _ = swatch(index).shape
     return (
-        f'<svg class="swatch" viewBox="0 0 {rows.shape[1]} {rows.shape[0]}" aria-hidden="true">'
-        f'<image width="{rows.shape[1]}" height="{rows.shape[0]}" '
-        f'href="data:image/png;base64,{data}"/></svg>'
+        f'<svg class="swatch" viewBox="0 0 {width} {height}" aria-hidden="true">'
+        f'<image width="{width}" height="{height}" href="{swatch_uri(index)}"/></svg>'
     )

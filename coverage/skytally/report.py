@@ -9,7 +9,7 @@ from markupsafe import Markup
 
 from skytally.audit_tables import audit_tables
 from skytally.depth_tables import depth_tables
-from skytally.figure_style import WIDTH_IN, Drawing, Sketch
+from skytally.figure_style import WIDTH_IN, Drawing, Sketch, swatch_uri
 from skytally.figures import draw_figures
 from skytally.house_style import HouseStyle, own_template
 from skytally.limit_tables import limit_tables
@@ -136,4 +136,13 @@ def _render(
         no_distance=NO_DISTANCE,
         newest=version_text(results.newest.version),
     )
+    if paper:
+        context["swatch"] = _paper_swatch
     return (style or HouseStyle()).render(context)
+
+
+def _paper_swatch(index: int) -> Markup:
+    """Return a telescope's key as a background, which nobody needs to have read out."""
+    return Markup('<span class="swatch" style="background-image: url({})"></span>').format(
+        swatch_uri(index)
+    )
