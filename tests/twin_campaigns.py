@@ -333,6 +333,8 @@ def deep_plan(seed):
     plan = random_plan(seed)
     rng = np.random.default_rng([seed, 3])
     windows = sorted({c >> 2 * (o - 5) for region in plan.regions for o, c in region}) or [0]
+    if plan.regions and rng.uniform() < 0.4:
+        plan = well_covered(plan, windows)
     maps = [
         replace(m, distances=random_distances(rng, m.cells)) if rng.uniform() < 0.8 else m
         for m in plan.plain.maps
@@ -354,6 +356,21 @@ def deep_plan(seed):
         sources=tuple(random_source(rng, f"source {i}") for i in range(3)),
     )
     return replace(plan, plain=plain)
+
+
+def well_covered(plan, windows):
+    """The plan with nearly all probability in the windows, and these observed whole at first."""
+    maps = []
+    for m in plan.plain.maps:
+        weights = [
+            (o, c, p if o >= 5 and c >> 2 * (o - 5) in windows else 1e-3 * p) for o, c, p in m.cells
+        ]
+        total = sum(p for *_, p in weights)
+        maps.append(replace(m, cells=[(o, c, p / total) for o, c, p in weights]))
+    whole = tuple((5, window) for window in windows)
+    first = replace(plan.plain.exposures[0], pixels=pixels_of(whole))
+    plain = replace(plan.plain, maps=maps, exposures=[first, *plan.plain.exposures[1:]])
+    return replace(plan, plain=plain, regions=(whole, *plan.regions[1:]))
 
 
 def source_of(plain):

@@ -47,6 +47,7 @@ from skytally.results import (
     TelescopeInfo,
 )
 from skytally.seen import SeenSource
+from skytally.serialise import identified
 from skytally.sharing import share_maps
 from skytally.skymap import SkyMap
 from skytally.space import Space
@@ -113,7 +114,7 @@ def account(
     if progress is not None:
         progress("Tallying as pointed", 0.95)
     findings, silenced = audit(campaign, coverage, spaces)
-    return Results(
+    results = Results(
         software=f"skytally {__version__}",
         event=Event(campaign.event_name, mjd_to_iso(campaign.event_mjd), campaign.event_mjd),
         settings=Settings(
@@ -157,6 +158,7 @@ def account(
         report=campaign.report,
         **depths,
     )
+    return identified(results)
 
 
 def _part(progress: Progress | None, low: float, high: float) -> Progress | None:

@@ -84,11 +84,17 @@ def render_circular(results: Results, form: Form = "long", telescope: str | None
         paragraph(_CAUTION),
         *_thanks(results),
         paragraph(
-            f"Numbers by {results.software}; areas and probabilities are those of the union of "
-            "all footprints, so that nothing counts twice."
+            f"Numbers by {results.software}{_fingerprint(results)}; areas and probabilities are "
+            "those of the union of all footprints, so that nothing counts twice."
         ),
     ]
     return "\n\n".join("\n".join(block) for block in blocks) + "\n"
+
+
+def _fingerprint(results: Results) -> str:
+    """Name the account that the numbers are from, where they are from one."""
+    short = results.identity.fingerprint
+    return f" (fingerprint {short})" if short else ""
 
 
 def _long(told: Results, results: Results) -> Iterator[list[str]]:

@@ -43,7 +43,8 @@ SECONDS_BEFORE_BAR = 1.0
 
 _HELP = "Account for completed observations of an event with an uncertain position."
 _EPILOG = (
-    "Exit codes: 0 done; 1 done, but check found errors or a log could not be read; "
+    "Exit codes: 0 done; 1 done, but check found errors, verify found changes or a log could not "
+    "be read; "
     "2 bad input or usage; 3 an output could not be made; 70 a fault of skytally itself; "
     "130 stopped by Ctrl-C."
 )
@@ -164,7 +165,7 @@ def report(
     style = None if templates is None else HouseStyle.read(templates)
     results = _tally(campaign, "report.html lists them all")
     with _progress("Writing") as progress:
-        written = write_outputs(results, out, progress, style)
+        written = write_outputs(results, out, progress, style, campaign)
     _print(to_json(results) if json else render_answer(results, sys.stdout))
     _say(f"Wrote {len(written)} files to {out}")
     _leave_if_unread(results)
@@ -202,7 +203,7 @@ def regions(campaign: CampaignPath, out: OutDir, map: MapVersion = None) -> None
         results = account(loaded, progress, coverage)
         left = left_overs(loaded, coverage, skymap)
     _report_faults(loaded, results, "tally --json lists them all")
-    written = write_regions(results, out, left)
+    written = write_regions(results, out, left, campaign)
     remaining = {source: one.remaining for source, one in left.items()}
     _print(render_left_over(skymap.label, remaining, left_over_files(left), sys.stdout))
     _say(f"Wrote {len(written)} files to {out}")
@@ -220,6 +221,33 @@ def check(
     _, results = _account(campaign)
     _print(to_check_json(results) if json else render_check(results, sys.stdout))
     if any(finding.severity == "error" for finding in results.findings):
+        raise typer.Exit(EXIT_ERRORS_FOUND)
+
+
+@app.command("verify")
+def verify(
+    directory: Annotated[
+        Path,
+        typer.Argument(
+            metavar="DIR", help="Folder that report or regions wrote.", show_default=False
+        ),
+    ],
+    campaign: Annotated[
+        Path | None,
+        typer.Option(
+            "--campaign", metavar="FILE", help="Campaign file, if it or the folder has moved."
+        ),
+    ] = None,
+    json: Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")] = False,
+) -> None:
+    """Say whether a folder's numbers still follow from its inputs, and if not, why."""
+    from skytally.verify import verify as verify_folder
+    from skytally.verify_text import render_verdict, to_verdict_json
+
+    with _progress("Reading") as progress:
+        verdict = verify_folder(directory, campaign, progress)
+    _print(to_verdict_json(verdict) if json else render_verdict(verdict, sys.stdout))
+    if not verdict.same:
         raise typer.Exit(EXIT_ERRORS_FOUND)
 
 

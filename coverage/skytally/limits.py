@@ -214,5 +214,7 @@ def _reach_numbers(
         return None, None, None
     order = np.argsort(reach)
     held = np.cumsum(weight[order])
-    middle = min(int(np.searchsorted(held, held[-1] / 2)), reach.size - 1)
+    # Where two reaches hold half each, the nearer, however the sum was rounded.
+    half = held[-1] / 2 * (1 - 1e-12)
+    middle = min(int(np.searchsorted(held, half)), reach.size - 1)
     return float(reach[reached].min()), float(reach[order[middle]]), float(reach.max())

@@ -251,8 +251,10 @@ def _from_range_column(numbers: Ints, path: str | Path) -> Spans:
     )
 
 
-def write_moc(spans: Spans, path: str | Path) -> None:
+def write_moc(spans: Spans, path: str | Path, fingerprint: str = "") -> None:
     """Write a region as a standard FITS MOC with NUNIQ ordering, which all versions share.
+
+    ``fingerprint``, if given, says in the header which account the region is from.
 
     The file appears whole or not at all, and holds no time stamp: the same
     region gives the same bytes.
@@ -277,6 +279,8 @@ def write_moc(spans: Spans, path: str | Path) -> None:
         ("MOCTOOL", "skytally", "written by"),
     ):
         table.header[key] = (value, meaning)
+    if fingerprint:
+        table.header["TALLYID"] = (fingerprint, "fingerprint of the account")
     buffer = io.BytesIO()
     fits.HDUList([fits.PrimaryHDU(), table]).writeto(buffer)
     write_whole(path, buffer.getvalue())

@@ -13,20 +13,17 @@ import hashlib
 import io
 import json
 import os
-import platform
 import re
 import secrets
 import shutil
 import unicodedata
 from collections.abc import Callable, Iterable, Iterator, Mapping
 from contextlib import contextmanager, suppress
-from dataclasses import asdict
-from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
+from typing import Any
 
 from astropy.table import MaskedColumn
 
-from skytally import __version__
 from skytally.circular import render_circular
 from skytally.errors import OutputError
 from skytally.figure_style import Drawing
@@ -34,6 +31,7 @@ from skytally.figures import sketch_figures
 from skytally.footprints import Progress
 from skytally.house_style import HouseStyle
 from skytally.leftover import LeftOver
+from skytally.manifest import MANIFEST, MANIFEST_FORMAT, MANIFEST_LIMIT_BYTES, manifest_text
 from skytally.moc import write_moc
 from skytally.paper import Paper, open_paper
 from skytally.region_files import region_to_write
@@ -43,23 +41,8 @@ from skytally.serialise import to_json, to_table
 from skytally.skymap_io import write_skymap
 from skytally.spans import Spans
 
-__all__ = ["MANIFEST_FORMAT", "file_stems", "left_over_files", "write_outputs", "write_regions"]
+__all__ = ["file_stems", "is_ours", "left_over_files", "write_outputs", "write_regions"]
 
-MANIFEST_FORMAT = "skytally/manifest"
-MANIFEST = "manifest.json"
-MANIFEST_LIMIT_BYTES = 16 * 1024 * 1024
-
-_LIBRARIES = (
-    "numpy",
-    "scipy",
-    "astropy",
-    "astropy-healpix",
-    "mocpy",
-    "jinja2",
-    "weasyprint",
-    "matplotlib",
-    "pydantic",
-)
 _REPORT_FILES = frozenset(
     {
         *("report.html", "report.pdf", "circular.txt", "circular-short.txt"),
@@ -85,6 +68,7 @@ def write_outputs(
     out_dir: str | Path,
     progress: Progress | None = None,
     style: HouseStyle | None = None,
+    campaign: str | Path | None = None,
 ) -> tuple[Path, ...]:
     """Write the report in all its forms, the regions and the manifest.
 
@@ -98,6 +82,8 @@ def write_outputs(
         Called with what is being written and the fraction done.
     style : HouseStyle, optional
         Templates that override ours.
+    campaign : path, optional
+        The campaign file, for the manifest to say where the numbers are from.
 
     Returns
     -------
@@ -144,7 +130,7 @@ def write_outputs(
                         raise
                     failures.append(error)
 
-    written = _publish(Path(out_dir), "report", results, render)
+    written = _publish(Path(out_dir), "report", results, render, campaign)
     if failures:
         raise failures[0]
     return written
@@ -162,7 +148,10 @@ def _draw(results: Results, style: HouseStyle | None, paper: Paper) -> dict[str,
 
 
 def write_regions(
-    results: Results, out_dir: str | Path, left: Mapping[str | None, LeftOver] | None = None
+    results: Results,
+    out_dir: str | Path,
+    left: Mapping[str | None, LeftOver] | None = None,
+    campaign: str | Path | None = None,
 ) -> tuple[Path, ...]:
     """Write a MOC per telescope, one of all together, what is left, and the manifest.
 
@@ -176,9 +165,9 @@ def write_regions(
         if left:
             (folder / "left-over").mkdir()
         for source, name in left_over_files(left).items():
-            write_skymap(folder / name, left[source].skymap)
+            write_skymap(folder / name, left[source].skymap, results.identity.fingerprint)
 
-    return _publish(Path(out_dir), "regions", results, render)
+    return _publish(Path(out_dir), "regions", results, render, campaign)
 
 
 def left_over_files(left: Mapping[str | None, LeftOver]) -> dict[str | None, str]:
@@ -248,7 +237,8 @@ def _render_regions(results: Results, folder: Path) -> None:
     ]
     for stem, name, spans in regions:
         rows = [results.row(map=m.version, telescope=name) for m in results.maps]
-        write_moc(region_to_write(spans, rows, results.sky.maps), folder / f"{stem}.fits")
+        region = region_to_write(spans, rows, results.sky.maps)
+        write_moc(region, folder / f"{stem}.fits", results.identity.fingerprint)
 
 
 def _put(path: Path, content: str | bytes) -> None:
@@ -258,7 +248,11 @@ def _put(path: Path, content: str | bytes) -> None:
 
 
 def _publish(
-    out_dir: Path, command: str, results: Results, render: Callable[[Path], None]
+    out_dir: Path,
+    command: str,
+    results: Results,
+    render: Callable[[Path], None],
+    campaign: str | Path | None,
 ) -> tuple[Path, ...]:
     """Render into a staging folder, then move everything into place."""
     with _plain_errors(out_dir):
@@ -274,7 +268,9 @@ def _publish(
             new.mkdir()
             render(new)
             names = _files_in(new)
-            _put(new / MANIFEST, _manifest(new, names, command, results))
+            origin = None if campaign is None else _path_from(out_dir, campaign)
+            outputs = [_described(new, name) for name in names]
+            _put(new / MANIFEST, manifest_text(results, command, origin, outputs))
             names.append(MANIFEST)
             _sync(new)
             if out_dir.exists():
@@ -394,37 +390,30 @@ def _our_files(out_dir: Path, command: str) -> frozenset[str]:
             remedy="Choose another folder with --out.",
         )
     # A manifest is a file that anybody may have edited: believe only our own kind of names.
-    kept = {n for n in names if n in _REPORT_FILES or _REGION_FILE.fullmatch(n)}
+    kept = {name for name in names if is_ours(name)}
     return frozenset(kept | {MANIFEST})
+
+
+def is_ours(name: str) -> bool:
+    """Tell whether a path, from the output folder, is of a kind that skytally writes."""
+    return name in _REPORT_FILES or _REGION_FILE.fullmatch(name) is not None
 
 
 def _files_in(folder: Path) -> list[str]:
     return sorted(p.relative_to(folder).as_posix() for p in folder.rglob("*") if p.is_file())
 
 
-def _manifest(folder: Path, names: list[str], command: str, results: Results) -> str:
-    """Return the manifest: what went in, what came out, and what made it."""
-    libraries = {"python": platform.python_version()}
-    for name in _LIBRARIES:
-        with suppress(PackageNotFoundError):
-            libraries[name] = version(name)
-    outputs = []
-    for name in names:
-        data = (folder / name).read_bytes()
-        digest = hashlib.sha256(data).hexdigest()
-        outputs.append({"path": name, "bytes": len(data), "sha256": digest})
-    content = {
-        "format": MANIFEST_FORMAT,
-        "format_version": 1,
-        "command": command,
-        "software": {"name": "skytally", "version": __version__},
-        "libraries": libraries,
-        "event": asdict(results.event),
-        "settings": asdict(results.settings),
-        "inputs": [asdict(item) for item in results.inputs],
-        "outputs": outputs,
-    }
-    return json.dumps(content, indent=1, allow_nan=False, ensure_ascii=False) + "\n"
+def _described(folder: Path, name: str) -> dict[str, Any]:
+    data = (folder / name).read_bytes()
+    return {"path": name, "bytes": len(data), "sha256": hashlib.sha256(data).hexdigest()}
+
+
+def _path_from(out_dir: Path, campaign: str | Path) -> str | None:
+    """Path of the campaign file from the output folder; None from another disk of Windows."""
+    with suppress(ValueError):
+        place = os.path.relpath(os.path.realpath(campaign), os.path.realpath(out_dir))
+        return Path(place).as_posix()
+    return None
 
 
 def _sync(folder: Path) -> None:

@@ -28,6 +28,7 @@ from skytally.tally import AsPointed, TallyRow, Timeline
 __all__ = [
     "Event",
     "ExposureInfo",
+    "Identity",
     "InputFile",
     "LogCount",
     "MapInfo",
@@ -56,6 +57,26 @@ class InputFile:
     role: str
     path: str
     sha256: str
+
+
+@dataclass(frozen=True)
+class Identity:
+    """What results are known by.
+
+    Attributes
+    ----------
+    fingerprint : str
+        Twelve hexadecimal digits of inputs, settings and numbers, which every
+        output carries; empty for results that were not accounted for.
+    sha256 : str
+        Hash of all the numbers.
+    parts : tuple of (str, str)
+        Hash of each part of them, by its name in the JSON.
+    """
+
+    fingerprint: str = ""
+    sha256: str = ""
+    parts: tuple[tuple[str, str], ...] = ()
 
 
 @dataclass(frozen=True)
@@ -230,6 +251,7 @@ class Results:
     depth_histograms: tuple[DepthHistogram, ...] = ()
     sharing: tuple[Sharing, ...] = ()
     report: ReportText = field(default_factory=ReportText)
+    identity: Identity = field(default_factory=Identity)
 
     @property
     def newest(self) -> MapInfo:

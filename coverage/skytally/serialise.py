@@ -9,7 +9,9 @@ sources and what they exclude are empty where no map carries distances.
 
 from __future__ import annotations
 
+import hashlib
 import json
+from collections.abc import Mapping, Sequence
 from dataclasses import fields, is_dataclass, replace
 from typing import Any, get_type_hints
 
@@ -18,10 +20,20 @@ from astropy import units as u
 from astropy.table import MaskedColumn, Table
 
 from skytally.errors import UsageError
-from skytally.results import Results
+from skytally.results import Identity, Results
 from skytally.tally import TallyRow
 
-__all__ = ["FORMAT", "FORMAT_VERSION", "select_map", "to_dict", "to_json", "to_table"]
+__all__ = [
+    "FORMAT",
+    "FORMAT_VERSION",
+    "fingerprint_of",
+    "identified",
+    "part_hashes",
+    "select_map",
+    "to_dict",
+    "to_json",
+    "to_table",
+]
 
 FORMAT = "skytally/tally"
 FORMAT_VERSION = 1
@@ -67,6 +79,8 @@ _COLUMNS: dict[str, tuple[u.UnitBase | None, str]] = {
 
 # What a source's row shares with the tally row that it is written into.
 _SELECTED_BY = ("map", "telescope", "band", "night")
+# What stands in the JSON beside the numbers, and has hashes or names of its own.
+_NOT_NUMBERS = {"format", "format_version", "software", "fingerprint", "inputs", "settings"}
 # The parts of the results that belong to one map version each.
 _BY_MAP = (
     *("rows", "timelines", "source_rows", "exclusions", "fading_planes"),
@@ -123,6 +137,7 @@ def to_dict(results: Results) -> dict[str, Any]:
         "format": FORMAT,
         "format_version": FORMAT_VERSION,
         "software": results.software,
+        "fingerprint": results.identity.fingerprint or None,
         "inputs": to_plain(results.inputs),
         "event": to_plain(results.event),
         "settings": to_plain(results.settings),
@@ -146,6 +161,36 @@ def to_dict(results: Results) -> dict[str, Any]:
         "claims": to_plain(results.claims),
         "notes": list(results.notes),
     }
+
+
+def identified(results: Results) -> Results:
+    """Return the results with what they are known by."""
+    parts = tuple(part_hashes(to_dict(results)).items())
+    whole = _sha256(dict(parts))
+    inputs = [(item.role, item.path, item.sha256) for item in results.inputs]
+    short = fingerprint_of(inputs, to_plain(results.settings), whole)
+    return replace(results, identity=Identity(short, whole, parts))
+
+
+def part_hashes(content: Mapping[str, Any]) -> dict[str, str]:
+    """Hash every part of what `to_dict` returns, or of JSON read back, that holds numbers."""
+    return {name: _sha256(part) for name, part in content.items() if name not in _NOT_NUMBERS}
+
+
+def fingerprint_of(
+    inputs: Sequence[tuple[str, str, str]], settings: dict[str, Any], results_sha256: str
+) -> str:
+    """Return twelve hexadecimal digits of inputs (role, path, hash), settings and numbers."""
+    return _sha256([[list(item) for item in inputs], settings, results_sha256])[:12]
+
+
+def _sha256(value: Any) -> str:
+    """Hash the canonical JSON of a value: keys in order, no white space, all digits."""
+    text = json.dumps(
+        value, sort_keys=True, separators=(",", ":"), ensure_ascii=False, allow_nan=False
+    )
+    # A file name that is no valid text reaches us with lone surrogates.
+    return hashlib.sha256(text.encode("utf-8", "surrogatepass")).hexdigest()
 
 
 def _rows(results: Results) -> list[dict[str, Any]]:
@@ -205,6 +250,7 @@ def to_table(results: Results) -> Table:
         "format": FORMAT,
         "format_version": FORMAT_VERSION,
         "software": results.software,
+        "fingerprint": results.identity.fingerprint,
         "event": results.event.name,
         "event_time": results.event.time,
         "magnitude_system": results.settings.magnitude_system,

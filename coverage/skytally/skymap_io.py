@@ -100,8 +100,10 @@ def _checked_sum(cells: MapCells, path: str | Path) -> float:
     return total
 
 
-def write_skymap(path: str | Path, skymap: SkyMap) -> None:
+def write_skymap(path: str | Path, skymap: SkyMap, fingerprint: str = "") -> None:
     """Write a map version as multi-order HEALPix FITS; gzip where the name ends in ``.gz``.
+
+    ``fingerprint``, if given, says in the header which account the map is from.
 
     Sky that the map does not list is written as cells of zero density, because
     many readers expect the whole sky. The file appears whole or not at all,
@@ -136,6 +138,8 @@ def write_skymap(path: str | Path, skymap: SkyMap) -> None:
         ]
     table = fits.BinTableHDU.from_columns(columns)
     _describe(table, skymap, int(order.max()))
+    if fingerprint:
+        table.header["TALLYID"] = (fingerprint, "fingerprint of the account")
     buffer = io.BytesIO()
     fits.HDUList([fits.PrimaryHDU(), table]).writeto(buffer)
     data = buffer.getvalue()
