@@ -45,7 +45,7 @@ from skytally.projection import (
 )
 from skytally.results import Results
 from skytally.sky_parts import credible_parts
-from skytally.sky_picture import Layer, paint_sky
+from skytally.sky_picture import Inks, Layer, paint_sky
 from skytally.skymap import SkyMap
 from skytally.spans import LINE_ORDER, Spans, cell_to_span
 from space_results import with_space
@@ -412,7 +412,7 @@ def test_pictures_mix_shade_and_inks_sample_by_sample() -> None:
     ]
     layers = [Layer(regions[0], "#0072B2", 1), Layer(regions[1], "#D55E00", 4)]
     layers.append(Layer(regions[2], "#009E73", None))
-    picture = paint_sky(position, skymap, layers)
+    picture = paint_sky(position, skymap, Inks.of(layers))
     density, area = skymap.density_per_sr, skymap.stops - skymap.starts
     seen = set()
     for (y, x), place in np.ndenumerate(position):

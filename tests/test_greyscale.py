@@ -19,7 +19,7 @@ from matplotlib.figure import Figure
 from sample_results import sample_results
 from skytally.figure_style import WIDTH_IN, style_of, swatch
 from skytally.figures import draw_figures
-from skytally.sky_picture import Layer, paint_sky, ramp_key
+from skytally.sky_picture import Inks, Layer, paint_sky, ramp_key
 from skytally.skymap import SkyMap
 from skytally.spans import FULL_SKY_SR, Spans, cell_to_span
 
@@ -82,7 +82,7 @@ def test_footprints_in_grey_are_no_two_alike_on_any_shade(shade: float) -> None:
     patterns = []
     for index in DOZEN:
         style = style_of(index)
-        picture = paint_sky(place, skymap, [Layer(region, style.colour, style.hatch)])
+        picture = paint_sky(place, skymap, Inks.of([Layer(region, style.colour, style.hatch)]))
         bright = grey(picture[..., :3] / 255)
         assert np.ptp(bright) > 0.08, "the hatch shows in grey"
         patterns.append(inked(bright))

@@ -113,6 +113,7 @@ _RC: dict[str, Any] = {
     "path.simplify": True,
 }
 
+_LONG_FRACTION = re.compile(r"(\.\d\d)\d+")
 _SVG = "http://www.w3.org/2000/svg"
 _XLINK = "http://www.w3.org/1999/xlink"
 
@@ -255,7 +256,7 @@ def _clean(text: str, name: str, alt: str) -> str:
                 value = f"#{name}-{value[1:]}"
             if key in {"d", "points", "x", "y"}:
                 # A hundredth of a point is finer than any printer.
-                value = re.sub(r"-?\d+\.\d{3,}", lambda m: f"{float(m[0]):.2f}", value)
+                value = _LONG_FRACTION.sub(r"\1", value)
             value = re.sub(r"url\(#([^)]+)\)", rf"url(#{name}-\1)", value)
             element.set(key, value)
     for key in ("width", "height", "version"):

@@ -35,7 +35,7 @@ from skytally.sky_frame import (
     zoom_frame,
 )
 from skytally.sky_parts import ZOOM_GAP, ZOOM_LEFT, Part, Zoom, middle_ra
-from skytally.sky_picture import TAIL, Layer, paint_sky, ramp_key
+from skytally.sky_picture import TAIL, Inks, Layer, paint_sky, ramp_key
 from skytally.spans import Spans
 from skytally.wording import percent
 
@@ -105,7 +105,7 @@ def zoom_figure(results: Results, shown: Sequence[Zoom]) -> Figure:
     telescopes = _shown(results)
     key, height = _key_height(len(telescopes)), zoom_height(results, shown)
     figure = new_figure(height)
-    left = ZOOM_LEFT
+    left, inks = ZOOM_LEFT, _by_telescope(results)
     for zoom, letter in zip(shown, _letters(shown)):
         window, own = zoom.window, zoom.height_in
         bottom = height - _ZOOM_HEAD - own
@@ -114,7 +114,7 @@ def zoom_figure(results: Results, shown: Sequence[Zoom]) -> Figure:
         )
         left += zoom.width_in + ZOOM_GAP
         samples = samples_of(window, zoom.width_in)
-        paint(axes, window, paint_sky(samples, skymap, _by_telescope(results)))
+        paint(axes, window, paint_sky(samples, skymap, inks))
         zoom_frame(axes, window)
         _outlines(axes, window, results, 0.6)
         contours(axes, window, skymap, samples)
@@ -160,7 +160,7 @@ def versions_figure(results: Results, middle: Part) -> Figure:
     columns, width = _versions_grid(results)
     tall, height = width * window.aspect, versions_height(results)
     samples = samples_of(window, width)
-    everything = Layer(Spans.empty().union(*results.sky.covered), ACCENT, None)
+    inks = Inks.of([Layer(Spans.empty().union(*results.sky.covered), ACCENT, None)])
     figure = new_figure(height)
     for place, (info, skymap) in enumerate(zip(results.maps, results.sky.maps)):
         row, column = divmod(place, columns)
@@ -168,7 +168,7 @@ def versions_figure(results: Results, middle: Part) -> Figure:
         axes = figure.add_axes(
             (left, 1 - (row * (tall + 0.3) + 0.22 + tall) / height, width / WIDTH_IN, tall / height)
         )
-        paint(axes, window, paint_sky(samples, skymap, [everything]))
+        paint(axes, window, paint_sky(samples, skymap, inks))
         whole_sky_frame(axes, window, labels=False)
         contours(axes, window, skymap, samples, labels=False, weight=0.6)
         probability = results.row(map=info.version).probability
@@ -183,10 +183,10 @@ def _shown(results: Results) -> list[int]:
     return [index for index, region in enumerate(results.sky.covered) if region]
 
 
-def _by_telescope(results: Results) -> list[Layer]:
+def _by_telescope(results: Results) -> Inks:
     """Return each telescope's region with its colour and hatch."""
     covered, shown = results.sky.covered, _shown(results)
-    return [Layer(covered[i], style_of(i).colour, style_of(i).hatch) for i in shown]
+    return Inks.of([Layer(covered[i], style_of(i).colour, style_of(i).hatch) for i in shown])
 
 
 def _outlines(axes: Axes, window: Window, results: Results, width: float) -> None:

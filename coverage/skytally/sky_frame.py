@@ -156,8 +156,11 @@ def _well_inside(window: Window, plane: Floats, inset: float) -> NDArray[np.bool
 
 
 def _plot_graticule(axes: Axes, lines: Sequence[GraticuleLine]) -> None:
-    for line in lines:
-        axes.plot(*line.plane.T, color=GREY, lw=0.35, alpha=0.55, zorder=2)
+    gap = np.full((1, 2), np.nan)
+    pieces = [piece for line in lines for piece in (line.plane, gap)]
+    if pieces:
+        # One path: a path each takes its time.
+        axes.plot(*np.concatenate(pieces).T, color=GREY, lw=0.35, alpha=0.55, zorder=2)
 
 
 def _plot_galactic_plane(axes: Axes, window: Window) -> None:

@@ -13,7 +13,7 @@ from skytally.figure_style import is_hatched
 from skytally.skymap import SkyMap
 from skytally.spans import Ints, Spans
 
-__all__ = ["TAIL", "Layer", "paint_sky", "ramp_key"]
+__all__ = ["TAIL", "Inks", "Layer", "paint_sky", "ramp_key"]
 
 Floats = NDArray[np.float64]
 Bytes = NDArray[np.uint8]
@@ -38,8 +38,41 @@ class Layer:
     hatch: int | None
 
 
-def paint_sky(position: Ints, skymap: SkyMap, layers: Sequence[Layer]) -> Bytes:
-    """Paint a map version and regions, the later over the earlier.
+@dataclass(frozen=True, eq=False)
+class Inks:
+    """Regions to be inked, the line cut at all of their edges: one search finds who is where.
+
+    Attributes
+    ----------
+    layers : tuple of Layer
+        The later over the earlier.
+    edges : int64 array, shape (n,)
+        Edges of all regions, rising.
+    members : bool array, shape (layers, n)
+        Whose the line is from each edge on.
+    """
+
+    layers: tuple[Layer, ...]
+    edges: Ints
+    members: NDArray[np.bool_]
+
+    @classmethod
+    def of(cls, layers: Sequence[Layer]) -> Inks:
+        """Cut the line."""
+        edges = [layer.region.edges for layer in layers]
+        owner = np.repeat(np.arange(len(layers)), [one.size for one in edges])
+        every = np.concatenate(edges) if edges else np.empty(0, dtype=np.int64)
+        order = np.argsort(every, kind="stable")
+        owner = owner[order]
+        members = np.zeros((len(layers), order.size), dtype=bool)
+        for number, member in enumerate(members):
+            # Each edge of a region enters or leaves it.
+            np.logical_xor.accumulate(owner == number, out=member)
+        return cls(tuple(layers), every[order], members)
+
+
+def paint_sky(position: Ints, skymap: SkyMap, inks: Inks) -> Bytes:
+    """Paint a map version and regions over it.
 
     Parameters
     ----------
@@ -47,7 +80,7 @@ def paint_sky(position: Ints, skymap: SkyMap, layers: Sequence[Layer]) -> Bytes:
         Positions on the line; −1 off the sky.
     skymap : SkyMap
         What is shaded.
-    layers : sequence of Layer
+    inks : Inks
         What is laid over it.
 
     Returns
@@ -62,41 +95,20 @@ def paint_sky(position: Ints, skymap: SkyMap, layers: Sequence[Layer]) -> Bytes:
     image[..., :3] = _bytes(_RAMP)[shade]
     image[..., 3] = 255 * on_sky
     # Regions cover little of a chart, so only what they cover is mixed as floats.
-    members, place = _sharing(layers, position)
-    inked = np.append(members.any(axis=0), False)[place] & on_sky
+    place = np.searchsorted(inks.edges, position, side="right") - 1
+    inked = np.append(inks.members.any(axis=0), False)[place] & on_sky
     y, x = np.nonzero(inked)
     place = place[inked]
     paper = _RAMP[shade[inked]]
     colour = paper.copy()
-    for layer, member in zip(layers, members):
+    for layer, member in zip(inks.layers, inks.members):
         mine = np.flatnonzero(member[place])
         opacity = _ink(layer.hatch, x[mine], y[mine])[:, None]
         # Darkened by the paper, or in grey a pale ink would not show on a dark shade.
         ink = paper[mine] * np.array(to_rgb(layer.colour))
-        colour[mine] = colour[mine] * (1 - opacity) + ink * opacity
+        colour[mine] += (ink - colour[mine]) * opacity
     image[inked, :3] = _bytes(colour)
     return image
-
-
-def _sharing(layers: Sequence[Layer], position: Ints) -> tuple[NDArray[np.bool_], Ints]:
-    """Cut the line at the edges of all regions, so that one search finds those of a position.
-
-    Returns
-    -------
-    members : bool array, shape (layers, n)
-        Whose each piece of the line is.
-    place : int64 array, as the positions
-        The piece of each; −1 before the first.
-    """
-    edges = [layer.region.edges for layer in layers]
-    owner = np.repeat(np.arange(len(layers)), [one.size for one in edges])
-    every = np.concatenate(edges) if edges else np.empty(0, dtype=np.int64)
-    order = np.argsort(every, kind="stable")
-    members = np.zeros((len(layers), order.size), dtype=bool)
-    for number, member in enumerate(members):
-        # Each edge of a region enters or leaves it.
-        np.logical_xor.accumulate(owner[order] == number, out=member)
-    return members, np.searchsorted(every[order], position, side="right") - 1
 
 
 def ramp_key() -> Floats:
