@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from skytally.plots import depth_bands
 from skytally.report_tables import Cell, Table, capped, columns_of
 from skytally.results import Results
 from skytally.wording import NBSP, area_text, limit_rows, limit_terms, number_text
@@ -12,7 +13,8 @@ __all__ = ["depth_tables"]
 def depth_tables(results: Results) -> dict[str, Table]:
     """Return the table of depth by place; without rows where there is no limit."""
     deepest = results.sky.deepest
-    bands = [] if deepest is None else [str(row.band) for row in limit_rows(results)]
+    # In the order of the chart's panels.
+    bands = [] if deepest is None else [str(row.band) for row in depth_bands(results)]
     rows = []
     for band in bands:
         assert deepest is not None
