@@ -53,7 +53,7 @@ def chart_overlays(results: Results, figures: Mapping[str, Drawing]) -> dict[str
         paths = []
         for field in shown:
             path = window.lines(rings[field])
-            if len(path):
+            if len(path) and _meets(path, window):
                 line = _hull(path) if hulls and len(rings[field]) > 1 else path
                 paths.append((_extent(path), field, _path(_placed(line, window, box))))
         paths.sort(key=lambda item: (-item[0], item[1]))
@@ -90,6 +90,13 @@ def _boxes(drawing: Drawing) -> Iterator[list[float]]:
     for frame in list(_RECTANGLE.finditer(drawing.svg))[1:]:
         left, bottom, right, top = map(float, frame.groups())
         yield [left, top, round(right - left, 3), round(bottom - top, 3)]
+
+
+def _meets(line: Floats, window: Window) -> bool:
+    """Tell whether a line's extent meets the frame: one just outside cannot be pointed at."""
+    (left, bottom), (right, top) = np.nanmin(line, axis=0), np.nanmax(line, axis=0)
+    across = left < window.right and right > window.left
+    return bool(across and bottom < window.top and top > window.bottom)
 
 
 def _placed(line: Floats, window: Window, box: Sequence[float]) -> Floats:
