@@ -12,7 +12,7 @@ import astropy.units as u
 import matplotlib
 import numpy as np
 import pytest
-from astropy_healpix import lonlat_to_healpix
+from astropy_healpix import healpix_to_lonlat, lonlat_to_healpix
 from matplotlib import image
 from matplotlib.colors import to_rgb
 from sample_results import NAMES, sample_map, sample_results
@@ -44,7 +44,8 @@ from skytally.projection import (
     zoom_window,
 )
 from skytally.results import Results
-from skytally.sky_parts import credible_parts
+from skytally.sky_frame import paint, zoom_frame
+from skytally.sky_parts import credible_parts, zooms
 from skytally.sky_picture import Inks, Layer, paint_sky
 from skytally.skymap import SkyMap
 from skytally.spans import LINE_ORDER, Spans, cell_to_span
@@ -478,3 +479,70 @@ def test_a_failing_figure_leaves_no_setting_behind() -> None:
     with pytest.raises(RuntimeError):
         Sketch("x", "", "", "", 1.0, fail).draw()
     assert matplotlib.rcParams["svg.fonttype"] == before
+
+
+def two_spots(second_lon: float, weight: float) -> SkyMap:
+    """Two round spots on the equator, the first at RA 20 degrees with weight one."""
+    lon, lat = cell_centres(6)
+    amount = np.zeros(lon.size)
+    for middle, part in ((20.0, 1.0), (second_lon, weight)):
+        apart = np.hypot((lon - middle + 180) % 360 - 180, lat)
+        amount += part * np.exp(-0.5 * (apart / 3) ** 2)
+    start, stop = cell_to_span(6, np.arange(amount.size))
+    return SkyMap(start, stop, amount / amount.sum() * amount.size / (4 * np.pi), 6)
+
+
+def cell_centres(order: int) -> tuple[np.ndarray, np.ndarray]:
+    lon, lat = healpix_to_lonlat(np.arange(12 << 2 * order), 1 << order, order="nested")
+    return lon.to_value("deg"), lat.to_value("deg")
+
+
+@pytest.mark.parametrize("second_lon", [80.0, 200.0, 355.0])
+def test_two_parts_have_a_zoom_each_about_their_own_centre(second_lon: float) -> None:
+    shown = zooms(two_spots(second_lon, 0.5))
+    assert [zoom.window.code for zoom in shown] == ["ZEA", "ZEA"]
+    for zoom, lon in zip(shown, (20.0, second_lon)):
+        window = zoom.window
+        # The middle of the plane is where the projection touches the sphere.
+        assert (window.lon_deg - lon + 180) % 360 - 180 == pytest.approx(0, abs=0.2)
+        assert window.lat_deg == pytest.approx(0, abs=0.2)
+        x, y = window.project(zoom.part.lonlat_deg).T
+        assert ((window.left < x) & (x < window.right)).all()
+        assert ((window.bottom < y) & (y < window.top)).all()
+    assert shown[0].part.probability == pytest.approx(2 * shown[1].part.probability, rel=0.15)
+    assert shown[0].height_in == pytest.approx(shown[1].height_in)
+    assert sum(zoom.width_in for zoom in shown) < WIDTH_IN - 0.9
+
+
+@pytest.mark.parametrize(("second_lon", "weight"), [(80.0, 0.0), (80.0, 0.01), (24.0, 0.5)])
+def test_one_part_or_hardly_a_second_has_one_zoom(second_lon: float, weight: float) -> None:
+    assert len(zooms(two_spots(second_lon, weight))) == 1
+
+
+def test_two_zooms_are_named_alike_on_both_charts() -> None:
+    results = sample_results(
+        exposures=20, maps=(sample_map("double", None, centres=(0.0, 180.0), spread_deg=10.0),)
+    )
+    drawings = draw_figures(results)
+    assert "A holds" in drawings["zoom"].caption
+    for name in ("whole-sky", "zoom"):
+        svg = ElementTree.fromstring(drawings[name].svg)
+        texts = [e.text for e in svg.iter("{http://www.w3.org/2000/svg}text")]
+        assert [t for t in texts if t in {"A", "B"}] == ["A", "B"]
+
+
+@pytest.mark.parametrize("pole", [90.0, -90.0])
+def test_about_a_pole_lines_are_labelled_where_they_run(pole: float) -> None:
+    window = Window("ZEA", 0.0, pole, -12.0, 12.0, -8.0, 8.0)
+    axes = new_figure(4.0).add_axes((0, 0, 1, 1))
+    paint(axes, window, np.zeros((8, 12, 4), dtype=np.uint8))
+    zoom_frame(axes, window)
+    assert len(axes.texts) >= 8
+    for text in axes.texts:
+        lon, lat = window.unproject(np.array([text.get_position()]))[0]
+        label = text.get_text()
+        if "h" in label:
+            wanted = float(label.split()[1].rstrip("°"))
+            assert (lon - wanted + 180) % 360 - 180 == pytest.approx(0, abs=0.1)
+        else:
+            assert lat == pytest.approx(float(label.rstrip("°").replace("−", "-")), abs=0.05)

@@ -33,7 +33,7 @@ from skytally.sky_frame import (
     whole_sky_frame,
     zoom_frame,
 )
-from skytally.sky_parts import Part, middle_ra
+from skytally.sky_parts import Part, middle_ra, span_middle
 from skytally.skymap import SkyMap
 from skytally.spans import LINE_ORDER, Ints
 
@@ -191,8 +191,8 @@ def _directions(deepest: DeepestLimits, chosen: NDArray[np.bool_]) -> Floats:
     """Spread at most a few thousand directions, shape (n, 2), over the patches of chosen sets."""
     patch = np.flatnonzero(chosen[deepest.group])
     patch = patch[:: max(1, patch.size // _DIRECTIONS)]
-    start, stop = deepest.starts[patch], deepest.stops[patch]
-    lon, lat = healpix_to_lonlat(start + (stop - start) // 2, 1 << LINE_ORDER, order="nested")
+    middle = span_middle(deepest.starts[patch], deepest.stops[patch])
+    lon, lat = healpix_to_lonlat(middle, 1 << LINE_ORDER, order="nested")
     return np.stack((lon.to_value(u.deg), lat.to_value(u.deg)), axis=1)
 
 

@@ -14,7 +14,7 @@ from scipy.sparse.csgraph import connected_components
 from skytally.figure_style import WIDTH_IN
 from skytally.projection import Window, zoom_window
 from skytally.skymap import SkyMap
-from skytally.spans import LINE_ORDER, Ints
+from skytally.spans import LINE_ORDER, Ints, cell_to_span
 
 __all__ = [
     "LEAST_PART",
@@ -24,6 +24,7 @@ __all__ = [
     "Zoom",
     "credible_parts",
     "middle_ra",
+    "span_middle",
     "zooms",
 ]
 
@@ -147,16 +148,20 @@ def _components(cells: Ints) -> NDArray[np.int64]:
     return np.asarray(connected_components(graph, directed=False)[1], dtype=np.int64)
 
 
+def span_middle(starts: Ints, stops: Ints) -> Ints:
+    """Return a position near the middle of each span: of a cell its centre.
+
+    The last of the four children of a cell begins there, half way along the line is
+    an edge.
+    """
+    return starts + (stops - starts) // 4 * 3
+
+
 def _directions(starts: Ints, stops: Ints, cells: Ints) -> Floats:
     """Spread at most a few thousand directions over the spans within given cells."""
-    middle = starts + (stops - starts) // 2
+    middle = span_middle(starts, stops)
     mine = np.isin(middle >> 2 * (LINE_ORDER - _PART_ORDER), cells)
-    if mine.any():
-        chosen = middle[mine]
-    else:
-        chosen = (cells << 2 * (LINE_ORDER - _PART_ORDER)) + (
-            np.int64(1) << 2 * (LINE_ORDER - _PART_ORDER) - 1
-        )
+    chosen = middle[mine] if mine.any() else span_middle(*cell_to_span(_PART_ORDER, cells))
     chosen = chosen[:: max(1, chosen.size // 4000)]
     lon, lat = healpix_to_lonlat(chosen, 1 << LINE_ORDER, order="nested")
     return np.stack((lon.to_value(u.deg), lat.to_value(u.deg)), axis=1)
