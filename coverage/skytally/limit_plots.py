@@ -58,21 +58,51 @@ def distance_figure(profile: DistanceProfile) -> Figure:
     distance = np.array(profile.distance_mpc)
     whole, covered = 100 * np.array(profile.whole), 100 * np.array(profile.covered)
     axes.fill_between(distance, whole, fc="#eef0f2", ec="none")
-    axes.plot(distance, whole, color=GREY, lw=1.0, label="the whole map")
+    axes.plot(distance, whole, color=GREY, lw=1.0)
     axes.fill_between(distance, covered, fc="#c3cbd2", ec="none")
-    axes.plot(distance, covered, color=INK, lw=1.3, label="covered")
+    axes.plot(distance, covered, color=INK, lw=1.3)
+    named = [("the whole map", whole, GREY), ("covered", covered, INK)]
     shown = list(zip(profile.sources, profile.within_reach))[:MOST_SOURCES]
     for (name, within), line in zip(shown, _LINES):
-        label = f"within reach: {short_label(name, 24)}"
-        axes.plot(distance, 100 * np.array(within), color=ACCENT, lw=1.3, ls=line, label=label)
+        curve = 100 * np.array(within)
+        axes.plot(distance, curve, color=ACCENT, lw=1.3, ls=line)
+        named.append((f"{short_label(name, 16)} within reach", curve, ACCENT))
     held = np.flatnonzero(whole > _TAIL * whole.max(initial=0.0))
     if held.size:
         axes.set_xlim(max(distance[held[0]] - 0.02 * distance[-1], 0.0), distance[held[-1]])
     axes.set_ylim(0, 1.06 * max(whole.max(initial=0.0), 1e-12))
     axes.set_xlabel("luminosity distance (Mpc)")
     axes.set_ylabel("probability (% per Mpc)")
-    axes.legend(frameon=False, fontsize=7, loc="upper right", handlelength=3.2)
+    _name_curves(axes, distance, named)
     return figure
+
+
+def _name_curves(
+    axes: Axes,
+    distance: NDArray[np.float64],
+    named: Sequence[tuple[str, NDArray[np.float64], str]],
+) -> None:
+    """Write the names of curves right of them, with a line to a dot on the falling side of each.
+
+    The curves lie one within the other, so that names from the top down point further in.
+    """
+    top = float(named[0][1].max(initial=0.0))
+    for number, (name, curve, colour) in enumerate(named):
+        height = (0.93 - 0.12 * number) * top
+        above = np.flatnonzero(curve >= height)
+        # A curve that stays lower is named at its peak.
+        row = int(above[-1]) if above.size else int(np.argmax(curve))
+        place = float(distance[row]), float(curve[row])
+        axes.scatter(*place, s=7, color=colour, zorder=5)
+        axes.annotate(
+            name,
+            place,
+            (0.76, height),
+            textcoords=("axes fraction", "data"),
+            fontsize=7,
+            va="center",
+            arrowprops={"arrowstyle": "-", "color": colour, "lw": 0.6, "relpos": (0.0, 0.5)},
+        )
 
 
 def exclusion_figure(curves: Sequence[ExclusionCurve]) -> Figure:
