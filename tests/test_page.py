@@ -6,6 +6,7 @@ library of checks, which the package axe-playwright-python brings along.
 
 from __future__ import annotations
 
+import json
 import math
 import os
 import re
@@ -36,6 +37,7 @@ from skytally.times import mjd_to_iso
 from skytally.wording import (
     area_text,
     headline,
+    hours_text,
     number_text,
     percent,
     probability_text,
@@ -246,6 +248,10 @@ class Twin:
         return f"{number_text(value, digits)}\N{NO-BREAK SPACE}deg²"
 
     def shares(self) -> list[tuple[str, str]]:
+        """Alone and share of each telescope as the page must say them."""
+        return [(percent(alone), percent(credit)) for alone, credit in self.credits()]
+
+    def credits(self) -> list[tuple[float, float]]:
         """Alone and share of each telescope."""
         coverage = self.example.coverage
         o = coverage.observations
@@ -261,11 +267,36 @@ class Twin:
         number = np.maximum(seen.sum(axis=0), 1)
         return [
             (
-                percent(float(probability[mine & union & (number == 1)].sum())),
-                percent(float((probability / number)[mine & union].sum())),
+                float(probability[mine & union & (number == 1)].sum()),
+                float((probability / number)[mine & union].sum()),
             )
             for mine in seen
         ]
+
+    def history(self, mask: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Hours at which new probability was completed, and how much was covered then."""
+        o, patchwork = self.example.coverage.observations, self.example.coverage.centre
+        probability = self.example.worths[self.choice.map].probability
+        sets, ends = [], []
+        for exposure in np.flatnonzero(mask):
+            inside = patchwork.set_of_member[patchwork.members == o.footprint[exposure]]
+            sets.append(inside)
+            ends.append(np.full(inside.size, o.end_mjd[exposure]))
+        if not sets:
+            return np.empty(0), np.empty(0)
+        which, when = np.concatenate(sets), np.concatenate(ends)
+        order = np.lexsort((when, which))
+        which, when = which[order], when[order]
+        # A place counts from the end of the visit that makes enough of them.
+        place = np.flatnonzero(np.append(True, np.diff(which) > 0)) + self.choice.visits - 1
+        place = place[place < which.size]
+        place = place[which[place] == which[place - self.choice.visits + 1]]
+        gained = np.bincount(
+            np.searchsorted(self.example.ends, when[place]), probability[which[place]]
+        )
+        steps = np.flatnonzero(gained > 0)
+        hours = (self.example.ends[steps] - self.example.campaign.event_mjd) * 24
+        return hours, np.cumsum(gained[steps])
 
 
 def cells(row: Locator) -> list[tuple[str, str]]:
@@ -381,6 +412,90 @@ def test_drawn_choices_show_what_the_tally_gives(example: Example, visit: Visit)
             assert "#" not in page.url
             page.goto(link)
             check(page, Twin(example, choice))
+
+
+def number_of(text: str) -> float:
+    return float(text.replace("\N{MINUS SIGN}", "-").replace(",", ""))
+
+
+def check_timeline(page: Page, twin: Twin) -> None:
+    """Compare the lines as they are drawn, by the labels of their own axes, and the table."""
+    example, chosen = twin.example, twin.chosen
+    o = example.coverage.observations
+    texts, paths = page.locator("#figure-timeline svg.figure").evaluate(
+        """svg => [[...svg.querySelectorAll("text")].map(t => [t.textContent,
+                      Number(t.getAttribute("x")), Number(t.getAttribute("y")),
+                      t.getAttribute("text-anchor")]),
+                   [...svg.querySelectorAll("path")].map(p => [p.getAttribute("stroke"),
+                      p.getAttribute("d")])]"""
+    )
+    data = json.loads(page.locator("#page-data").text_content() or "")
+    colours = {t["name"]: t["colour"] for t in data["telescopes"]}
+    groups = {None: chosen} | {
+        name: chosen & (o.telescope == index) for index, name in enumerate(o.telescopes)
+    }
+    expected = {name: twin.history(mask) for name, mask in groups.items()}
+    expected = {name: line for name, line in expected.items() if line[0].size}
+    assert len(paths) == len(expected)
+    if not expected:
+        return
+    # Labels stand 2.5 below their height on the left, and in the middle below the axis.
+    left = [(number_of(t), y - 2.5) for t, x, y, anchor in texts if anchor == "end"]
+    below = [
+        (number_of(t), x)
+        for t, x, y, anchor in texts
+        if anchor == "middle" and re.fullmatch(r"[\d.,\N{MINUS SIGN}]+", t)
+    ]
+    to_percent = np.polynomial.Polynomial.fit([y for _, y in left], [v for v, _ in left], 1)
+    to_hours = np.polynomial.Polynomial.fit([x for _, x in below], [v for v, _ in below], 1)
+    # Coordinates are rounded to a tenth of a point.
+    by_percent, by_hours = (0.11 * abs(line.deriv()(0.0)) for line in (to_percent, to_hours))
+    by_colour = {colours.get(name, "#1d2226"): line for name, line in expected.items()}
+    for stroke, d in paths:
+        corners = re.findall(r"[MH]([\d.]+)(?: [\d.]+)?V([\d.]+)", d)
+        hours, covered = by_colour[stroke]
+        assert len(corners) == len(hours)
+        assert to_hours(np.array([float(x) for x, _ in corners])) == pytest.approx(
+            hours, abs=by_hours
+        )
+        assert to_percent(np.array([float(y) for _, y in corners])) == pytest.approx(
+            100 * covered, abs=by_percent
+        )
+    rows = table(page, "milestones")
+    for name, (hours, covered) in expected.items():
+        reached = [hours[np.argmax(covered >= part * covered[-1])] for part in (0.5, 0.9)]
+        said = [hours_text(h, sign=True) for h in (hours[0], *reached, hours[-1])]
+        shown = [cell[0] for cell in rows[name or "all together"][1:]]
+        assert shown == [*said, percent(float(covered[-1]))]
+
+
+def check_credit_bar(page: Page, twin: Twin) -> None:
+    """Compare the parts of the bar as they are drawn."""
+    all_of_it = float(
+        twin.example.worths[twin.choice.map]
+        .probability[twin.often(twin.example.coverage.centre, twin.chosen)]
+        .sum()
+    )
+    bars = page.locator("#figure-credit svg.figure rect").evaluate_all(
+        """rects => rects.map(r => ["x", "y", "width"].map(k => Number(r.getAttribute(k))))"""
+    )
+    (left, _, whole), (_, _, covered), *parts = bars
+    assert covered / whole == pytest.approx(all_of_it, abs=1e-6)
+    credits = sorted((credit for _, credit in twin.credits() if credit > 0), reverse=True)
+    assert [width / whole * all_of_it for _, _, width in parts] == pytest.approx(credits, abs=1e-6)
+    # They follow each other without a gap and fill the bar.
+    ends = [left, *(x + width for x, _, width in parts)]
+    assert [x for x, _, _ in parts] == pytest.approx(ends[:-1], abs=1e-6)
+    if parts:
+        assert ends[-1] == pytest.approx(left + whole, abs=1e-6)
+
+
+def test_drawn_charts_follow_the_tally_of_a_choice(example: Example, visit: Visit) -> None:
+    page = ready(visit, example.url)
+    for choice in drawn(example, 18)[6:]:
+        choose(page, choice)
+        check_timeline(page, Twin(example, choice))
+        check_credit_bar(page, Twin(example, choice))
 
 
 def choice_of_all(example: Example) -> Choice:
@@ -616,6 +731,15 @@ def test_nothing_overflows_the_window(
         path = folder / f"report-{width}-{name}.png"
         page.screenshot(path=path, full_page=True)
         assert path.stat().st_size > 10_000
+
+
+def test_a_name_without_end_is_broken(example: Example, visit: Visit, tmp_path: Path) -> None:
+    path = tmp_path / "long.html"
+    path.write_text(example.html.replace("Heron", 12 * "Heron"), encoding="utf-8")
+    visit.page.set_viewport_size({"width": 360, "height": 900})
+    page = ready(visit, path.as_uri())
+    assert 12 * "Heron" in page.locator("#choose").inner_text()
+    assert page.evaluate("document.documentElement.scrollWidth") <= 360
 
 
 def test_the_printed_page_has_the_paper_s_form(example: Example, visit: Visit) -> None:
