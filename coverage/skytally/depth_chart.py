@@ -22,7 +22,7 @@ from skytally.figure_style import (
     short_label,
 )
 from skytally.plots import MOST_BANDS, depth_bands
-from skytally.projection import Window, whole_sky_window, zoom_window
+from skytally.projection import Window, galactic_plane, whole_sky_window, zoom_window
 from skytally.results import Results
 from skytally.shapes import lonlat_to_vector
 from skytally.sky_frame import (
@@ -36,6 +36,7 @@ from skytally.sky_frame import (
 from skytally.sky_parts import Part, middle_ra, span_middle
 from skytally.skymap import SkyMap
 from skytally.spans import LINE_ORDER, Ints
+from skytally.wording import NBSP
 
 __all__ = ["DepthChart", "depth_chart_of", "limit_steps", "paint_depth", "ramp"]
 
@@ -146,6 +147,18 @@ class DepthChart:
         """Whether the palest shade of any panel takes in all that is shallower."""
         area = self.deepest.area_deg2
         return any(limit_steps(self.deepest.limit_of(band), area)[1] for band in self.bands)
+
+    def lines_text(self, part: Part, version: str) -> str:
+        """Say what the lines over the charts are, where any are in sight.
+
+        ``part`` is of the region that has contours, ``version`` the map's name.
+        """
+        text = ""
+        if self.window.shows(part.lonlat_deg).any():
+            text += f" Contours: 50{NBSP}% and 90{NBSP}% (dashed) of {version}."
+        if len(galactic_plane(self.window)):
+            text += " Dotted: the Galactic plane."
+        return text
 
     @property
     def _shows_without(self) -> bool:

@@ -124,6 +124,8 @@ def _zoom(results: Results, shown: list[Zoom]) -> Sketch:
         f"Of the {area_text(area, area, area)} of the {region}, "
         f"{percent(total.area_in_90_deg2 / area)} is covered; "
         f"what is covered there holds {percent(total.probability_in_90)} of all probability."
+        if total.area_in_90_deg2 > 0
+        else f"Nothing of the {area_text(area, area, area)} of the {region} is covered."
     )
     if len(shown) > 1:
         first, second = (percent(zoom.part.probability, 0) for zoom in shown)
@@ -260,12 +262,12 @@ def _depth_chart(results: Results, part: Part) -> list[Sketch]:
     scale = ", each band on a scale of its own" if len(depths) > 1 else ""
     if chart.is_open:
         scale += "; the palest shade takes in all that is shallower"
+    lines = chart.lines_text(part, version_text(results.newest.version))
     return [
         Sketch(
             "depth-chart",
             "How deep, place by place",
-            f"{finding} Each place by its deepest single exposure{scale}. Contours: "
-            f"50{NBSP}% and 90{NBSP}% (dashed) of {version_text(results.newest.version)}.{note}",
+            f"{finding} Each place by its deepest single exposure{scale}.{lines}{note}",
             f"Charts of the deepest limit of each place, one per band. {finding}",
             chart.height_in,
             lambda: chart.draw(results.sky.maps[-1]),

@@ -8,7 +8,7 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.colors import to_rgb
 from matplotlib.figure import Figure
-from matplotlib.ticker import FuncFormatter, LogLocator, NullLocator
+from matplotlib.ticker import FuncFormatter, LogLocator, MaxNLocator, NullLocator
 from numpy.typing import NDArray
 
 from skytally.figure_style import (
@@ -316,6 +316,7 @@ def depth_figure(results: Results) -> Figure:
         plain_axes(axes)
         _time_axis(axes, hours)
         axes.set_ylim(max(depths) + room, min(depths) - room)
+        axes.yaxis.set_major_locator(MaxNLocator(5, steps=[1, 2, 5, 10]))
         axes.set_title(f"band {short_label(str(band), 12)}", fontsize=7.5, loc="left", pad=3)
         axes.tick_params(labelsize=6.5)
         if column:

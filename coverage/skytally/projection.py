@@ -127,6 +127,12 @@ class Window:
             inside = np.hypot(x, y) < np.degrees(2.0) - 1e-6
         return np.asarray(inside)
 
+    def shows(self, lonlat_deg: Floats) -> NDArray[np.bool_]:
+        """Tell which directions (n, 2) in degrees lie in the rectangle, shape (n,)."""
+        x, y = self.project(lonlat_deg).T
+        across, up = (self.left < x) & (x < self.right), (self.bottom < y) & (y < self.top)
+        return np.asarray(across & up)
+
     def lines(self, rings: Iterable[Floats]) -> Floats:
         """Project closed rings, one after the other with a row of NaN between.
 

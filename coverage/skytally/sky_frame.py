@@ -209,7 +209,7 @@ def zoom_frame(axes: Axes, window: Window) -> None:
     lines = graticule(window)
     _plot_graticule(axes, lines)
     _plot_galactic_plane(axes, window)
-    if _shows_a_pole(window):
+    if window.shows(np.array([[0.0, 90.0], [0.0, -90.0]])).any():
         _label_lines(axes, window, lines)
         return
     x_ticks, y_ticks = [], []
@@ -229,12 +229,6 @@ def zoom_frame(axes: Axes, window: Window) -> None:
 def _size_in(axes: Axes) -> tuple[float, float]:
     """Return width and height of a chart, inches."""
     return axes.bbox.width / axes.figure.dpi, axes.bbox.height / axes.figure.dpi
-
-
-def _shows_a_pole(window: Window) -> bool:
-    x, y = window.project(np.array([[0.0, 90.0], [0.0, -90.0]])).T
-    inside = (window.left < x) & (x < window.right) & (window.bottom < y) & (y < window.top)
-    return bool(inside.any())
 
 
 def _label_lines(axes: Axes, window: Window, lines: Sequence[GraticuleLine]) -> None:

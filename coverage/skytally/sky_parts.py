@@ -88,7 +88,11 @@ def zooms(skymap: SkyMap, level: float = 0.9) -> list[Zoom]:
     first, *others = credible_parts(skymap, level)
     room = WIDTH_IN - ZOOM_LEFT - _ZOOM_RIGHT
     alone = Zoom(first, zoom_window(first.lonlat_deg, aspects=(0.45, 0.7)), room)
-    if not others or others[0].probability < LEAST_PART or _shows(alone.window, others[0]):
+    if (
+        not others
+        or others[0].probability < LEAST_PART
+        or alone.window.shows(others[0].lonlat_deg).all()
+    ):
         return [alone]
     parts = [first, others[0]]
     natural = [zoom_window(part.lonlat_deg, aspects=(0.5, 1.6)) for part in parts]
@@ -101,13 +105,6 @@ def zooms(skymap: SkyMap, level: float = 0.9) -> list[Zoom]:
         Zoom(part, zoom_window(part.lonlat_deg, aspects=(height / width, height / width)), width)
         for part, width in zip(parts, widths)
     ]
-
-
-def _shows(window: Window, part: Part) -> bool:
-    """Tell whether a window holds all directions of a part."""
-    x, y = window.project(part.lonlat_deg).T
-    across, up = (window.left < x) & (x < window.right), (window.bottom < y) & (y < window.top)
-    return bool(np.all(across & up))
 
 
 def credible_parts(skymap: SkyMap, level: float = 0.9) -> list[Part]:
