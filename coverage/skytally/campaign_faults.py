@@ -46,6 +46,13 @@ SYNTAX_CHARACTERS = 200
 FAULTS_LIMIT = 100
 TABLES_LIMIT = 5_000
 
+# The parser's memory grows with the square of the parts of a key. A part begins where no
+# word goes on, so that a long one is not searched from each of its letters.
+_LONG_KEY = re.compile(
+    r"(?<![A-Za-z0-9_-])"
+    r"(?:(?:[A-Za-z0-9_-]++|\"[^\"\n]*+\"|'[^'\n]*+')[ \t]*+\.[ \t]*+){50}"
+)
+
 Place = tuple[str | int, ...]
 AnyTable = TypeVar("AnyTable", bound=Table)
 
@@ -250,6 +257,12 @@ def _toml(content: bytes, path: Path) -> dict[str, Any]:
         raise CampaignError(
             [f"line {line}: a byte that is not UTF-8 text. Save the file as UTF-8."], file=path
         ) from None
+    if found := _LONG_KEY.search(text):
+        line = text.count("\n", 0, found.start()) + 1
+        raise CampaignError(
+            [f"line {line}: a key of more than 50 parts. Write the tables as the example does."],
+            file=path,
+        )
     try:
         return tomllib.loads(text)
     except RecursionError:
@@ -450,7 +463,8 @@ def _choices(field: FieldInfo | None) -> list[str]:
 
 def _alike(value: object, field: FieldInfo | None) -> str:
     choices = {c.lower(): c for c in _choices(field)}
-    near = difflib.get_close_matches(json.dumps(str(value).lower()), choices, 1)
+    word = json.dumps(value.lower()) if isinstance(value, str) else ""
+    near = difflib.get_close_matches(word, choices, 1)
     if near:
         return f"Did you mean {choices[near[0]]}?"
     return f"Give {field.description}." if field is not None and field.description else ""
@@ -478,10 +492,15 @@ def _whereto(
     return f"{hint}Known here: {', '.join(known)}."
 
 
+def _listed_rows(raw: dict[str, Any], key: str) -> list[Any]:
+    """Return the tables of a list; none where it is no list, or longer than may be."""
+    rows = raw.get(key)
+    return rows if isinstance(rows, list) and len(rows) <= TABLES_LIMIT else []
+
+
 def _duplicates(raw: dict[str, Any], key: str, label: str) -> Iterator[str]:
     first: dict[str, int] = {}
-    rows = raw.get(key)
-    for number, row in enumerate(rows if isinstance(rows, list) else []):
+    for number, row in enumerate(_listed_rows(raw, key)):
         value = row.get(label) if isinstance(row, dict) else None
         if not isinstance(value, str) or not value.strip():
             continue
@@ -501,8 +520,7 @@ def _choice_faults(raw: dict[str, Any]) -> Iterator[str]:
         ("telescope", ("log", "images"), "a log of exposures, or images for FITS frames"),
         ("source", ("magnitude", "light_curve"), "an absolute magnitude, or a light-curve file"),
     ):
-        rows = raw.get(key)
-        for number, row in enumerate(rows if isinstance(rows, list) else []):
+        for number, row in enumerate(_listed_rows(raw, key)):
             given = [p for p in pair if isinstance(row, dict) and p in row]
             if len(given) != 1 and isinstance(row, dict):
                 found = f"both {pair[0]} and {pair[1]}" if given else f"no {pair[0]}"
@@ -512,8 +530,7 @@ def _choice_faults(raw: dict[str, Any]) -> Iterator[str]:
 
 def _shape_faults(raw: dict[str, Any]) -> Iterator[str]:
     """Yield faults of sources that fade or rise from no magnitude."""
-    rows = raw.get("source")
-    for number, row in enumerate(rows if isinstance(rows, list) else []):
+    for number, row in enumerate(_listed_rows(raw, "source")):
         for key in ("fade", "rise"):
             if isinstance(row, dict) and key in row and "magnitude" not in row:
                 place = key_path(("source", number), (key,), row)

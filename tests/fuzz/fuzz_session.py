@@ -36,8 +36,9 @@ __all__ = [
 FOUND = Path(__file__).parent / "found"
 # Of processor time; a case takes a few thousandths of a second.
 SECONDS_LIMIT = 5
-# By which a single case may raise the most memory ever held.
+# By which a few cases together may raise the most memory ever held.
 MEMORY_LIMIT_BYTES = 256 << 20
+WEIGHED = 16
 
 
 class _TooLong(BaseException):
@@ -99,22 +100,21 @@ def run_case(target: Target, data: bytes, seed: str, folder: Path) -> Bug | str:
     """
     path = folder / f"case{target.suffix}"
     path.write_bytes(data)
-    before = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
-    outcome: Bug | str = "result"
     try:
         with _bounded():
             target.read(path, Random(seed + "/options"))
     except SkytallyError as error:
-        outcome = "refused"
-        if not _is_plain(str(error)):
-            outcome = Bug(target.name, data, seed, "message with control characters", str(error))
+        if _is_plain(str(error)):
+            return "refused"
+        return Bug(target.name, data, seed, "message with control characters", str(error))
     except (Exception, _TooLong) as error:
-        place = _place(error)
-        outcome = Bug(target.name, data, seed, f"{type(error).__name__}: {error}"[:200], place)
-    grown = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss - before
-    if grown * 1024 > MEMORY_LIMIT_BYTES and not isinstance(outcome, Bug):
-        return Bug(target.name, data, seed, f"took {grown >> 10} MiB", "memory")
-    return outcome
+        return Bug(target.name, data, seed, f"{type(error).__name__}: {error}"[:200], _place(error))
+    return "result"
+
+
+def _peak_bytes() -> int:
+    """Return the most memory that this process has held."""
+    return resource.getrusage(resource.RUSAGE_SELF).ru_maxrss * 1024
 
 
 def _is_plain(message: str) -> bool:
@@ -152,19 +152,29 @@ def run_cases(
     found = {name: Counts() for name in counts}
     for name, count in counts.items():
         began = time.process_time()
-        for number in range(count):
-            label = f"{seed}/{name}/{number}"
-            outcome = run_case(TARGETS[name], case(name, label), label, folder)
-            if isinstance(outcome, Bug):
-                found[name].bugs.append(outcome)
-                if say is not None:
-                    say(f"{name}: {outcome.what} [{outcome.place}] seed {label}")
-                outcome = "bug"
-            found[name].outcomes[outcome] += 1
+        for first in range(0, count, WEIGHED):
+            block = range(first, min(first + WEIGHED, count))
+            before = _peak_bytes()
+            outcomes = [_run_numbered(name, f"{seed}/{name}/{i}", folder) for i in block]
+            grown = _peak_bytes() - before
+            if grown > MEMORY_LIMIT_BYTES:
+                what = f"one of {len(block)} cases took {grown >> 20} MiB"
+                outcomes[0] = Bug(name, case(name, f"{seed}/{name}/{first}"), "", what, "memory")
+            for number, outcome in zip(block, outcomes, strict=True):
+                kind = outcome if isinstance(outcome, str) else "bug"
+                found[name].outcomes[kind] += 1
+                if isinstance(outcome, Bug):
+                    found[name].bugs.append(outcome)
+                    if say is not None:
+                        say(f"{name}: {outcome.what} [{outcome.place}] {seed}/{name}/{number}")
         if say is not None and count:
             each = 1000 * (time.process_time() - began) / count
             say(f"{name}: {count} cases, {each:.1f} ms each")
     return found
+
+
+def _run_numbered(name: str, label: str, folder: Path) -> Bug | str:
+    return run_case(TARGETS[name], case(name, label), label, folder)
 
 
 def keep(bug: Bug) -> Path:

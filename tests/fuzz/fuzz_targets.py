@@ -155,16 +155,16 @@ def _image(path: Path, rng: Random) -> None:
 TARGETS = {
     target.name: target
     for target in (
-        Target("map", ".fits", _map, 20),
-        Target("log", ".csv", _log, 25),
-        Target("region", ".txt", _region, 15),
-        Target("campaign", ".toml", _campaign, 14),
+        Target("map", ".fits", _map, 16),
+        Target("log", ".csv", _log, 26),
+        Target("region", ".txt", _region, 26),
+        Target("campaign", ".toml", _campaign, 10),
         Target("image", ".fits", _image, 6),
-        Target("moc", ".fits", _moc, 5),
-        Target("dust", ".fits", _dust, 3),
+        Target("moc", ".fits", _moc, 4),
+        Target("dust", ".fits", _dust, 2),
         Target("claims", ".csv", _claims, 3),
-        Target("positions", ".csv", _positions, 3),
+        Target("positions", ".csv", _positions, 2),
         Target("mosaic", ".csv", _mosaic, 3),
-        Target("light_curve", ".csv", _light_curve, 3),
+        Target("light_curve", ".csv", _light_curve, 2),
     )
 }
