@@ -129,6 +129,12 @@ def _header(**cards: object) -> bytes:
 
 
 PRIMARY = _header(SIMPLE=True, BITPIX=8, NAXIS=0)
+IMAGE: dict[str, object] = {
+    **{"SIMPLE": True, "BITPIX": 8, "NAXIS": 2, "NAXIS1": 4, "NAXIS2": 4},
+    **{"CTYPE1": "RA---TAN", "CTYPE2": "DEC--TAN", "CRVAL1": 150.0, "CRVAL2": -8.0},
+    **{"CD1_1": -0.1, "CD1_2": 0.0, "CD2_1": 0.0, "CD2_2": 0.1, "CRPIX1": 2, "CRPIX2": 2},
+    **{"DATE-OBS": "2031-03-14T19:30:00", "EXPTIME": 60.0, "FILTER": "r"},
+}
 TABLE = {
     **{"XTENSION": "BINTABLE", "BITPIX": 8, "NAXIS": 2, "NAXIS1": 8, "NAXIS2": 1},
     **{"PCOUNT": 0, "GCOUNT": 1, "TFIELDS": 1, "TTYPE1": "ra", "TFORM1": "D"},
@@ -213,18 +219,23 @@ def test_many_headers_and_long_ones_are_refused(
 def test_image_headers_that_ask_for_too_much(
     change: dict[str, object], words: str, tmp_path: Path
 ) -> None:
-    cards = {
-        **{"SIMPLE": True, "BITPIX": 8, "NAXIS": 2, "NAXIS1": 4, "NAXIS2": 4},
-        **{"CTYPE1": "RA---TAN", "CTYPE2": "DEC--TAN", "CRVAL1": 150.0, "CRVAL2": -8.0},
-        **{"CD1_1": -0.1, "CD1_2": 0.0, "CD2_1": 0.0, "CD2_2": 0.1, "CRPIX1": 2, "CRPIX2": 2},
-        **{"DATE-OBS": "2031-03-14T19:30:00", "EXPTIME": 60.0, "FILTER": "r"},
-    }
+    cards = IMAGE
     good = tmp_path / "good.fits"
     good.write_bytes(_header(**cards) + bytes(2880))
     (tmp_path / "hostile.fits").write_bytes(_header(**{**cards, **change}) + bytes(2880))
     log = read_images("*.fits", "Heron", base=tmp_path)
     assert log.exposure.tolist() == ["good.fits"]
     assert words in log.set_aside[0].detail
+
+
+def test_what_the_library_says_of_a_header_is_not_printed(
+    tmp_path: Path, capfd: pytest.CaptureFixture[str]
+) -> None:
+    """Of distortions that no CTYPE names it tells on standard output, where data goes."""
+    cards = {**IMAGE, "A_ORDER": 2, "B_ORDER": 2, "A_2_0": 1e-6, "B_0_2": 1e-6}
+    (tmp_path / "a.fits").write_bytes(_header(**cards) + bytes(2880))
+    assert len(read_images("a.fits", "Heron", base=tmp_path)) == 1
+    assert capfd.readouterr() == ("", "")
 
 
 def _log(path: Path, text: str) -> Any:

@@ -166,6 +166,17 @@ def test_fits_columns_of_other_types(tmp_path: Path) -> None:
     assert [(x.row, x.column) for x in log.set_aside] == [(2, "ra")]
 
 
+def test_fits_text_of_variable_length(tmp_path: Path) -> None:
+    """FITS 4.0, section 7.3.5: a region column is often written so."""
+    regions = ["circle 10 -20 0.5", "polygon 10 20 11 20 11 21"]
+    columns = [
+        fits.Column("t_min", "D", array=[62939.2, 62939.3]),
+        fits.Column("s_region", "PA()", array=np.array(regions, dtype=object)),
+    ]
+    fits.BinTableHDU.from_columns(columns).writeto(tmp_path / "log.fits")
+    assert read_log(tmp_path / "log.fits", "Heron").region.tolist() == regions
+
+
 def test_votable(tmp_path: Path) -> None:
     log = read(tmp_path, votable(GOOD_DATA))
     assert (log.ra_deg[0], log.dec_deg[0], log.start_mjd[0]) == (150.5, -20.25, 62939.5)

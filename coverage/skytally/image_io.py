@@ -6,12 +6,13 @@ import glob
 import hashlib
 import warnings
 from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 import numpy as np
-from astropy import units
+from astropy import log, units
 from astropy.coordinates import SkyCoord
 from astropy.io import fits
 from astropy.wcs import WCS
@@ -326,8 +327,7 @@ def _rings(headers: list[fits.Header]) -> Iterator[NDArray[np.float64]]:
         try:
             if int(header["NAXIS"]) < 2:
                 continue
-            with warnings.catch_warnings():
-                warnings.simplefilter("ignore")
+            with _quiet():
                 _check_distortion(header)
                 wcs = WCS(header)
                 if not wcs.has_celestial:
@@ -342,6 +342,19 @@ def _rings(headers: list[fits.Header]) -> Iterator[NDArray[np.float64]]:
                 "CTYPE1",
             ) from exc
         yield ring
+
+
+@contextmanager
+def _quiet() -> Iterator[None]:
+    """Keep the library from what it would tell, some of it on standard output."""
+    level = log.level
+    log.setLevel("ERROR")
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")
+            yield
+    finally:
+        log.setLevel(level)
 
 
 def _check_distortion(header: fits.Header) -> None:

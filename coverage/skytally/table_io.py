@@ -405,6 +405,11 @@ def _joined(cell: Any, word: str) -> str:
         return ""
     if isinstance(cell, str | bytes):
         return cell.strip() if isinstance(cell, str) else cell.decode("latin-1").strip()
+    if np.ma.asarray(cell).dtype.kind in "US":
+        # Text of variable length in FITS comes as its characters; its own array drops blanks.
+        letters = np.asarray(cell).astype("U").ravel().tolist()
+        if all(len(x) <= 1 for x in letters):
+            return "".join(x or " " for x in letters).strip()
     shown = [str(x) for x in np.ma.compressed(np.ma.ravel(cell))]
     return " ".join([word, *shown]).strip() if shown else ""
 

@@ -119,7 +119,7 @@ def _peak_bytes() -> int:
 
 def _is_plain(message: str) -> bool:
     """Tell whether a message can be shown on a terminal as it is."""
-    return all(c.isprintable() or c == "\n" for c in message)
+    return all(c.isprintable() or c in "\n\u00a0" for c in message)
 
 
 @contextmanager
