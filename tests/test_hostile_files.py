@@ -28,7 +28,7 @@ from skytally.errors import CampaignError, InputError, LogError, SkytallyError, 
 from skytally.image_io import read_images
 from skytally.light_curve_io import read_light_curve
 from skytally.local_files import SIZE_VARIABLE
-from skytally.log_io import read_log
+from skytally.log_io import LogOptions, read_log
 from skytally.log_regions import resolve_regions
 from skytally.moc import read_moc
 from skytally.positions_io import read_positions
@@ -348,6 +348,12 @@ def test_names_with_hidden_characters_are_shown_with_a_mark(tmp_path: Path) -> N
     )
     assert log.exposure.tolist() == ["a\ufffdb", "\ufffd[2Jc"]
     assert log.band.tolist() == ["r\ufffd", "r"]
+    text = "exposure,ra,dec,date-\u2066obs (\u2067)\na,1,2,62939\nb,1,2,x\nc,1,2,62940\n"
+    (tmp_path / "b.csv").write_text(text)
+    columns = {"start": "date-\u2066obs (\u2067)"}
+    aside = read_log(tmp_path / "b.csv", "Heron", LogOptions(columns=columns)).set_aside[0]
+    assert aside.column == "date-\ufffdobs (\ufffd)"
+    assert aside.detail.isprintable()
 
 
 def test_no_error_of_ours_steers_a_terminal() -> None:

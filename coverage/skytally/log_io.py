@@ -221,7 +221,7 @@ class _Reading:
     def _name(self, canonical: str) -> str:
         """Name of a column as the file writes it."""
         at = self._at.get(canonical)
-        return canonical if at is None else self._table.names[at]
+        return canonical if at is None else visible(self._table.names[at])
 
     def _unit(self, canonical: str, known: Mapping[str, float], default: str) -> str:
         """Stated unit of a column; empty, and noted, where it is not a known one."""
@@ -265,7 +265,7 @@ class _Reading:
             self._filter("execution_status", accept or (PERFORMED,))
 
     def _note_qualities(self) -> None:
-        values = list(dict.fromkeys(x or "nothing" for x in self._cells("quality")))
+        values = list(dict.fromkeys(visible(x) or "nothing" for x in self._cells("quality")))
         self._notes.append(
             f"Column {self._name('quality')!r} holds {listed(values)}; no accepted values are "
             "given (accept = [...]), so every row counts."

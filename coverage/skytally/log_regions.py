@@ -11,6 +11,7 @@ from pathlib import Path
 import numpy as np
 
 from skytally.errors import RegionError, SkytallyError
+from skytally.log_cells import visible
 from skytally.moc import read_moc
 from skytally.observations import LogTable, SetAside
 from skytally.region_text import parse_region
@@ -75,7 +76,9 @@ def resolve_regions(
                 shapes[text] = parse_region(text)
         except SkytallyError as error:
             # The path as the log has it, not as it is on this machine.
-            faults[text] = f"{text}: {error.message.rstrip('.')}. {error.remedy or ''}".rstrip()
+            faults[text] = (
+                f"{visible(text)}: {error.message.rstrip('.')}. {error.remedy or ''}".rstrip()
+            )
     if not faults:
         return log, shapes, inputs
     bad = np.array([text in faults for text in log.region])

@@ -298,7 +298,7 @@ class _Reading:
         return known[unit]
 
     def _fault(self, canonical: str, index: int, fault: CellFault) -> PositionFault:
-        column = self._table.names[self._at[canonical]]
+        column = visible(self._table.names[self._at[canonical]])
         detail = fault.sentence(column, self._cells(canonical)[index])
         return PositionFault(self._table.rows[index], self._names[index], column, detail)
 

@@ -20,6 +20,7 @@ from skytally.light_curve_io import read_light_curve
 from skytally.log_io import LogOptions, read_log
 from skytally.log_regions import resolve_regions
 from skytally.moc import read_moc
+from skytally.observations import LogTable
 from skytally.positions_io import read_positions
 from skytally.region_text import parse_region
 from skytally.skymap_circle import circle_skymap
@@ -104,6 +105,14 @@ def _log(path: Path, rng: Random) -> None:
     assert not np.isinf(log.depth).any()
     resolved, _, _ = resolve_regions(log, path.parent)
     assert log.read == len(resolved) + len(resolved.set_aside)
+    _check_words(resolved)
+
+
+def _check_words(log: LogTable) -> None:
+    """What is shown of a log holds nothing that steers a terminal or a page."""
+    rows = [(row.exposure, row.detail, row.column) for row in log.set_aside]
+    words = [*log.exposure, *log.band, *log.notes, *(word for row in rows for word in row)]
+    assert all(c.isprintable() or c == "\u00a0" for word in words for c in word)
 
 
 def _region(path: Path, rng: Random) -> None:
@@ -150,6 +159,7 @@ def _image(path: Path, rng: Random) -> None:
     assert np.isfinite(log.start_mjd).all()
     for region in log.region:
         parse_region(region)
+    _check_words(log)
 
 
 TARGETS = {
