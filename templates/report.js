@@ -297,11 +297,11 @@
     const [value, bracket] = probabilityText(result, ALL, choice.map, all);
     const exact = (a) => areaText([a, a, a]);
     const byBand = Object.fromEntries(medians(result).map((m) => [`median limit in ${m.band}`, [m.text, settings.terms]]));
-    const revisits = [percent(all.again), `≥${NBSP}${settings.revisitVisits} visits, ≥${NBSP}${settings.revisitMinutes}${NBSP}min`];
+    const revisits = [percent(all.again), `at least ${plural("visit", settings.revisitVisits)}, ${settings.revisitMinutes}${NBSP}min apart`];
     const figures = {
       "probability covered": [value, bracket || `of “${map.version}”`],
       "area observed": [areaText(all.area), `by ${plural("exposure", all.exposures)}`],
-      [`of the 90${NBSP}% region`]: [percent(all.a90 / map.area90), `${exact(all.a90)} of ${exact(map.area90)}`],
+      [`90${NBSP}% region covered`]: [percent(all.a90 / map.area90), `${exact(all.a90)} of ${exact(map.area90)}`],
       revisited: data.whole ? revisits : ["—", "not known for a choice"],
       ...byBand,
     };

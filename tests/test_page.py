@@ -339,7 +339,7 @@ def check(page: Page, twin: Twin) -> None:
     )
     assert figures["probability covered"] == all_of_it["covered"]
     assert figures["area observed"] == all_of_it["area"]
-    assert figures["of the 90\N{NO-BREAK SPACE}% region"] == all_of_it["of_90"]
+    assert figures["90\N{NO-BREAK SPACE}% region covered"] == all_of_it["of_90"]
     assert figures["revisited"] == all_of_it["revisited"]
     check_groups(page, twin)
     for index, (name, row) in enumerate(table(page, "maps").items()):

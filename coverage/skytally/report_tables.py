@@ -455,15 +455,15 @@ def key_figures(results: Results) -> Sequence[tuple[str, str, str]]:
         ("probability covered", probability, bracket.rstrip(")") or f"of “{newest.version}”"),
         ("area observed", _area(total).text, f"by {count('exposure', total.exposures)}"),
         (
-            f"of the 90{NBSP}% region",
+            f"90{NBSP}% region covered",
             percent(total.area_in_90_deg2 / newest.area_90_deg2),
             f"{_deg2(total.area_in_90_deg2)} of {_deg2(newest.area_90_deg2)}",
         ),
         (
             "revisited",
             percent(total.probability_revisited),
-            f"≥{NBSP}{results.settings.revisit_visits} visits, "
-            f"≥{NBSP}{results.settings.revisit_gap_minutes:g}{NBSP}min",
+            f"at least {count('visit', results.settings.revisit_visits)}, "
+            f"{results.settings.revisit_gap_minutes:g}{NBSP}min apart",
         ),
     ]
     limits = limit_rows(results)
