@@ -42,7 +42,6 @@ from skytally.wording import (
     limit_terms,
     magnitude_text,
     percent,
-    row_probability,
     version_text,
 )
 
@@ -93,16 +92,13 @@ def _whole_sky(results: Results, shown: list[Zoom]) -> Sketch:
     version = version_text(results.newest.version)
     used = sum(bool(region) for region in results.sky.covered)
     if total.probability > 0:
-        finding = (
-            f"The footprints of {count('telescope', used, words=True)} hold "
-            f"{row_probability(total, results.settings)} of the probability of {version}"
-        )
+        # The probability covered stands above it on the first page.
         outside = total.area_deg2 - total.area_in_90_deg2
-        finding += (
-            f"; {percent(outside / total.area_deg2, 0)} of the area observed lies outside its "
-            f"90{NBSP}% region."
+        place = f"side the 90{NBSP}% region of {version}"
+        finding = (
+            f"{percent(outside / total.area_deg2, 0)} of the area observed lies out{place}."
             if outside > 0
-            else f"; all of the area observed lies inside its 90{NBSP}% region."
+            else f"All of the area observed lies in{place}."
         )
     else:
         finding = f"No footprint holds any of the probability of {version}."
@@ -110,7 +106,8 @@ def _whole_sky(results: Results, shown: list[Zoom]) -> Sketch:
         "whole-sky",
         "The whole sky",
         f"{finding} Mollweide projection, equal area; right ascension increases to the left.",
-        f"Whole-sky chart of {version} with the footprints of each telescope. {finding}",
+        f"Whole-sky chart of {version} with the footprints of "
+        f"{count('telescope', used, words=True)}. {finding}",
         whole_sky_height(results),
         lambda: whole_sky_figure(results, shown),
     )
@@ -121,9 +118,8 @@ def _zoom(results: Results, shown: list[Zoom]) -> Sketch:
     area = results.newest.area_90_deg2
     region = f"90{NBSP}% region"
     finding = (
-        f"Of the {area_text(area, area, area)} of the {region}, "
-        f"{percent(total.area_in_90_deg2 / area)} is covered; "
-        f"what is covered there holds {percent(total.probability_in_90)} of all probability."
+        f"What is covered of the {region} holds {percent(total.probability_in_90)} of all "
+        "probability."
         if total.area_in_90_deg2 > 0
         else f"Nothing of the {area_text(area, area, area)} of the {region} is covered."
     )
