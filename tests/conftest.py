@@ -11,7 +11,7 @@ def pytest_addoption(parser: pytest.Parser) -> None:
     parser.addoption(
         "--campaigns",
         type=int,
-        default=14,
+        default=10,
         metavar="N",
         help="how many random campaigns the slow twin tallies (200 take some five minutes)",
     )
