@@ -163,7 +163,7 @@ def test_no_sheet_is_blank_and_no_bullet_stands_alone(laid: tuple[Results, Sheet
 def test_a_figure_and_its_caption_share_a_sheet(laid: tuple[Results, Sheets]) -> None:
     results, found = laid
     for name, sketch in sketch_figures(results).items():
-        (place,) = found.sheets_of(f"drawing:{name}")
+        (place,) = {word.sheet for word in found.words if word.text == f"drawing:{name}"}
         assert f"{plain(sketch.title)}." in found.texts[place - 1]
         assert " ".join(plain(sketch.caption).split()[-2:]) in found.texts[place - 1]
 
