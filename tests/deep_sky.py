@@ -21,7 +21,7 @@ from skytally.cameras import MosaicCamera
 from skytally.covered import Coverage
 from skytally.dust import Dust
 from skytally.footprints import lay_footprints
-from skytally.limits import Scene, tally_sources, visits_of_brackets
+from skytally.limits import Brackets, Scene, tally_sources
 from skytally.overlay import Places
 from skytally.patchwork import edges_of
 from skytally.skymap import DistanceLayer, SkyMap
@@ -116,13 +116,13 @@ def places_of(patchwork, skymap, dust=None):
 
 def scene_of(coverage, space, dust=None, coefficients=None):
     """A map under the centre rule's patchwork."""
-    return Scene.of(space, next(visits_of_brackets(coverage, [space], dust, coefficients or {})))
+    return Scene.of(space, Brackets(coverage, [space], dust, coefficients or {}).centre)
 
 
 def source_rows(coverage, space, sources, dust=None, coefficients=None):
     """Tally sources on one map."""
-    brackets = list(visits_of_brackets(coverage, [space], dust, coefficients or {}))
-    return tally_sources(brackets, [space], sources, EVENT_MJD)
+    brackets = Brackets(coverage, [space], dust, coefficients or {})
+    return tally_sources(brackets, sources, EVENT_MJD)
 
 
 def spans_of_cells(order, cell):

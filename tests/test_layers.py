@@ -14,7 +14,7 @@ SOURCE = Path(skytally.__file__).parent
 # Bottom to top. A module may import modules of its own layer or below, no two one another.
 TABLE = (
     "errors findings fits_layout local_files spans moc distance_integrals distance magnitudes "
-    "cosmology times grouping",
+    "cosmology times grouping workers",
     "shapes pieces raster working_order skymap cameras observations volume sources dust space "
     "visibility",
     "healpix_table skymap_circle skymap_frames skymap_table skymap_io dust_io ecsv_header "

@@ -187,7 +187,7 @@ class Twin:
         coverage = self.example.coverage
         selection = Selection(None, None, None, mask, np.zeros(mask.size, dtype=int), 0)
         settings = TallySettings(self.example.campaign.event_mjd, visits, gap_minutes)
-        part = Chosen.of(coverage, selection, settings)
+        ((part, _),) = Chosen.every(coverage, [selection], settings)
         again = np.zeros(coverage.centre.sets, dtype=bool)
         again[part.covered] = part.revisited[part.kind[part.covered]]
         return again

@@ -35,6 +35,7 @@ from skytally.reach import (
     reach_of_looks,
     seen_share,
 )
+from skytally.selection import selections
 from skytally.sources import Detection, Source
 from skytally.space import Space
 from skytally.spans import Spans, cell_to_span
@@ -306,8 +307,9 @@ def test_every_selection_sees_its_own_exposures_at_every_place():
     every = [
         visits.exposure[visits.seen.part(slice(p, p + 1)).items] for p in range(len(visits.places))
     ]
-    assert len(visits.views) == 12
-    for view in visits.views:
+    views = [visits.view(selection) for selection in selections(visits.observations)]
+    assert len(views) == 12
+    for view in views:
         lists = [
             tuple(visits.exposure[view.seen.part(slice(k, k + 1)).items].tolist())
             for k in range(len(view.seen))

@@ -30,7 +30,7 @@ from skytally.exclusion import (
 )
 from skytally.field_extinction import field_extinction
 from skytally.footprints import Footprints, Progress, lay_footprints
-from skytally.limits import Scene, SourceRow, tally_sources, visits_of_brackets
+from skytally.limits import Brackets, Scene, SourceRow, tally_sources
 from skytally.page_sets import SetMerger
 from skytally.refinement import refine_footprints
 from skytally.results import (
@@ -186,9 +186,9 @@ def _third_dimension(
             distance_profiles=(),
             depth_histograms=(),
         )
-    dust = campaign.dust, campaign.extinction_coefficients
-    brackets = list(visits_of_brackets(coverage, known, *dust))
-    centre = brackets[0]
+    brackets = Brackets(coverage, known, campaign.dust, campaign.extinction_coefficients)
+    source_rows = tally_sources(brackets, campaign.sources, campaign.event_mjd)
+    centre = brackets.centre
     scenes = [Scene.of(space, centre) for space in known]
     seen = [
         SeenSource.of(source, centre, campaign.event_mjd, known[0].cosmology)
@@ -196,7 +196,7 @@ def _third_dimension(
     ]
     reaches = [(one.source.name, one.reach_at(centre.seen)) for one in seen]
     return _Depths(
-        source_rows=tuple(tally_sources(brackets, known, campaign.sources, campaign.event_mjd)),
+        source_rows=tuple(source_rows),
         exclusions=tuple(curve for scene in scenes for curve in exclusion_curves(scene)),
         fading_planes=tuple(fading_planes(centre, scenes, campaign.event_mjd)),
         absolute_limits=tuple(limit for space in known for limit in absolute_limits(rows, space)),

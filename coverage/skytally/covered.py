@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field
 from functools import cached_property
 
@@ -104,7 +104,7 @@ def exposures_of(patchwork: Patchwork, observations: Observations) -> Lists:
     """List the exposures, in time order, that covered each set of a patchwork."""
     members = patchwork.lists.table(int(observations.footprint.max(initial=0)) + 1)
     # By exposure, then back by set: counting sorts, which keep the order of time.
-    return Lists.of_table(members.tocsc()[:, observations.footprint].tocsr())
+    return Lists.of_table(members.tocsc()[:, observations.footprint.astype(np.int32)].tocsr())
 
 
 def visits_of(patchwork: Patchwork, observations: Observations) -> tuple[Ints, Ints]:
@@ -133,8 +133,6 @@ class Chosen:
         Which sets of each patchwork the selection covers.
     kind : int32 array, shape (sets,)
         Kind of each set of the centre rule's patchwork; −1 where not covered.
-    exposures : Lists
-        The chosen exposures of each kind, in time order.
     revisited : bool array, shape (kinds,)
         Kinds that were visited often enough, far enough apart.
     ends_mjd : float64 array, shape (ends,)
@@ -149,16 +147,38 @@ class Chosen:
     covered_inner: Bools
     covered_outer: Bools
     kind: NDArray[np.int32]
-    exposures: Lists
     revisited: Bools
     ends_mjd: Floats
     first_end: Ints
 
     @classmethod
-    def of(cls, coverage: Coverage, selection: Selection, settings: TallySettings) -> Chosen:
-        """Look at a coverage through one selection."""
-        footprints = coverage.footprints.of(selection.chosen)
-        exposures, kind = coverage.exposures.alike(selection.chosen)
+    def every(
+        cls, coverage: Coverage, choices: Sequence[Selection], settings: TallySettings
+    ) -> Iterator[tuple[Chosen, Lists]]:
+        """Look at a coverage through one selection after the other.
+
+        With each comes what is too large to keep: the chosen exposures of each kind
+        of set, in time order.
+        """
+        footprints = [coverage.footprints.of(selection.chosen) for selection in choices]
+        inner = coverage.inner.covered_by_each(footprints)
+        outer = coverage.outer.covered_by_each(footprints)
+        for selection, *parts in zip(choices, footprints, inner, outer):
+            exposures, kind = coverage.exposures.alike(selection.chosen)
+            yield cls._of(coverage, settings, selection, exposures, kind, *parts), exposures
+
+    @classmethod
+    def _of(
+        cls,
+        coverage: Coverage,
+        settings: TallySettings,
+        selection: Selection,
+        exposures: Lists,
+        kind: NDArray[np.int32],
+        footprints: Bools,
+        covered_inner: Bools,
+        covered_outer: Bools,
+    ) -> Chosen:
         o = coverage.observations
         first, last = exposures.offsets[:-1], exposures.offsets[1:] - 1
         # A microsecond of slack: double precision resolves MJD no better.
@@ -170,10 +190,9 @@ class Chosen:
             selection,
             footprints,
             kind >= 0,
-            coverage.inner.covered_by(footprints),
-            coverage.outer.covered_by(footprints),
+            covered_inner,
+            covered_outer,
             kind,
-            exposures,
             often & (passed >= gap),
             ends,
             step,
@@ -181,4 +200,4 @@ class Chosen:
 
     def by_kind(self, amount: Floats) -> Floats:
         """Sum what the sets hold, shape (sets,), over those of each kind."""
-        return sum_by(self.kind[self.covered], amount[self.covered], len(self.exposures))
+        return sum_by(self.kind[self.covered], amount[self.covered], self.revisited.size)

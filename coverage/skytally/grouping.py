@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -109,7 +109,7 @@ class Lists:
     @classmethod
     def of_table(cls, table: csr_array) -> Lists:
         """Take the columns of each row of a sparse table as its list."""
-        return cls(table.indptr.astype(np.int64), table.indices)
+        return cls(table.indptr.astype(np.int64), table.indices.astype(np.int32, copy=False))
 
     def table(self, items: int) -> csr_array:
         """Return the lists as a sparse table of ones, shape (n, items)."""
@@ -154,6 +154,18 @@ class Lists:
         ]
         return np.concatenate(found) if found else value[:0]
 
+    def any_of(self, choices: Sequence[Bools]) -> Iterator[Bools]:
+        """Tell, choice after choice of items, which lists hold at least one of it; each (n,)."""
+        for first in range(0, len(choices), 64):
+            some = choices[first : first + 64]
+            # A bit for each choice: one walk along the lists serves all of them.
+            bits = np.zeros(some[0].size, dtype=np.uint64)
+            for number, chosen in enumerate(some):
+                bits |= chosen.astype(np.uint64) << np.uint64(number)
+            found = self.reduce(np.bitwise_or, bits)
+            for number in range(len(some)):
+                yield (found >> np.uint64(number)) & np.uint64(1) != 0
+
     def sums(self, value: Floats) -> Floats:
         """Sum the values, shape (items, k), of each list's items; shape (n, k)."""
         return np.asarray(self.table(value.shape[0]).astype(np.float64) @ value)
@@ -188,7 +200,13 @@ class Lists:
 
     def _filtered(self, rows: Ints, chosen: Bools) -> Lists:
         """Take some of the lists and of them the chosen items."""
-        table = self.table(chosen.size)[rows]
-        keep = chosen[table.indices]
-        before = np.concatenate(([0], np.cumsum(keep)))
-        return Lists(before[table.indptr].astype(np.int64), table.indices[keep])
+        kept = self.reduce(np.add, chosen.astype(np.int64))[rows]
+        offsets = np.concatenate(([0], np.cumsum(kept)))
+        items = np.empty(offsets[-1], dtype=np.int32)
+        table, length = self.table(chosen.size), np.diff(self.offsets)[rows]
+        whole = Lists(np.concatenate(([0], np.cumsum(length))), items)
+        for block in whole.blocks(_ITEMS_AT_ONCE):
+            # Row numbers of 64 bits would make those of the columns as wide.
+            found = table[rows[block].astype(np.int32)].indices
+            items[offsets[block.start] : offsets[block.stop]] = found[chosen[found]]
+        return Lists(offsets, items)

@@ -18,7 +18,7 @@ from skytally.limits import Scene
 from skytally.overlay import Overlay, Places
 from skytally.patchwork import edges_of
 from skytally.reach import Visits
-from skytally.seen import DetectionCurve, SeenSource
+from skytally.seen import DetectionCurve, SeenSource, detection_nodes
 from skytally.skymap import DistanceLayer, SkyMap
 from skytally.sources import Source
 from skytally.space import Space, blocks
@@ -191,7 +191,7 @@ def _taken_by_reach(space: Space, overlay: Overlay, seen: SeenSource) -> Floats:
 
 def _taken_by_curve(space: Space, overlay: Overlay, seen: SeenSource) -> Floats:
     """The same over a detection curve."""
-    curve = DetectionCurve(seen, space, overlay.cells())
+    curve = DetectionCurve(seen, detection_nodes(seen, [space]))
     taken = np.zeros((3, overlay.cell.size))
     for some in curve.blocks(seen.visits.seen):
         share = curve.shares(seen.visits.seen.part(some))

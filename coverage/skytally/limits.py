@@ -2,27 +2,35 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Mapping, Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
+from functools import cached_property
 from operator import itemgetter
-from typing import TypeVar
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
+from skytally.cosmology import Cosmology
 from skytally.covered import Coverage
 from skytally.dust import Dust
 from skytally.overlay import Overlay, Places
-from skytally.patchwork import Layer
+from skytally.patchwork import Layer, Patchwork
 from skytally.reach import View, Visits
-from skytally.seen import DetectionCurve, SeenSource
+from skytally.seen import DetectionCurve, SeenSource, Shells, detection_nodes
+from skytally.selection import Selection, selections
 from skytally.sources import Source
 from skytally.space import Space
+from skytally.spans import Ints
+from skytally.workers import side_by_side
 
-__all__ = ["Scene", "SourceRow", "tally_sources", "visits_of_brackets"]
+__all__ = ["Brackets", "Scene", "SourceRow", "tally_sources"]
 
 Floats = NDArray[np.float64]
-T = TypeVar("T")
+_Key = tuple[int, int, int]  # map, source and selection
+
+# Bounds what the maps' cells take that are cut along distance, in numbers.
+_SHELLS_AT_ONCE = 18_000_000
 
 
 @dataclass(frozen=True)
@@ -86,93 +94,211 @@ class Scene:
         return self.overlay.joined(view.kind, len(view.seen))
 
 
-def visits_of_brackets(
-    coverage: Coverage,
-    spaces: Sequence[Space],
-    dust: Dust | None,
-    coefficients: Mapping[str, float],
-) -> Iterator[Visits]:
-    """Yield the visits of the centre rule's, the inner and the outer patchwork.
+@dataclass(frozen=True, eq=False)
+class Brackets:
+    """What looked at the places of the three patchworks, cut at the edges of every map.
 
-    All are cut at the edges of every map.
+    The inner and the outer one are made anew each time: they are large, and asked for once.
+    The outer one holds every look of the others.
+
+    Attributes
+    ----------
+    coverage : Coverage
+        What was covered.
+    spaces : sequence of Space
+        The maps with distances.
+    dust : Dust or None
+        Dust in front, at whose edges the patchworks are cut, too.
+    coefficients : mapping of str to float
+        A_b / E(B−V) of bands beside those known.
     """
-    layers: list[Layer] = [space.skymap for space in spaces]
-    if dust is not None:
-        layers.append(dust)
-    patchworks = coverage.centre, coverage.inner, coverage.outer
-    for patchwork, cut in zip(patchworks, coverage.cuts(layers)):
-        places = Places.of(cut, dust)
-        yield Visits.of(patchwork, places, coverage.observations, coefficients)
+
+    coverage: Coverage
+    spaces: Sequence[Space]
+    dust: Dust | None
+    coefficients: Mapping[str, float]
+
+    @cached_property
+    def centre(self) -> Visits:
+        """By the centre rule."""
+        return self._visits(0, self.coverage.centre)
+
+    @property
+    def inner(self) -> Visits:
+        """What is certainly covered."""
+        return self._visits(1, self.coverage.inner)
+
+    @property
+    def outer(self) -> Visits:
+        """What may be covered."""
+        return self._visits(2, self.coverage.outer)
+
+    def _visits(self, which: int, patchwork: Patchwork) -> Visits:
+        layers: list[Layer] = [space.skymap for space in self.spaces]
+        if self.dust is not None:
+            layers.append(self.dust)
+        places = Places.of(self.coverage.cuts(layers)[which], self.dust)
+        return Visits.of(patchwork, places, self.coverage.observations, self.coefficients)
 
 
 def tally_sources(
-    brackets: Sequence[Visits], spaces: Sequence[Space], sources: Sequence[Source], event_mjd: float
+    brackets: Brackets, sources: Sequence[Source], event_mjd: float
 ) -> list[SourceRow]:
-    """Tally every source for every selection on every map version with distances, map by map.
-
-    Parameters
-    ----------
-    brackets : sequence of Visits
-        As `visits_of_brackets` makes them.
-    """
-    centre, *edges = brackets
-    rows = _each(_Part.row, centre, spaces, sources, event_mjd)
-    low, high = (_each(_Part.probability, v, spaces, sources, event_mjd) for v in edges)
+    """Tally every source for every selection on every map version with distances, map by map."""
+    spaces, found, rows = brackets.spaces, [], {}
+    groups: list[list[_Version]] = []
+    nodes: list[Floats | None] = []
+    for which in ("outer", "inner", "centre"):
+        bracket = _Bracket.of(getattr(brackets, which), sources, event_mjd, spaces[0].cosmology)
+        if not groups:
+            nodes = [None if s.is_step else detection_nodes(s, spaces) for s in bracket.seen]
+            groups = _groups(bracket.visits, spaces, nodes)
+        numbers: dict[_Key, tuple[float, SourceRow | None]] = {}
+        for group in groups:
+            numbers |= bracket.numbers(group, nodes, which == "centre")
+            if len(groups) > 1:
+                for version in group:
+                    version.let_go()
+        found.append({key: probability for key, (probability, _) in numbers.items()})
+        rows = {key: row for key, (_, row) in numbers.items() if row is not None}
+        del bracket  # before the next is made
+    high, low, value = found
     return [
         replace(
             row,
-            probability_low=min(low[key], row.probability),
-            probability_high=max(high[key], row.probability),
+            probability=value[key],
+            probability_low=min(low[key], value[key]),
+            probability_high=max(high[key], value[key]),
+            probability_beyond=max(row.probability_beyond - value[key], 0.0),
         )
         for key, row in sorted(rows.items(), key=itemgetter(0))
     ]
 
 
-def _each(
-    number: Callable[[_Part], T],
-    visits: Visits,
-    spaces: Sequence[Space],
-    sources: Sequence[Source],
-    event_mjd: float,
-) -> dict[tuple[int, int, int], T]:
-    """Find a number for every map, source and selection."""
-    views = visits.views
-    seen = [SeenSource.of(source, visits, event_mjd, spaces[0].cosmology) for source in sources]
-    reach = [[one.reach_at(view.seen) for view in views] for one in seen]
-    found = {}
-    for version, space in enumerate(spaces):
-        scene = Scene.of(space, visits)
-        cells = scene.overlay.cells()
-        curves = [DetectionCurve(one, space, cells) for one in seen]
-        for which, view in enumerate(views):
-            overlay = scene.through(view)
-            for source, curve in enumerate(curves):
-                part = _Part(view, overlay, curve, reach[source][which])
-                found[version, source, which] = number(part)
-    return found
+@dataclass(frozen=True, eq=False)
+class _Version:
+    """A map, and its cells that may be covered, cut at nodes by need.
+
+    Attributes
+    ----------
+    number : int
+        Which of the maps it is.
+    space : Space
+        The map.
+    cells : int64 array
+        The cells; −1 for what lies off the map.
+    nodes : list of float64 array
+        Distances for every source whose detection is gradual.
+    """
+
+    number: int
+    space: Space
+    cells: Ints
+    nodes: list[Floats]
+    _shells: list[Shells] = field(default_factory=list, init=False, repr=False)
+
+    @property
+    def shells(self) -> list[Shells]:
+        """The cells cut at the nodes of every such source; kept until let go of."""
+        if not self._shells:
+            self._shells.extend(Shells.of(self.space, self.cells, one) for one in self.nodes)
+        return self._shells
+
+    def let_go(self) -> None:
+        """Free the memory that the shells take."""
+        self._shells.clear()
+
+
+def _groups(
+    outer: Visits, spaces: Sequence[Space], nodes: Sequence[Floats | None]
+) -> list[list[_Version]]:
+    """Take as many maps together as fit into memory, cut at all of the nodes."""
+    gradual = [one for one in nodes if one is not None]
+    per_cell = sum(one.size for one in gradual)
+    groups: list[list[_Version]] = []
+    left = 0
+    for number, space in enumerate(spaces):
+        cells = outer.places.cells(space.skymap)
+        if not groups or left < cells.size * per_cell:
+            groups.append([])
+            left = _SHELLS_AT_ONCE
+        left -= cells.size * per_cell
+        groups[-1].append(_Version(number, space, cells, gradual))
+    return groups
+
+
+@dataclass(frozen=True, eq=False)
+class _Bracket:
+    """What looked at the places of one patchwork, and what it would have shown of each source."""
+
+    visits: Visits
+    seen: list[SeenSource]
+
+    @classmethod
+    def of(
+        cls, visits: Visits, sources: Sequence[Source], event_mjd: float, cosmology: Cosmology
+    ) -> _Bracket:
+        return cls(visits, [SeenSource.of(s, visits, event_mjd, cosmology) for s in sources])
+
+    def numbers(
+        self, versions: Sequence[_Version], nodes: Sequence[Floats | None], wants_rows: bool
+    ) -> dict[_Key, tuple[float, SourceRow | None]]:
+        """Find the detectable probability by map, source and selection.
+
+        And, if wanted, the row, but for this probability and what it leaves. ``nodes``
+        are distances for each source, None where its detection ends abruptly.
+        """
+        maps = [_Under(v, Scene.of(v.space, self.visits), v.shells) for v in versions]
+        gradual = [source for source, one in enumerate(nodes) if one is not None]
+        found: dict[_Key, tuple[float, SourceRow | None]] = {}
+
+        def through(numbered: tuple[int, Selection]) -> None:
+            which, selection = numbered
+            view = self.visits.view(selection)
+            reach = [one.reach_at(view.seen) for one in self.seen]
+            tables = []
+            for of_map in maps:
+                part = _Part(selection, of_map.scene.through(view), of_map.version.space)
+                for source, one in enumerate(self.seen):
+                    row = part.row(one.source.name, reach[source]) if wants_rows else None
+                    value = part.within(reach[source]) if one.is_step else np.nan
+                    found[of_map.version.number, source, which] = value, row
+                tables.append(part.overlay.table(of_map.version.cells))
+            for place, source in enumerate(gradual):
+                curve = DetectionCurve(self.seen[source], versions[0].nodes[place])
+                held = [(table, of_map.shells[place]) for table, of_map in zip(tables, maps)]
+                for of_map, value in zip(maps, curve.probability(view.seen, held)):
+                    key = of_map.version.number, source, which
+                    found[key] = float(value), found[key][1]
+
+        side_by_side(through, enumerate(selections(self.visits.observations)))
+        return found
+
+
+class _Under(NamedTuple):
+    """A map under the places of a bracket, its cells cut for every source seen gradually."""
+
+    version: _Version
+    scene: Scene
+    shells: list[Shells]
 
 
 @dataclass(frozen=True, eq=False)
 class _Part:
-    """One selection's part of a map, and how far one source would have been seen there."""
+    """One selection's part of a map."""
 
-    view: View
+    selection: Selection
     overlay: Overlay
-    curve: DetectionCurve
-    reach_mpc: Floats  # by kind of place
+    space: Space
 
-    def probability(self) -> float:
-        """Probability that the source would have been seen."""
-        if not self.curve.seen.is_step:
-            return self.curve.probability(self.overlay, self.view.seen)
-        within = self.curve.space.within(self.overlay.cell, self.reach_mpc[self.overlay.place])
+    def within(self, reach_mpc: Floats) -> float:
+        """Probability within the reach of each kind of place."""
+        within = self.space.within(self.overlay.cell, reach_mpc[self.overlay.place])
         return float(self.overlay.probability @ within)
 
-    def row(self) -> SourceRow:
-        """Put the numbers together, the bracket being the value alone."""
-        overlay, space, selection = self.overlay, self.curve.space, self.view.selection
-        value, reach = self.probability(), self.reach_mpc
-        covered = float(overlay.probability.sum())
+    def row(self, source: str, reach: Floats) -> SourceRow:
+        """Put the numbers together as if nothing were detectable."""
+        overlay, space, selection = self.overlay, self.space, self.selection
         unknown = ~np.append(space.known, False)[overlay.cell]
         without = float(overlay.probability[unknown].sum())
         solid = overlay.by_place(overlay.solid_angle_sr)
@@ -181,21 +307,23 @@ class _Part:
             selection.telescope,
             selection.band,
             selection.night,
-            self.curve.seen.source.name,
+            source,
             *_reach_numbers(reach, overlay.by_place(overlay.probability)),
-            value,
-            value,
-            value,
-            max(covered - without - value, 0.0),
+            0.0,
+            0.0,
+            0.0,
+            float(overlay.probability.sum()) - without,
             without,
             float(solid @ reach**3) / 3,
             float(solid @ space.comoving_per_sr(reach)),
-            *self._volumes_90(),
+            *self._volumes_90(reach),
         )
 
-    def _volumes_90(self) -> tuple[float | None, float | None, float | None, float | None]:
+    def _volumes_90(
+        self, reach: Floats
+    ) -> tuple[float | None, float | None, float | None, float | None]:
         """Covered part of the 90 % volume, both kinds, and what of it is within reach."""
-        overlay, space, reach = self.overlay, self.curve.space, self.reach_mpc
+        overlay, space = self.overlay, self.space
         if space.credible(0.9) is None:
             return None, None, None, None
         rows, place = (overlay.cell, overlay.solid_angle_sr), overlay.place

@@ -72,6 +72,12 @@ class Places:
         cell, place, solid = sum_pairs(cell, self.place, solid, cells, len(self))
         return Overlay.of(skymap, place, cell - 1, solid, len(self))
 
+    def cells(self, skymap: SkyMap) -> Ints:
+        """Cells of such a map that are covered, rising; −1 first where some lie off the map."""
+        covered = np.zeros(skymap.starts.size + 1, dtype=bool)
+        covered[self.cut.span_of(skymap)[self.cut.interval] + 1] = True
+        return np.flatnonzero(covered) - 1
+
 
 @dataclass(frozen=True, eq=False)
 class Overlay:
@@ -81,18 +87,17 @@ class Overlay:
     ----------
     skymap : SkyMap
         The map.
-    place, cell : int arrays, shape (rows,)
+    place, cell : int32 arrays, shape (rows,)
         Place, and cell of the map (−1 where the map has none), each pair once.
-    probability, solid_angle_sr : float64 arrays, shape (rows,)
-        What the row holds.
+    solid_angle_sr : float64 array, shape (rows,)
+        Size of each row.
     places : int
         Number of places.
     """
 
     skymap: SkyMap
-    place: AnyInts
-    cell: AnyInts
-    probability: Floats
+    place: NDArray[np.int32]
+    cell: NDArray[np.int32]
     solid_angle_sr: Floats
     places: int
 
@@ -100,9 +105,15 @@ class Overlay:
     def of(
         cls, skymap: SkyMap, place: AnyInts, cell: AnyInts, solid_angle_sr: Floats, places: int
     ) -> Overlay:
-        """Find what each row holds."""
-        density = np.append(skymap.density_per_sr, 0.0)
-        return cls(skymap, place, cell, density[cell] * solid_angle_sr, solid_angle_sr, places)
+        """Keep the numbers of places and cells small."""
+        return cls(skymap, place.astype(np.int32), cell.astype(np.int32), solid_angle_sr, places)
+
+    @property
+    def probability(self) -> Floats:
+        """Probability in each row, shape (rows,)."""
+        found = np.append(self.skymap.density_per_sr, 0.0)[self.cell]
+        found *= self.solid_angle_sr
+        return found
 
     def joined(self, number: AnyInts, count: int) -> Overlay:
         """Join places: ``number``, shape (places,), is the new place of each, −1 for none.
@@ -121,16 +132,12 @@ class Overlay:
         """Sum amounts, shape (rows,), over each place."""
         return sum_by(self.place, amount, self.places)
 
-    def cells(self) -> Ints:
-        """Cells of the map that are covered, rising; −1 first where some lie off the map."""
-        covered = np.zeros(self.skymap.starts.size + 1, dtype=bool)
-        covered[self.cell + 1] = True
-        return np.flatnonzero(covered) - 1
-
     def table(self, cells: Ints) -> csr_array:
         """Probability as a sparse table, shape (places, cells), rows being by place."""
         column = np.empty(self.skymap.starts.size + 1, dtype=np.int32)
         column[cells] = np.arange(cells.size)
         offsets = np.searchsorted(self.place, np.arange(self.places + 1))
         shape = self.places, cells.size
-        return csr_array((self.probability, column[self.cell], offsets), shape=shape)
+        return csr_array(
+            (self.probability, column[self.cell], offsets.astype(np.int32)), shape=shape
+        )

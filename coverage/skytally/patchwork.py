@@ -10,6 +10,7 @@ remains per patch is its measure (probability, area), which is summed per set.
 
 from __future__ import annotations
 
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from typing import Protocol
@@ -27,6 +28,8 @@ Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
 
 _SEED = 29
+# Bounds the memory that listing the sets' members takes.
+_MEMBERS_AT_ONCE = 2_000_000
 
 
 @dataclass(frozen=True, eq=False)
@@ -133,7 +136,11 @@ class Patchwork:
         ----------
         chosen : bool array, shape (footprints,)
         """
-        return self.lists.reduce(np.logical_or, chosen)
+        return next(self.covered_by_each([chosen]))
+
+    def covered_by_each(self, choices: Sequence[Bools]) -> Iterator[Bools]:
+        """Tell for one choice of footprints after the other, as `covered_by` does for one."""
+        return self.lists.any_of(choices)
 
 
 class Layer(Protocol):
@@ -200,11 +207,21 @@ class CutPatchwork:
 def _members(table: SpanTable, owner: Ints, position: Ints) -> Lists:
     """Owners that hold each position on the line; positions rise, one for each set."""
     first = np.searchsorted(position, table.starts, side="left")
-    count = np.searchsorted(position, table.stops, side="left") - first
-    some = np.flatnonzero(count)
-    first, count = first[some], count[some]
-    before = np.cumsum(count) - count
-    which = np.arange(count.sum(), dtype=np.int32)
-    which += np.repeat((first - before).astype(np.int32), count)
-    holder = np.repeat(owner[some].astype(np.int32), count)
-    return Lists.of_pairs(which, holder, position.size, table.owners)
+    last = np.searchsorted(position, table.stops, side="left")
+    some = np.flatnonzero(last > first)
+    first, last, owner = first[some], last[some], owner[some].astype(np.int32)
+    # How many begin less how many end at a position is the step in the length of its list.
+    step = np.bincount(first, minlength=position.size + 1)
+    step -= np.bincount(last, minlength=position.size + 1)
+    offsets = np.concatenate(([0], np.cumsum(np.cumsum(step[:-1]))))
+    items = np.empty(offsets[-1], dtype=np.int32)
+    for block in Lists(offsets, items).blocks(_MEMBERS_AT_ONCE):
+        here = np.flatnonzero((first < block.stop) & (last > block.start))
+        begin = np.maximum(first[here], block.start) - block.start
+        count = np.minimum(last[here], block.stop) - block.start - begin
+        row = np.arange(count.sum(), dtype=np.int32)
+        row += np.repeat((begin - (np.cumsum(count) - count)).astype(np.int32), count)
+        holder = np.repeat(owner[here], count)
+        lists = Lists.of_pairs(row, holder, block.stop - block.start, table.owners)
+        items[offsets[block.start] : offsets[block.stop]] = lists.items
+    return Lists(offsets, items)

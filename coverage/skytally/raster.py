@@ -10,9 +10,7 @@ as well.
 
 from __future__ import annotations
 
-import os
 from collections.abc import Sequence
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 
 import numpy as np
@@ -28,6 +26,7 @@ from skytally.pieces import (
 )
 from skytally.shapes import AllOf, AnyOf, Circle, NotIn, Polygon, Shape
 from skytally.spans import LINE_END, LINE_ORDER, Ints, Spans, SpanTable, cell_to_span
+from skytally.workers import side_by_side
 
 __all__ = [
     "Pieces",
@@ -50,8 +49,6 @@ Bools = NDArray[np.bool_]
 _SLACK = 1e-14
 # Pairs of piece and cell looked at together: bounds memory, feeds the cache.
 _PAIRS_AT_ONCE = 200_000
-# Runs of pieces are rasterised side by side: numpy works outside the interpreter's lock.
-_WORKERS = min(os.cpu_count() or 1, 4)
 
 
 def cell_width_rad(order: int) -> float:
@@ -288,15 +285,12 @@ def rasterise(
     runs = _chunks(pieces, order)
     stops = [int(pieces.owner[rows.stop - 1]) + 1 for rows in runs]
 
-    def tables(rows: slice, first: int, stop: int) -> tuple[SpanTable, SpanTable, SpanTable]:
+    def tables(run: tuple[slice, int, int]) -> tuple[SpanTable, SpanTable, SpanTable]:
+        rows, first, stop = run
         part = pieces.take(np.arange(rows.start, rows.stop), pieces.owner[rows] - first)
         return _three_tables(part, stop - first, order, within, deeper)
 
-    if len(runs) < 2:
-        found = list(map(tables, runs, [0], stops))
-    else:
-        with ThreadPoolExecutor(_WORKERS) as pool:
-            found = list(pool.map(tables, runs, [0, *stops], stops))
+    found = side_by_side(tables, zip(runs, [0, *stops], stops))
     none = np.empty(0, dtype=np.int64)
     left = owners - max(stops, default=0)
     found.append((SpanTable(none, none, np.zeros(left + 1, dtype=np.int64)),) * 3)

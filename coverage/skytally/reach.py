@@ -39,7 +39,7 @@ Floats = NDArray[np.float64]
 
 # Times are compared in whole milliseconds; rounding moves a difference by up to one.
 _SLACK_MS = 1
-_VISITS_AT_ONCE = 1_000_000
+_VISITS_AT_ONCE = 300_000
 
 
 @dataclass(frozen=True, eq=False)
@@ -100,36 +100,53 @@ class Visits:
         count = max(len(observations), 1)
         table = exposures_of(patchwork, observations).table(count)[places.place_set]
         clouds, front = np.unique(places.place_cloud, return_inverse=True)
-        cloud = np.repeat(front, np.diff(table.indptr))
-        looks = Lists.of_pairs(cloud, table.indices, clouds.size, count)
-        number = looks.owner.astype(np.int64) * count + looks.items
-        seen = np.searchsorted(number, cloud * count + table.indices).astype(np.int32)
+        lists = Lists.of_table(table)
+        look, seen = _looks(lists, front, count)
         ebv = np.full(clouds.size, np.nan)
         ebv[front] = places.place_ebv
-        exposure = looks.items.astype(np.int64)
-        dust = _coefficients(observations, coefficients)[exposure] * ebv[looks.owner]
+        behind, exposure = np.divmod(look, count)
+        dust = _coefficients(observations, coefficients)[exposure] * ebv[behind]
         stated = observations.extinction[exposure]
         extinction = np.where(np.isfinite(stated), stated, dust)
         limit = observations.depth[exposure] - np.where(np.isfinite(extinction), extinction, 0.0)
-        lists = Lists(table.indptr.astype(np.int64), seen)
-        return cls(observations, places, lists, exposure, limit)
+        return cls(observations, places, Lists(lists.offsets, seen), exposure, limit)
+
+    def view(self, selection: Selection) -> View:
+        """Find what a selection sees of the places."""
+        return View(selection, *self.seen.alike(selection.chosen[self.exposure]))
 
     @cached_property
-    def views(self) -> tuple[View, ...]:
-        """What every selection sees of the places, in the order of the rows."""
-        return tuple(
-            View(selection, *self.seen.alike(selection.chosen[self.exposure]))
-            for selection in selections(self.observations)
-        )
-
-    @property
     def by_band(self) -> tuple[View, ...]:
         """What all exposures see of the places, then what those of each band do."""
         return tuple(
-            view
-            for view in self.views
-            if view.selection.telescope is None and view.selection.night is None
+            self.view(selection)
+            for selection in selections(self.observations)
+            if selection.telescope is None and selection.night is None
         )
+
+
+def _looks(lists: Lists, front: Ints, count: int) -> tuple[Ints, NDArray[np.int32]]:
+    """Tell apart exposures behind cells of the dust, ``front`` being that of each list.
+
+    Returns
+    -------
+    look : int64 array
+        Distinct looks, cell × ``count`` + exposure, rising.
+    seen : int32 array
+        Look of each of the lists' exposures.
+    """
+
+    def of_block(block: slice) -> Ints:
+        part = lists.part(block)
+        return np.asarray(front[block][part.owner] * count + part.items)
+
+    blocks = list(lists.blocks(_VISITS_AT_ONCE))
+    look = np.unique(np.concatenate([front[:0], *(np.unique(of_block(b)) for b in blocks)]))
+    seen = np.empty(lists.items.size, dtype=np.int32)
+    for block in blocks:
+        items = slice(*lists.offsets[[block.start, block.stop]])
+        seen[items] = np.searchsorted(look, of_block(block))
+    return look, seen
 
 
 def _coefficients(observations: Observations, own: Mapping[str, float]) -> Floats:

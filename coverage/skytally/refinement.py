@@ -11,14 +11,13 @@ rule replaces the coarser one, so the value stays inside its bracket.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from skytally.footprints import Footprints, Progress, clip_raster
-from skytally.grouping import sum_by
 from skytally.patchwork import Patchwork
 from skytally.raster import Raster, rasterise, stack_rasters
 from skytally.selection import selections
@@ -94,8 +93,9 @@ def _plan(
     patches = _OpenPatches.of(footprints, maps, done)
     depth = patches.depth.copy()
     left = budget
-    for selection in selections(footprints.observations):
-        rows = patches.undecided_for(footprints.of(selection.chosen))
+    every = selections(footprints.observations)
+    undecided = patches.undecided_for([footprints.of(one.chosen) for one in every])
+    for selection, rows in zip(every, undecided):
         choice = _Choice(patches.worth[:, rows], patches.cells[rows], depth[rows])
         is_whole = (selection.telescope, selection.band, selection.night) == (None, None, None)
         if choice.is_met(target) or not (is_whole or choice.least_looks(_AIM * target) <= left):
@@ -148,15 +148,14 @@ class _OpenPatches:
         patchwork = Patchwork.build(SpanTable.stack((raster.inner, raster.outer)))
         # A footprint's inner region lies in its outer one, so what a set holds of
         # the one less what it holds of the other is what is undecided there.
-        sign = np.repeat([-1.0, 1.0], raster.order.size)[patchwork.members]
-        undecided = sum_by(patchwork.set_of_member, sign, patchwork.sets)
+        sign = np.repeat([-1, 1], raster.order.size)
+        undecided = patchwork.lists.reduce(np.add, sign)
         refined = footprints.pieces_per_footprint > 0
-        rate = np.where(refined, 4.0 ** (raster.order - LINE_ORDER), 0.0)
-        rate = np.tile(rate, 2)[patchwork.members] * sign
+        rate = np.tile(np.where(refined, 4.0 ** (raster.order - LINE_ORDER), 0.0), 2) * sign
         rows = undecided[patchwork.group] > 0
         starts, stops = patchwork.starts[rows], patchwork.stops[rows]
         group = patchwork.group[rows]
-        rate = sum_by(patchwork.set_of_member, rate, patchwork.sets)[group]
+        rate = patchwork.lists.reduce(np.add, rate)[group]
         depth = np.zeros(starts.size, dtype=np.int64)
         for region in done:
             depth += region.contains(starts)
@@ -171,12 +170,13 @@ class _OpenPatches:
             patchwork,
         )
 
-    def undecided_for(self, mine: Bools) -> Ints:
-        """Return the patches that some of these footprints may and none does cover."""
-        none = np.zeros_like(mine)
-        inner = self.patchwork.covered_by(np.concatenate((mine, none)))
-        outer = self.patchwork.covered_by(np.concatenate((none, mine)))
-        return np.flatnonzero((outer & ~inner)[self.group])
+    def undecided_for(self, choices: Sequence[Bools]) -> Iterator[Ints]:
+        """Yield the patches that some footprints may and none does cover, choice after choice."""
+        none = np.zeros_like(choices[0])
+        certain = self.patchwork.covered_by_each([np.concatenate((one, none)) for one in choices])
+        possible = self.patchwork.covered_by_each([np.concatenate((none, one)) for one in choices])
+        for inner, outer in zip(certain, possible):
+            yield np.flatnonzero((outer & ~inner)[self.group])
 
     def region(self, which: Bools) -> Spans:
         """Return the patches named as a region."""

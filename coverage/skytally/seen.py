@@ -2,16 +2,16 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.sparse import csr_array
 
 from skytally.cosmology import Cosmology
 from skytally.grouping import Lists
-from skytally.overlay import Overlay
 from skytally.reach import (
     Visits,
     absolute_magnitudes,
@@ -20,10 +20,10 @@ from skytally.reach import (
     seen_share,
 )
 from skytally.sources import Source
-from skytally.space import Space
+from skytally.space import Space, blocks
 from skytally.spans import Ints
 
-__all__ = ["DetectionCurve", "SeenSource"]
+__all__ = ["DetectionCurve", "SeenSource", "Shells", "detection_nodes"]
 
 Floats = NDArray[np.float64]
 
@@ -35,7 +35,7 @@ _STEP_WIDTHS, _STEP_SPREADS, _LEAST_STEP_MAG = 0.65, 1.2, 0.005
 _END_WIDTHS = 10
 # Where detection ends abruptly the reaches are the nodes, or so many of them.
 _MOST_EDGES = 400
-_NUMBERS_AT_ONCE = 1_000_000
+_NUMBERS_AT_ONCE = 400_000
 
 
 @dataclass(frozen=True, eq=False)
@@ -102,42 +102,73 @@ class SeenSource:
         return found
 
 
+def detection_nodes(seen: SeenSource, spaces: Sequence[Space]) -> Floats:
+    """Distances (Mpc) from where detection is sure to where it has ended, rising.
+
+    Fine enough for the source on every one of the maps.
+    """
+    source = seen.source
+    width = source.detection.width
+    reach = np.unique(seen.reach_mpc[seen.reach_mpc > 0])
+    if reach.size == 0:
+        return reach
+    if width == 0:
+        kept = np.linspace(0, reach.size - 1, min(reach.size, _MOST_EDGES))
+        return np.asarray(reach[kept.astype(int)])
+    spread_mag = 5 / np.log(10) * min(space.least_spread for space in spaces)
+    step = max(min(_STEP_WIDTHS * width, _STEP_SPREADS * spread_mag), _LEAST_STEP_MAG)
+    # With a flat spectrum's K-correction a source dims down to half as fast with distance.
+    margin = _END_WIDTHS * width * (2 if source.k_correction == "flat" else 1)
+    nearest, farthest = zip(*(space.extent_mpc for space in spaces))
+    near, far = 5 * np.log10(min(nearest)), 5 * np.log10(max(farthest))
+    low = min(max(5 * np.log10(reach[0]) - margin, near), far)
+    high = max(min(5 * np.log10(reach[-1]) + margin, far), low)
+    return np.asarray(10 ** (np.linspace(low, high, int((high - low) / step) + 2) / 5))
+
+
+@dataclass(frozen=True, eq=False)
+class Shells:
+    """Chance that something in a map's cells lies between a node and the one before.
+
+    Attributes
+    ----------
+    cells : int64 array, shape (n,)
+        Cells of the map; −1 for what lies off it.
+    chance : float64 array, shape (n, nodes)
+        0 without distance.
+    """
+
+    cells: Ints
+    chance: Floats
+
+    @classmethod
+    def of(cls, space: Space, cells: Ints, nodes: Floats) -> Shells:
+        """Cut the distance distributions of cells at nodes (Mpc)."""
+        chance = np.empty((cells.size, nodes.size))
+        for block in blocks(cells.size):
+            distances = space.distances.take(cells[block])
+            before = np.zeros(distances.m.size)
+            for number, node in enumerate(nodes):
+                within = distances.within(node)
+                chance[block, number] = within - before
+                before = within
+        return cls(cells, chance)
+
+
 @dataclass(frozen=True, eq=False)
 class DetectionCurve:
-    """Chance of seeing a source against its distance, between nodes that suit one map.
+    """Chance of seeing a source against its distance.
 
     Attributes
     ----------
     seen : SeenSource
         The source.
-    space : Space
-        The map.
-    cells : int64 array
-        Its cells that are covered; −1 for what lies off the map.
+    nodes : float64 array
+        As `detection_nodes` chooses them.
     """
 
     seen: SeenSource
-    space: Space
-    cells: Ints
-
-    @cached_property
-    def nodes(self) -> Floats:
-        """Distances (Mpc) from where detection is sure to where it has ended, rising."""
-        width = self.seen.source.detection.width
-        reach = np.unique(self.seen.reach_mpc[self.seen.reach_mpc > 0])
-        if reach.size == 0:
-            return reach
-        if width == 0:
-            kept = np.linspace(0, reach.size - 1, min(reach.size, _MOST_EDGES))
-            return np.asarray(reach[kept.astype(int)])
-        spread_mag = 5 / np.log(10) * self.space.least_spread
-        step = max(min(_STEP_WIDTHS * width, _STEP_SPREADS * spread_mag), _LEAST_STEP_MAG)
-        # With a flat spectrum's K-correction a source dims down to half as fast with distance.
-        margin = _END_WIDTHS * width * (2 if self.seen.source.k_correction == "flat" else 1)
-        near, far = 5 * np.log10(self.space.extent_mpc)
-        low = min(max(5 * np.log10(reach[0]) - margin, near), far)
-        high = max(min(5 * np.log10(reach[-1]) + margin, far), low)
-        return np.asarray(10 ** (np.linspace(low, high, int((high - low) / step) + 2) / 5))
+    nodes: Floats
 
     @cached_property
     def _sampled(self) -> Floats:
@@ -178,24 +209,22 @@ class DetectionCurve:
             return seen.blocks(most)
         return (slice(first, first + most) for first in range(0, len(seen), most))
 
-    @cached_property
-    def _held(self) -> Floats:
-        """Chance that something in a cell lies between a node and the one before.
+    def probability(self, seen: Lists, maps: Sequence[tuple[csr_array, Shells]]) -> Floats:
+        """Probability that the source would have been seen, on each of the maps.
 
-        Shape (cells, nodes).
+        Parameters
+        ----------
+        seen : Lists
+            The looks at each place.
+        maps : sequence of (sparse table, Shells)
+            Of each map what its cells hold at these places, `Overlay.table`, and the cells cut.
         """
-        found = np.zeros((self.cells.size, self.nodes.size + 1))
-        for number, node in enumerate(self.nodes, 1):
-            found[:, number] = self.space.within(self.cells, np.full(self.cells.size, node))
-        return np.diff(found, axis=1)
-
-    def probability(self, overlay: Overlay, seen: Lists) -> float:
-        """Probability that the source would have been seen, the lists being the places."""
-        table = overlay.table(self.cells)
-        return sum(
-            float(np.einsum("pn,pn", self.shares(seen.part(block)), table[block] @ self._held))
-            for block in self.blocks(seen)
-        )
+        found = np.zeros(len(maps))
+        for block in self.blocks(seen):
+            shares = self.shares(seen.part(block))
+            for number, (table, shells) in enumerate(maps):
+                found[number] += np.einsum("pn,pn", shares, table[block] @ shells.chance)
+        return found
 
 
 def _mean_between(middle: Floats, end: Floats) -> Floats:

@@ -219,8 +219,9 @@ class _Part:
         """Look at a coverage through every selection."""
         parts: list[_Part] = []
         sharing: dict[int, Ints] = {}
-        for selection in selections(coverage.observations):
-            chosen = Chosen.of(coverage, selection, settings)
+        choices = selections(coverage.observations)
+        for chosen, exposures in Chosen.every(coverage, choices, settings):
+            selection = chosen.selection
             # Peers have one array in common.
             count = sharing.setdefault(
                 id(selection.peers), np.zeros(coverage.centre.sets, dtype=np.int64)
@@ -232,7 +233,7 @@ class _Part:
                     coverage,
                     chosen,
                     count,
-                    Depth.of(coverage, chosen),
+                    Depth.of(coverage, selection, exposures),
                     tuple(map(mjd_to_iso, ends)),
                     tuple(hours_since(end, settings.event_mjd) for end in ends),
                 )
@@ -342,18 +343,22 @@ def maps_in_force(start_mjd: Floats, maps: Sequence[SkyMap]) -> Ints:
 def tally_as_pointed(coverage: Coverage, maps: Sequence[SkyMap]) -> Iterator[AsPointed]:
     """Judge each selection's exposures by the version in force when they began."""
     force = maps_in_force(coverage.observations.start_mjd, maps)
-    centre = coverage.cuts(maps)[0]
-    worth = [centre.measure(m.probability) for m in maps]
-    for selection in selections(coverage.observations):
-        for version in np.unique(force[selection.chosen]):
-            chosen = selection.chosen & (force == version)
-            covered = coverage.centre.covered_by(coverage.footprints.of(chosen))
-            yield AsPointed(
-                None if version < 0 else maps[version].label,
-                selection.telescope,
-                selection.band,
-                selection.night,
-                int(chosen.sum()),
-                None if version < 0 else float(worth[version][covered].sum()),
-                float(worth[-1][covered].sum()),
-            )
+    cut, centre = coverage.cuts(maps)[0], coverage.centre
+    worth = [cut.measure(m.probability) for m in maps]
+    parts = [
+        (selection, version, selection.chosen & (force == version))
+        for selection in selections(coverage.observations)
+        for version in np.unique(force[selection.chosen])
+    ]
+    footprints = [coverage.footprints.of(chosen) for _, _, chosen in parts]
+    for part, covered in zip(parts, centre.covered_by_each(footprints)):
+        selection, version, chosen = part
+        yield AsPointed(
+            None if version < 0 else maps[version].label,
+            selection.telescope,
+            selection.band,
+            selection.night,
+            int(chosen.sum()),
+            None if version < 0 else float(worth[version][covered].sum()),
+            float(worth[-1][covered].sum()),
+        )
