@@ -5,7 +5,7 @@ from itertools import product
 import numpy as np
 import pytest
 from campaign_builder import campaign, log_table, telescope
-from skytally import raster
+from skytally import raster, workers
 from skytally.cameras import CircleCamera, MosaicCamera, lay_camera
 from skytally.footprints import Footprints, lay_footprints
 from skytally.raster import rasterise
@@ -69,7 +69,7 @@ def counted_looks(monkeypatch: pytest.MonkeyPatch, footprints: Footprints) -> li
         return classify(pieces, piece, order, cell)
 
     monkeypatch.setattr(raster, "_classify", counting)
-    monkeypatch.setattr(raster, "_WORKERS", 1)
+    monkeypatch.setattr(workers, "_WORKERS", 1)
     return looks
 
 
