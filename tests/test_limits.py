@@ -244,8 +244,8 @@ def test_what_is_infinitely_bright_is_seen_wherever_there_is_a_distance_and_a_li
     assert row.probability_without_distance == pytest.approx((4 + 9) / 300)
     # Without a limit an exposure covers, but shows nothing.
     row = tallied(regions, skymap, [source], depth=np.array([20.0, np.nan]))[0]
-    assert row.probability == pytest.approx(share_of(cell, range(8)), rel=1e-9)
-    assert row.probability_beyond == pytest.approx(share_of(cell, range(8, 12)), rel=1e-9)
+    assert row.probability == pytest.approx(share_of(cell, range(8)), rel=precision)
+    assert row.probability_beyond == pytest.approx(share_of(cell, range(8, 12)), rel=precision)
 
 
 @pytest.mark.parametrize("name", SOURCES)
