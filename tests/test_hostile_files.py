@@ -156,6 +156,8 @@ TABLE = {
         ({"PCOUNT": -(10**9)}, "PCOUNT"),
         ({"GCOUNT": 10**17, "NAXIS2": 10**9}, "bytes of data"),
         ({"BITPIX": 7}, "BITPIX"),
+        ({"TUNIT1": "10**99999999 sr-1"}, "no unit that can be meant"),
+        ({"TUNIT1": "((10**999)**999)**999"}, "no unit that can be meant"),
     ],
 )
 @pytest.mark.parametrize("name", ["log", "map", "moc", "dust"])
@@ -284,6 +286,12 @@ def test_an_ecsv_header_is_plain_data(header: str, words: str, tmp_path: Path) -
     with pytest.raises(LogError) as caught:
         _log(tmp_path / "a.ecsv", ECSV.format(header))
     assert words in str(caught.value)
+
+
+def test_a_power_in_a_unit_of_a_votable_is_not_worked_out(tmp_path: Path) -> None:
+    field = '<FIELD name="ra" datatype="double" unit="10**99999999"/>'
+    with pytest.raises(LogError, match="states the unit"):
+        _log(tmp_path / "a.vot", f"<VOTABLE><RESOURCE><TABLE>{field}</TABLE></RESOURCE></VOTABLE>")
 
 
 @pytest.mark.parametrize("attribute", ['nrows="999999999999"', 'nrows="6000000"'])

@@ -17,7 +17,7 @@ from astropy.io import fits
 
 from skytally.errors import InputError
 
-__all__ = ["check_shared_bytes", "walk_headers"]
+__all__ = ["check_shared_bytes", "is_plausible_unit", "walk_headers"]
 
 HDU_LIMIT = 2_000
 HEADER_LIMIT_BYTES = 32 << 20
@@ -27,6 +27,8 @@ _CARD, _BLOCK = 80, 2880
 _STATED = re.compile(
     rb"(?:HIERARCH +)?(BITPIX|NAXIS[0-9]{0,3}|PCOUNT|GCOUNT|TFIELDS) *=(.*)", re.IGNORECASE
 )
+_UNIT = re.compile(rb"(?:HIERARCH +)?([TCB]UNIT[0-9]{0,3}[A-Z]?) *=(.*)", re.IGNORECASE)
+_LONG_NUMBER = re.compile(r"(?<![0-9.])[0-9]{4}")
 _WHOLE_NUMBER = re.compile(rb" *([+-]?[0-9]{1,18}) *(?:/.*)?")
 _LIMITS = {"NAXIS": AXES_LIMIT, "TFIELDS": COLUMN_LIMIT}
 _VARIABLE = re.compile(r"[01]?[PQ]([A-Z])")
@@ -34,6 +36,11 @@ _ITEM_BYTES = {"I": 2, "J": 4, "K": 8, "E": 4, "D": 8, "C": 8, "M": 16}
 _PIXEL_BITS = frozenset({8, 16, 32, 64, -32, -64})
 
 Fault = Callable[[str], InputError]
+
+
+def is_plausible_unit(text: str) -> bool:
+    """Tell whether a unit is safe to be read: a library works powers such as 10**99999999 out."""
+    return len(text) <= 80 and text.count("(") <= 1 and _LONG_NUMBER.search(text) is None
 
 
 def walk_headers(
@@ -105,10 +112,12 @@ def _data_size(header: bytes, fault: Fault) -> int:
     """Bytes of the data that follow a header, without padding."""
     stated: dict[str, int] = {}
     for at in range(0, len(header), _CARD):
-        match = _STATED.match(header[at : at + _CARD])
+        card = header[at : at + _CARD]
+        match = _STATED.match(card)
         if match is None:
-            if header[at : at + 4] == b"END ":
+            if card.startswith(b"END "):
                 break
+            _check_unit(card, fault)
             continue
         key = match[1].decode().upper()
         number = _WHOLE_NUMBER.fullmatch(match[2])
@@ -130,6 +139,15 @@ def _data_size(header: bytes, fault: Fault) -> int:
     if size >= 1 << 60:
         raise fault(f"a FITS header states {size:.3g} bytes of data")
     return size
+
+
+def _check_unit(card: bytes, fault: Fault) -> None:
+    if (match := _UNIT.match(card)) is None:
+        return
+    key, text = match[1].decode(), match[2].partition(b"'")[2].rpartition(b"'")[0].decode("latin-1")
+    # A value that goes on in the next card ends in an ampersand.
+    if not is_plausible_unit(text) or text.rstrip().endswith("&"):
+        raise fault(f"{key} of a FITS header is {text[:40]!r}, no unit that can be meant")
 
 
 def _check_number(key: str, value: int, fault: Fault) -> None:

@@ -10,6 +10,7 @@ from pathlib import Path
 from xml.parsers import expat
 
 from skytally.errors import InputError
+from skytally.fits_layout import is_plausible_unit
 
 __all__ = ["ELEMENT_LIMIT", "check_votable"]
 
@@ -73,6 +74,9 @@ class _Walk:
             self._size("nrows", attributes.get("nrows", ""), ROW_LIMIT)
         elif bare in {"FIELD", "PARAM"}:
             self._size("arraysize", attributes.get("arraysize", ""), _ITEMS_LIMIT)
+            unit = attributes.get("unit", "")
+            if not is_plausible_unit(unit):
+                raise self._refuse(f"states the unit {unit[:40]!r}", "Correct the unit.")
 
     def _stream(self, attributes: dict[str, str]) -> None:
         for key, value in attributes.items():
