@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Sequence
+from itertools import chain
 from typing import TypedDict
 
 import numpy as np
@@ -54,6 +55,7 @@ from skytally.space import Space
 from skytally.spans import DEG2_PER_SR, Spans
 from skytally.tally import TallyRow, maps_in_force, tally_as_pointed, tally_maps
 from skytally.times import hours_since, mjd_to_iso
+from skytally.workers import side_by_side
 
 __all__ = ["account", "lay_coverage"]
 
@@ -197,7 +199,7 @@ def _third_dimension(
     reaches = [(one.source.name, one.reach_at(centre.seen)) for one in seen]
     return _Depths(
         source_rows=tuple(source_rows),
-        exclusions=tuple(curve for scene in scenes for curve in exclusion_curves(scene)),
+        exclusions=tuple(chain.from_iterable(side_by_side(exclusion_curves, scenes))),
         fading_planes=tuple(fading_planes(centre, scenes, campaign.event_mjd)),
         absolute_limits=tuple(limit for space in known for limit in absolute_limits(rows, space)),
         distance_profiles=tuple(distance_profile(scene, reaches) for scene in scenes),

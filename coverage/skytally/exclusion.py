@@ -20,6 +20,7 @@ from skytally.reach import Visits
 from skytally.space import Space, blocks
 from skytally.spans import Ints
 from skytally.tally import TallyRow
+from skytally.workers import side_by_side
 
 __all__ = [
     "AbsoluteLimit",
@@ -230,11 +231,12 @@ def fading_planes(visits: Visits, scenes: Sequence[Scene], event_mjd: float) -> 
     o = visits.observations
     days = ((o.start_mjd + o.end_mjd) / 2 - event_mjd)[visits.exposure]
     everywhere = np.arange(len(visits.seen))
-    planes = np.empty((len(scenes), RATES.size, PEAKS.size))
-    for row, rate in enumerate(RATES):
+
+    def of_rate(rate: float) -> list[Floats]:
         limits = _Limits.of(visits.seen, visits.limit - rate * days)
-        for plane, scene in zip(planes, scenes):
-            plane[row] = _Deepest.of(scene, limits, everywhere).detectable(PEAKS)
+        return [_Deepest.of(scene, limits, everywhere).detectable(PEAKS) for scene in scenes]
+
+    planes = zip(*side_by_side(of_rate, map(float, RATES)))
     return [
         FadingPlane(
             scene.space.skymap.label,

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.sparse import coo_array, csr_array
 
-__all__ = ["AnyInts", "Lists", "expand_ranges", "sum_by", "sum_pairs", "tell_apart"]
+__all__ = ["AnyInts", "Lists", "distinct", "expand_ranges", "sum_by", "sum_pairs", "tell_apart"]
 
 Ints = NDArray[np.int64]
 # Tables that grow with exposures times sky keep their numbers in 32 bits.
@@ -59,6 +59,13 @@ def expand_ranges(first: Ints, count: Ints) -> tuple[Ints, Ints]:
     row = np.repeat(np.arange(count.size, dtype=np.int64), count)
     before = np.cumsum(count) - count
     return row, np.arange(row.size, dtype=np.int64) + np.repeat(first - before, count)
+
+
+def distinct(value: Ints) -> Ints:
+    """Sort integers, shape (n,), and drop repetitions: many times faster than ``np.unique``."""
+    ranked = np.sort(value)
+    is_new = np.append(np.ones(min(value.size, 1), bool), ranked[1:] != ranked[:-1])
+    return np.asarray(ranked[is_new])
 
 
 def tell_apart(key: NDArray[np.uint64]) -> tuple[Ints, Ints]:
@@ -199,14 +206,15 @@ class Lists:
         return self._filtered(some[first], chosen), number
 
     def _filtered(self, rows: Ints, chosen: Bools) -> Lists:
-        """Take some of the lists and of them the chosen items."""
-        kept = self.reduce(np.add, chosen.astype(np.int64))[rows]
-        offsets = np.concatenate(([0], np.cumsum(kept)))
-        items = np.empty(offsets[-1], dtype=np.int32)
-        table, length = self.table(chosen.size), np.diff(self.offsets)[rows]
-        whole = Lists(np.concatenate(([0], np.cumsum(length))), items)
-        for block in whole.blocks(_ITEMS_AT_ONCE):
-            # Row numbers of 64 bits would make those of the columns as wide.
-            found = table[rows[block].astype(np.int32)].indices
-            items[offsets[block.start] : offsets[block.stop]] = found[chosen[found]]
-        return Lists(offsets, items)
+        """Take some of the lists, rows rising, and of them the chosen items; none is empty then."""
+        wanted = np.zeros(len(self), dtype=bool)
+        wanted[rows] = True
+        items, counts = [self.items[:0]], [self.offsets[:0]]
+        for block in self.blocks(_ITEMS_AT_ONCE):
+            part = self.part(block)
+            keep = chosen[part.items]
+            keep &= np.repeat(wanted[block], np.diff(part.offsets))
+            items.append(part.items[keep])
+            counts.append(np.add.reduceat(keep, part.offsets[:-1], dtype=np.int64)[wanted[block]])
+        offsets = np.concatenate(([0], np.cumsum(np.concatenate(counts))))
+        return Lists(offsets, np.concatenate(items))

@@ -263,7 +263,8 @@ class _Bracket:
                     row = part.row(one.source.name, reach[source]) if wants_rows else None
                     value = part.within(reach[source]) if one.is_step else np.nan
                     found[of_map.version.number, source, which] = value, row
-                tables.append(part.overlay.table(of_map.version.cells))
+                if gradual:
+                    tables.append(part.overlay.table(of_map.version.cells))
             for place, source in enumerate(gradual):
                 curve = DetectionCurve(self.seen[source], versions[0].nodes[place])
                 held = [(table, of_map.shells[place]) for table, of_map in zip(tables, maps)]

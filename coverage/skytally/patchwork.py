@@ -18,7 +18,7 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from skytally.grouping import Lists, sum_by, sum_pairs, tell_apart
+from skytally.grouping import Lists, distinct, sum_by, sum_pairs, tell_apart
 from skytally.skymap import Measure
 from skytally.spans import UNIT_SR, Ints, SpanTable
 
@@ -157,7 +157,7 @@ class Layer(Protocol):
 
 def edges_of(*layers: Layer) -> Ints:
     """Positions where any of the layers may change, sorted and distinct."""
-    return np.unique(np.concatenate([a for one in layers for a in (one.starts, one.stops)]))
+    return distinct(np.concatenate([a for one in layers for a in (one.starts, one.stops)]))
 
 
 @dataclass(frozen=True, eq=False)

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from skytally.cosmology import Cosmology
 from skytally.covered import exposures_of
-from skytally.grouping import Lists
+from skytally.grouping import Lists, distinct
 from skytally.magnitudes import extinction_coefficient, reach_mpc
 from skytally.observations import SECONDS_PER_DAY, Observations
 from skytally.overlay import Places
@@ -113,6 +113,9 @@ class Visits:
 
     def view(self, selection: Selection) -> View:
         """Find what a selection sees of the places."""
+        if selection.chosen.all():
+            # No two places have been looked at alike.
+            return View(selection, self.seen, np.arange(len(self.seen), dtype=np.int32))
         return View(selection, *self.seen.alike(selection.chosen[self.exposure]))
 
     @cached_property
@@ -141,7 +144,7 @@ def _looks(lists: Lists, front: Ints, count: int) -> tuple[Ints, NDArray[np.int3
         return np.asarray(front[block][part.owner] * count + part.items)
 
     blocks = list(lists.blocks(_VISITS_AT_ONCE))
-    look = np.unique(np.concatenate([front[:0], *(np.unique(of_block(b)) for b in blocks)]))
+    look = distinct(np.concatenate([front[:0], *(distinct(of_block(b)) for b in blocks)]))
     seen = np.empty(lists.items.size, dtype=np.int32)
     for block in blocks:
         items = slice(*lists.offsets[[block.start, block.stop]])

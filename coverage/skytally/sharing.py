@@ -110,7 +110,9 @@ class _Holders:
     def of(cls, patchwork: Patchwork, telescope: Ints, telescopes: int) -> _Holders:
         """Look at a patchwork by the telescope, shape (footprints,), of each footprint."""
         held = np.zeros((patchwork.sets, telescopes), dtype=bool)
-        held[patchwork.set_of_member, telescope[patchwork.members]] = True
+        whose = [telescope == index for index in range(telescopes)]
+        for index, covered in enumerate(patchwork.covered_by_each(whose)):
+            held[:, index] = covered
         packed, which = np.unique(np.packbits(held, axis=1), axis=0, return_inverse=True)
         held = np.unpackbits(packed, axis=1, count=telescopes).astype(bool)
         return cls(held, which.reshape(-1).astype(np.int64))
@@ -142,15 +144,16 @@ class _Arrivals:
     @classmethod
     def of(cls, coverage: Coverage) -> _Arrivals:
         o = coverage.observations
-        group, exposure = coverage.visits
-        telescope, end = o.telescope[exposure], o.end_mjd[exposure]
-        first = np.full(coverage.centre.sets, np.inf)
-        np.minimum.at(first, group, end)
-        first_end = np.full(len(o.telescopes), np.inf)
-        np.minimum.at(first_end, telescope, end)
-        early = end <= first[group] + _MOMENT_DAYS
-        pair = np.unique(group[early] * len(o.telescopes) + telescope[early])
-        group, telescope = np.divmod(pair, len(o.telescopes))
+        end = np.stack(
+            [
+                coverage.exposures.reduce(np.minimum, np.where(o.telescope == t, o.end_mjd, np.inf))
+                for t in range(len(o.telescopes))
+            ],
+            axis=1,
+        )
+        first = end.min(axis=1, initial=np.inf)
+        group, telescope = np.nonzero(end <= first[:, None] + _MOMENT_DAYS)
+        first_end = end.min(axis=0, initial=np.inf)
         together = np.bincount(group, minlength=coverage.centre.sets)
         return cls(group, telescope, 1.0 / together[group], first_end)
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,6 +17,7 @@ from skytally.skymap import Measure, SkyMap
 from skytally.space import Space
 from skytally.spans import DEG2_PER_SR, Ints
 from skytally.times import hours_since, mjd_to_iso
+from skytally.workers import side_by_side
 
 __all__ = [
     "AsPointed",
@@ -183,9 +185,10 @@ def tally_maps(
         sets = SetWorth.of(coverage, skymap, space)
         if witness is not None:
             witness(sets)
-        for part in parts:
-            rows.append(part.row(skymap.label, sets))
-            timelines.append(part.timeline(skymap.label, sets))
+        numbers = partial(_Part.numbers, label=skymap.label, sets=sets)
+        for row, timeline in side_by_side(numbers, parts):
+            rows.append(row)
+            timelines.append(timeline)
     return rows, timelines
 
 
@@ -239,6 +242,10 @@ class _Part:
                 )
             )
         return parts
+
+    def numbers(self, label: str, sets: SetWorth) -> tuple[TallyRow, Timeline]:
+        """Return the selection's row and its timeline on a map."""
+        return self.row(label, sets), self.timeline(label, sets)
 
     def row(self, label: str, sets: SetWorth) -> TallyRow:
         """Sum what a map gives each set over the sets that the selection covers."""
