@@ -14,9 +14,9 @@ SOURCE = Path(skytally.__file__).parent
 # Bottom to top. A module may import modules of its own layer or below, no two one another.
 TABLE = (
     "errors findings fits_layout local_files spans moc distance_integrals distance magnitudes "
-    "cosmology times grouping workers",
-    "shapes pieces raster working_order skymap cameras observations volume sources dust space "
-    "visibility",
+    "cosmology times grouping workers code_hash cache",
+    "shapes pieces raster kept_raster working_order skymap cameras observations volume sources "
+    "dust space visibility",
     "healpix_table skymap_circle skymap_frames skymap_table skymap_io dust_io ecsv_header "
     "votable_check table_io log_cells log_columns log_regions log_io image_io region_text "
     "camera_io light_curve_io campaign_faults campaign_model campaign_data campaign_sources "

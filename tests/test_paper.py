@@ -247,7 +247,7 @@ WAITING = """
         time.sleep(60)
 
     outputs.sketch_figures = wait
-    cli._tally = lambda campaign, rest: small_results()
+    cli._tally = lambda campaign, no_cache, rest: small_results()
     sys.argv = ["skytally", "report", "night.toml", "--out", sys.argv[1]]
     cli.main()
 """

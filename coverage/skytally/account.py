@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from skytally import __version__
 from skytally.audit import audit
+from skytally.cache import Cache
 from skytally.campaign import LoadedCampaign, Site, Telescope
 from skytally.claims import check_claims
 from skytally.cosmology import Cosmology
@@ -73,14 +74,21 @@ class _Depths(TypedDict):
     depth_histograms: tuple[DepthHistogram, ...]
 
 
-def lay_coverage(campaign: LoadedCampaign, progress: Progress | None = None) -> Coverage:
+def lay_coverage(
+    campaign: LoadedCampaign, progress: Progress | None = None, cache: Cache | None = None
+) -> Coverage:
     """Lay every footprint of a campaign on the sky and cut the patchwork.
 
-    ``progress`` is as for `account`, and is told of the first six tenths.
+    ``progress`` is as for `account`, and is told of the first six tenths. Rasterised
+    footprints are taken from the ``cache``, if one is given, and kept there.
     """
-    footprints = lay_footprints(campaign, _part(progress, 0.0, 0.4))
+    footprints = lay_footprints(campaign, _part(progress, 0.0, 0.4), cache=cache)
     footprints = refine_footprints(
-        footprints, campaign.maps, campaign.settings.bracket, _part(progress, 0.4, 0.6)
+        footprints,
+        campaign.maps,
+        campaign.settings.bracket,
+        _part(progress, 0.4, 0.6),
+        cache=cache,
     )
     extinction = field_extinction(footprints, campaign.dust, campaign.extinction_coefficients)
     return Coverage.build(footprints, extinction)

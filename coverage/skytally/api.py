@@ -15,6 +15,7 @@ from astropy_healpix import lonlat_to_healpix
 from mocpy import MOC
 
 from skytally.account import account, lay_coverage
+from skytally.cache import Cache
 from skytally.campaign import LoadedCampaign, load_campaign
 from skytally.covered import Coverage
 from skytally.errors import UsageError
@@ -36,21 +37,26 @@ class Campaign:
     ----------
     loaded : LoadedCampaign
         What `skytally.campaign.load_campaign` returns; `Campaign.read` does both.
+    cache : Cache, optional
+        Where rasterised footprints are kept between runs, such as
+        ``Cache(cache_folder())`` of `skytally.cache`, which is the command line's;
+        nothing is kept without one.
     """
 
-    def __init__(self, loaded: LoadedCampaign) -> None:
+    def __init__(self, loaded: LoadedCampaign, cache: Cache | None = None) -> None:
         self.loaded = loaded
+        self.cache = cache
 
     @classmethod
-    def read(cls, path: str | Path) -> Campaign:
-        """Read a campaign file and all that it names.
+    def read(cls, path: str | Path, cache: Cache | None = None) -> Campaign:
+        """Read a campaign file and all that it names; ``cache`` as above.
 
         Raises
         ------
         InputError
             If the file, or one that it names, cannot be used.
         """
-        return cls(load_campaign(Path(path)))
+        return cls(load_campaign(Path(path)), cache)
 
     def __repr__(self) -> str:
         return (
@@ -88,14 +94,14 @@ class Campaign:
         """
         if progress is None:
             return self._results
-        coverage = lay_coverage(self.loaded, progress)
+        coverage = lay_coverage(self.loaded, progress, self.cache)
         results = account(self.loaded, progress, coverage)
         self.__dict__.update(_coverage=coverage, _results=results)
         return results
 
     @cached_property
     def _coverage(self) -> Coverage:
-        return lay_coverage(self.loaded)
+        return lay_coverage(self.loaded, cache=self.cache)
 
     @cached_property
     def _results(self) -> Results:

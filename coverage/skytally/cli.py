@@ -26,6 +26,7 @@ from skytally import __version__
 from skytally.errors import OutputError, SkytallyError, UsageError
 
 if TYPE_CHECKING:
+    from skytally.cache import Cache
     from skytally.campaign import LoadedCampaign
     from skytally.footprints import Progress
     from skytally.results import Results
@@ -86,6 +87,10 @@ CampaignPath = Annotated[
 ]
 OutDir = Annotated[
     Path, typer.Option("--out", "-o", metavar="DIR", help="Folder to write to.", show_default=False)
+]
+NoCache = Annotated[
+    bool,
+    typer.Option("--no-cache", help="Lay every footprint anew, and keep nothing for the next run."),
 ]
 MapVersion = Annotated[
     str | None,
@@ -155,6 +160,7 @@ def report(
             help="Folder whose report.html.j2 overrides blocks of the report.",
         ),
     ] = None,
+    no_cache: NoCache = False,
 ) -> None:
     """Write the report and its data files (the main job)."""
     from skytally.house_style import HouseStyle
@@ -163,7 +169,7 @@ def report(
     from skytally.terminal import render_answer
 
     style = None if templates is None else HouseStyle.read(templates)
-    results = _tally(campaign, "report.html lists them all")
+    results = _tally(campaign, no_cache, "report.html lists them all")
     with _progress("Writing") as progress:
         written = write_outputs(results, out, progress, style, campaign)
     _print(to_json(results) if json else render_answer(results, sys.stdout))
@@ -176,12 +182,13 @@ def tally(
     campaign: CampaignPath,
     map: MapVersion = None,
     json: Annotated[bool, typer.Option("--json", help="Print JSON instead of tables.")] = False,
+    no_cache: NoCache = False,
 ) -> None:
     """Show the numbers on the terminal."""
     from skytally.serialise import select_map, to_json
     from skytally.terminal import render_tally
 
-    results = _tally(campaign, "tally --json lists them all")
+    results = _tally(campaign, no_cache, "tally --json lists them all")
     if map is not None:
         results = select_map(results, map)
     _print(to_json(results) if json else render_tally(results, sys.stdout))
@@ -189,17 +196,19 @@ def tally(
 
 
 @app.command("regions")
-def regions(campaign: CampaignPath, out: OutDir, map: MapVersion = None) -> None:
+def regions(
+    campaign: CampaignPath, out: OutDir, map: MapVersion = None, no_cache: NoCache = False
+) -> None:
     """Write what each telescope covered as MOC files, and what is left of a map."""
     from skytally.account import account, lay_coverage
     from skytally.leftover import left_overs
     from skytally.outputs import left_over_files, write_regions
     from skytally.terminal import render_left_over
 
-    with _progress("Reading") as progress:
+    with _cache(no_cache) as cache, _progress("Reading") as progress:
         loaded = _load(campaign)
         skymap = loaded.map(map)
-        coverage = lay_coverage(loaded, progress)
+        coverage = lay_coverage(loaded, progress, cache)
         results = account(loaded, progress, coverage)
         left = left_overs(loaded, coverage, skymap)
     _report_faults(loaded, results, "tally --json lists them all")
@@ -214,11 +223,12 @@ def regions(campaign: CampaignPath, out: OutDir, map: MapVersion = None) -> None
 def check(
     campaign: CampaignPath,
     json: Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")] = False,
+    no_cache: NoCache = False,
 ) -> None:
     """Say what in the logs, the maps and the stated numbers does not hold."""
     from skytally.check_text import render_check, to_check_json
 
-    _, results = _account(campaign)
+    _, results = _account(campaign, no_cache)
     _print(to_check_json(results) if json else render_check(results, sys.stdout))
     if any(finding.severity == "error" for finding in results.findings):
         raise typer.Exit(EXIT_ERRORS_FOUND)
@@ -287,6 +297,7 @@ def where(
         ),
     ] = None,
     json: Annotated[bool, typer.Option("--json", help="Print JSON instead of text.")] = False,
+    no_cache: NoCache = False,
 ) -> None:
     """Say which exposures saw a position, how deep, and how probable it is."""
     from skytally.cosmology import Cosmology
@@ -301,7 +312,7 @@ def where(
             "expected one position, or a table of them",
             remedy="Give RA and DEC, or --positions FILE.",
         )
-    with _progress("Reading") as progress:
+    with _cache(no_cache) as cache, _progress("Reading") as progress:
         loaded = _load(campaign)
         if positions is not None:
             cosmology = Cosmology.named(loaded.settings.cosmology)
@@ -312,23 +323,37 @@ def where(
             asked = parse_position(ra, dec)
         ranking = choose_ranking(loaded, asked, weight, completeness)
         order = INDEX_ORDER if ranking is None else None
-        answer = look_up(loaded, lay_footprints(loaded, progress, order), asked, ranking)
+        footprints = lay_footprints(loaded, progress, order, cache)
+        answer = look_up(loaded, footprints, asked, ranking)
     _print(where_to_json(answer) if json else render_where(answer, sys.stdout))
 
 
-def _tally(campaign: str, rest: str) -> Results:
+def _tally(campaign: str, no_cache: bool, rest: str) -> Results:
     """Load a campaign and account for it, with progress and with the faults of its rows."""
-    loaded, results = _account(campaign)
+    loaded, results = _account(campaign, no_cache)
     _report_faults(loaded, results, rest)
     return results
 
 
-def _account(campaign: str) -> tuple[LoadedCampaign, Results]:
-    from skytally.account import account
+def _account(campaign: str, no_cache: bool) -> tuple[LoadedCampaign, Results]:
+    from skytally.account import account, lay_coverage
 
-    with _progress("Reading") as progress:
+    with _cache(no_cache) as cache, _progress("Reading") as progress:
         loaded = _load(campaign)
-        return loaded, account(loaded, progress)
+        return loaded, account(loaded, progress, lay_coverage(loaded, progress, cache))
+
+
+@contextmanager
+def _cache(no_cache: bool) -> Iterator[Cache | None]:
+    """Offer the user's cache, and say afterwards what was wrong with it."""
+    from skytally.cache import Cache, cache_folder
+
+    cache = None if no_cache else Cache(cache_folder())
+    try:
+        yield cache
+    finally:
+        for note in () if cache is None else cache.notes:
+            _say(f"Note: {note}")
 
 
 def _load(campaign: str) -> LoadedCampaign:

@@ -9,8 +9,10 @@ from datetime import date
 import numpy as np
 from numpy.typing import NDArray
 
+from skytally.cache import Cache
 from skytally.cameras import CircleCamera, lay_camera, lay_outlines
 from skytally.campaign import LoadedCampaign, Telescope
+from skytally.kept_raster import keep_raster
 from skytally.magnitudes import change_significance, convert_system
 from skytally.observations import SECONDS_PER_DAY, Observations, night_of
 from skytally.raster import (
@@ -32,6 +34,9 @@ Progress = Callable[[str, float], None]
 
 # Exposures whose log names no band are a band of their own, so that sums hold.
 UNSTATED_BAND = "unstated"
+
+# Stars in a mask are small.
+_MASK_ORDER = 16
 
 _MJD_ZERO = date(1858, 11, 17).toordinal()
 
@@ -89,14 +94,17 @@ class _Laid:
 
 
 def lay_footprints(
-    campaign: LoadedCampaign, progress: Progress | None = None, order: int | None = None
+    campaign: LoadedCampaign,
+    progress: Progress | None = None,
+    order: int | None = None,
+    cache: Cache | None = None,
 ) -> Footprints:
     """Gather the exposures, lay every distinct footprint, and rasterise it.
 
     The working order of each footprint is chosen so that its own area and that
     of every band and night of its telescope keep to a stated error, unless one
     ``order`` for all is given: then the raster is an index to the footprints
-    and no measure of them.
+    and no measure of them. Rasters are kept in a ``cache``, telescope by telescope.
     """
     bands, nights = _names(campaign)
     rasters, pieces, per_footprint, owners = [], [], [], []
@@ -108,8 +116,8 @@ def lay_footprints(
         laid = _lay(telescope)
         band = np.array([bands.index(b or UNSTATED_BAND) for b in telescope.log.band], dtype=int)
         night = _night(telescope)
-        clip = _clips(telescope)
-        rasters.append(clip_raster(_rasterise(laid, band, night, order), clip))
+        clip = _clips(telescope, cache)
+        rasters.append(clip_raster(_rasterise(laid, band, night, order, cache), clip))
         clips.append(clip)
         everything = np.arange(len(laid.pieces))
         pieces.append(laid.pieces.take(everything, laid.pieces.owner + first))
@@ -290,9 +298,21 @@ def _outline(shape: Circle | Polygon) -> Floats:
     return ring
 
 
-def _rasterise(laid: _Laid, band: Ints, night: Ints, order: int | None) -> Raster:
+def _rasterise(
+    laid: _Laid, band: Ints, night: Ints, order: int | None, cache: Cache | None
+) -> Raster:
     """Rasterise one telescope's footprints, each at its own working order or all at one."""
     rows = [laid.footprint[kind == one] for kind in (band, night) for one in np.unique(kind)]
+    return keep_raster(
+        cache,
+        "laid",
+        lambda: (laid.pieces, list(laid.other.items()), laid.count, rows, order),
+        lambda: _rasterise_rows(laid, rows, order),
+    )
+
+
+def _rasterise_rows(laid: _Laid, rows: Sequence[Ints], order: int | None) -> Raster:
+    """Rasterise footprints, so that those of each row keep to the error of their total."""
     simple = np.unique(laid.pieces.owner)
     pieces = laid.pieces.take(
         np.arange(len(laid.pieces)), np.searchsorted(simple, laid.pieces.owner)
@@ -316,11 +336,15 @@ def _rasterise(laid: _Laid, band: Ints, night: Ints, order: int | None) -> Raste
     return stack_rasters(parts).take(np.argsort(np.concatenate(owners)))
 
 
-def _clips(telescope: Telescope) -> tuple[Spans | None, Raster | None]:
+def _clips(telescope: Telescope, cache: Cache | None) -> tuple[Spans | None, Raster | None]:
     """Where a telescope is searchable, and its mask as one raster."""
     if not telescope.mask:
         return telescope.searchable, None
-    return telescope.searchable, rasterise_shape(AnyOf(tuple(telescope.mask)), 16)
+    mask = AnyOf(tuple(telescope.mask))
+    raster = keep_raster(
+        cache, "mask", lambda: (mask, _MASK_ORDER), lambda: rasterise_shape(mask, _MASK_ORDER)
+    )
+    return telescope.searchable, raster
 
 
 def clip_raster(raster: Raster, clip: tuple[Spans | None, Raster | None]) -> Raster:

@@ -7,7 +7,6 @@ is believed that its own fingerprint contradicts.
 
 from __future__ import annotations
 
-import hashlib
 import importlib.metadata
 import json
 import platform
@@ -20,6 +19,7 @@ from typing import Annotated, Any, Literal
 from pydantic import BaseModel, ConfigDict, Field, ValidationError
 
 from skytally import __version__
+from skytally.code_hash import code_sha256
 from skytally.errors import InputError
 from skytally.local_files import read_local_file
 from skytally.results import Results
@@ -34,7 +34,7 @@ MANIFEST_LIMIT_BYTES = 16 * 1024 * 1024
 # What skytally needs; what these need in turn is found by their own metadata.
 _NEEDED = (
     *("numpy", "scipy", "astropy", "astropy-healpix", "mocpy", "jinja2", "weasyprint"),
-    *("matplotlib", "pydantic", "typer", "rich"),
+    *("matplotlib", "pydantic", "platformdirs", "typer", "rich"),
 )
 _NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]*")
 
@@ -129,14 +129,6 @@ def manifest_text(
         "outputs": outputs,
     }
     return json.dumps(content, indent=1, allow_nan=False, ensure_ascii=False) + "\n"
-
-
-def code_sha256() -> str:
-    """Hash the package's own modules, so that changed code of one version is told apart."""
-    whole = hashlib.sha256()
-    for path in sorted(Path(__file__).parent.glob("*.py")):
-        whole.update(path.name.encode() + b"\0" + hashlib.sha256(path.read_bytes()).digest())
-    return whole.hexdigest()
 
 
 def machine() -> str:

@@ -17,7 +17,9 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from skytally.cache import Cache
 from skytally.footprints import Footprints, Progress, clip_raster
+from skytally.kept_raster import keep_raster
 from skytally.patchwork import Patchwork
 from skytally.raster import Raster, rasterise, stack_rasters
 from skytally.selection import selections
@@ -45,6 +47,7 @@ def refine_footprints(
     target: float,
     progress: Progress | None = None,
     budget: float = BUDGET_LOOKS,
+    cache: Cache | None = None,
 ) -> Footprints:
     """Refine until every selection's bracket in probability is at most ``target``.
 
@@ -62,7 +65,40 @@ def refine_footprints(
         Greatest high − low, a probability.
     budget : float
         Pairs of piece and cell that may be looked at below the working orders.
+    cache : Cache, optional
+        Where the outcome is kept.
     """
+    raster = keep_raster(
+        cache,
+        "refined",
+        lambda: _deciding(footprints, maps, target, budget),
+        lambda: _refined(footprints, maps, target, progress, budget).raster,
+    )
+    return replace(footprints, raster=raster)
+
+
+def _deciding(
+    footprints: Footprints, maps: Sequence[SkyMap], target: float, budget: float
+) -> tuple[object, ...]:
+    """Return everything that decides the outcome."""
+    o = footprints.observations
+    return (
+        (footprints.raster, footprints.pieces, footprints.telescope, footprints.clips),
+        (len(o.telescopes), len(o.bands), len(o.nights)),
+        (o.telescope, o.band, o.night, o.footprint),
+        [(one.starts, one.stops, one.density_per_sr) for one in maps],
+        (target, budget),
+    )
+
+
+def _refined(
+    footprints: Footprints,
+    maps: Sequence[SkyMap],
+    target: float,
+    progress: Progress | None,
+    budget: float,
+) -> Footprints:
+    """Refine round by round."""
     done = [Spans.empty() for _ in range(_DEEPEST)]
     for step in range(_ROUNDS):
         if progress is not None:

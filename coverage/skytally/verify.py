@@ -15,10 +15,11 @@ from skytally import __version__
 from skytally.account import account
 from skytally.campaign import load_campaign
 from skytally.changes import Change, compare
+from skytally.code_hash import code_sha256
 from skytally.errors import InputError
 from skytally.footprints import Progress
 from skytally.local_files import is_url, read_local_file
-from skytally.manifest import Manifest, code_sha256, libraries, machine, read_manifest
+from skytally.manifest import Manifest, libraries, machine, read_manifest
 from skytally.outputs import is_ours
 from skytally.results import Results
 from skytally.serialise import part_hashes, to_dict, to_plain
