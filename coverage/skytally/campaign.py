@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import hashlib
 import os
 from collections.abc import Callable, Sequence
 from dataclasses import replace
@@ -47,6 +46,7 @@ from skytally.dust import Dust
 from skytally.dust_io import read_dust
 from skytally.errors import CampaignError, InputError, SkytallyError
 from skytally.light_curve_io import read_light_curve
+from skytally.local_files import hashes_as_read
 from skytally.log_io import ImageOptions, LogOptions, read_images, read_log
 from skytally.log_regions import resolve_regions
 from skytally.magnitudes import vega_to_ab
@@ -181,10 +181,9 @@ class _Loader:
 
         def read_and_note() -> Result:
             path = self.base / name
-            result = read(path)
-            with path.open("rb") as stream:
-                digest = hashlib.file_digest(stream, "sha256").hexdigest()
-            self.inputs.append((role, name, digest))
+            with hashes_as_read() as hashes:
+                result = read(path)
+            self.inputs.append((role, name, hashes[str(path)]))
             return result
 
         return self.attempt(read_and_note, name)

@@ -17,6 +17,7 @@ import warnings
 import zlib
 from collections.abc import Iterator
 from contextlib import contextmanager
+from contextvars import ContextVar
 from pathlib import Path
 from stat import S_ISDIR, S_ISREG
 from typing import Any, BinaryIO, cast
@@ -29,6 +30,7 @@ from skytally.fits_layout import check_shared_bytes, walk_headers
 __all__ = [
     "SIZE_VARIABLE",
     "expand",
+    "hashes_as_read",
     "header_value",
     "is_url",
     "open_bounded",
@@ -42,6 +44,7 @@ __all__ = [
 SIZE_VARIABLE = "SKYTALLY_SIZE_LIMIT_MIB"
 
 _CHUNK = 1 << 22
+_hashes: ContextVar[dict[str, str] | None] = ContextVar("hashes", default=None)
 # Two letters at least, so that a Windows drive is a path; pathlib folds "//" into "/".
 _URL = re.compile(r"\s*[A-Za-z][A-Za-z0-9+.-]+:/")
 
@@ -143,7 +146,24 @@ def read_local_file(
             remedy="Check the path, which is relative to the file that names it, "
             "and the permissions.",
         ) from cause
-    return data, hashlib.sha256(data).hexdigest()
+    digest = hashlib.sha256(data).hexdigest()
+    if (hashes := _hashes.get()) is not None:
+        hashes[str(path)] = digest
+    return data, digest
+
+
+@contextmanager
+def hashes_as_read() -> Iterator[dict[str, str]]:
+    """Collect, by path, the hash of each file that `read_local_file` reads meanwhile.
+
+    A file that changes is not what was read when it is read once more to be hashed.
+    """
+    hashes: dict[str, str] = {}
+    token = _hashes.set(hashes)
+    try:
+        yield hashes
+    finally:
+        _hashes.reset(token)
 
 
 def expand(

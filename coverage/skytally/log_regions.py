@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import hashlib
 import os
 from collections.abc import Iterable
 from dataclasses import replace
@@ -11,6 +10,7 @@ from pathlib import Path
 import numpy as np
 
 from skytally.errors import RegionError, SkytallyError
+from skytally.local_files import hashes_as_read
 from skytally.log_cells import visible
 from skytally.moc import read_moc
 from skytally.observations import LogTable, SetAside
@@ -69,9 +69,9 @@ def resolve_regions(
         try:
             if is_moc_path(text):
                 path = _inside(base / text, (base, campaign or base))
-                shapes[text] = read_moc(path)
-                digest = hashlib.sha256(path.read_bytes()).hexdigest()
-                inputs.append(("region", text, digest))
+                with hashes_as_read() as hashes:
+                    shapes[text] = read_moc(path)
+                inputs.append(("region", text, hashes[str(path)]))
             else:
                 shapes[text] = parse_region(text)
         except SkytallyError as error:
