@@ -63,7 +63,8 @@ def _campaign(folder: Path) -> Path:
     rows = [
         "exposure,ra,dec,start,duration,band,depth,region,quality",
         f'"{LINK}",150.1,-8.1,2031-03-14T19:42:10Z,60,"r{BIDI}",20.5,,=1+1',
-        f'"<b onclick=alert(1)>{BIDI}",150.2,-8.2,2031-03-14T19:44:10Z,60,<marquee>g</marquee>,20.5,,',
+        f'"<b onclick=alert(1)>{BIDI}",150.2,-8.2,2031-03-14T19:44:10Z,60,<marquee>g</marquee>,'
+        "20.5,,",
         f"a,150.3,-8.3,2031-03-14T19:45:10Z,60,r,20.5,{canary},",
         "b,150.3,-8.3,2031-03-14T19:46:10Z,60,r,20.5,../../canary.json,",
         "c,150.3,-8.3,2031-03-14T19:47:10Z,60,r,20.5,file:///etc/moc.json,",

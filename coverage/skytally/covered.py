@@ -16,7 +16,7 @@ from skytally.patchwork import CutPatchwork, Layer, Patchwork, edges_of
 from skytally.selection import Selection
 from skytally.spans import Ints
 
-__all__ = ["Chosen", "Coverage", "TallySettings", "exposures_of", "visits_of"]
+__all__ = ["Chosen", "Coverage", "TallySettings", "exposures_of"]
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -94,26 +94,12 @@ class Coverage:
         """The exposures, in time order, that covered each set of the centre rule's patchwork."""
         return exposures_of(self.centre, self.observations)
 
-    @property
-    def visits(self) -> tuple[Ints, Ints]:
-        """Pairs of set and exposure of the centre rule's patchwork; see `visits_of`."""
-        return _pairs(self.exposures)
-
 
 def exposures_of(patchwork: Patchwork, observations: Observations) -> Lists:
     """List the exposures, in time order, that covered each set of a patchwork."""
     members = patchwork.lists.table(int(observations.footprint.max(initial=0)) + 1)
     # By exposure, then back by set: counting sorts, which keep the order of time.
     return Lists.of_table(members.tocsc()[:, observations.footprint.astype(np.int32)].tocsr())
-
-
-def visits_of(patchwork: Patchwork, observations: Observations) -> tuple[Ints, Ints]:
-    """Pairs of set and exposure, sets rising and exposures in time order within each."""
-    return _pairs(exposures_of(patchwork, observations))
-
-
-def _pairs(exposures: Lists) -> tuple[Ints, Ints]:
-    return exposures.owner.astype(np.int64), exposures.items.astype(np.int64)
 
 
 @dataclass(frozen=True, eq=False)

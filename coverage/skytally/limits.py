@@ -16,7 +16,7 @@ from skytally.covered import Coverage
 from skytally.dust import Dust
 from skytally.overlay import Overlay, Places
 from skytally.patchwork import Layer, Patchwork
-from skytally.reach import View, Visits
+from skytally.reach import View, Visits, kinds_by_reach
 from skytally.seen import DetectionCurve, SeenSource, Shells, detection_nodes
 from skytally.selection import Selection, selections
 from skytally.sources import Source
@@ -88,10 +88,6 @@ class Scene:
     def of(cls, space: Space, visits: Visits) -> Scene:
         """Lay a map, at whose edges the places were cut, under them."""
         return cls(space, visits, visits.places.over(space.skymap))
-
-    def through(self, view: View) -> Overlay:
-        """What a selection sees, the places being its kinds of place."""
-        return self.overlay.joined(view.kind, len(view.seen))
 
 
 @dataclass(frozen=True, eq=False)
@@ -254,18 +250,26 @@ class _Bracket:
 
         def through(numbered: tuple[int, Selection]) -> None:
             which, selection = numbered
-            view = self.visits.view(selection)
-            reach = [one.reach_at(view.seen) for one in self.seen]
+            # Kinds of place, by exposures, serve every source; by reach, of which there are
+            # far fewer, one that a single exposure shows.
+            needs_view = not all(one.is_once for one in self.seen)
+            view = self.visits.view(selection) if needs_view else None
+            kinds = [self._kinds(one, selection, view) for one in self.seen]
             tables = []
             for of_map in maps:
-                part = _Part(selection, of_map.scene.through(view), of_map.version.space)
-                for source, one in enumerate(self.seen):
-                    row = part.row(one.source.name, reach[source]) if wants_rows else None
-                    value = part.within(reach[source]) if one.is_step else np.nan
+                overlays = {}
+                for source, (one, (kind, reach)) in enumerate(zip(self.seen, kinds)):
+                    name = source if one.is_once else -1
+                    if name not in overlays:
+                        overlays[name] = of_map.scene.overlay.joined(kind, reach.size)
+                    part = _Part(selection, overlays[name], of_map.version.space)
+                    row = part.row(one.source.name, reach) if wants_rows else None
+                    value = part.within(reach) if one.is_step else np.nan
                     found[of_map.version.number, source, which] = value, row
                 if gradual:
-                    tables.append(part.overlay.table(of_map.version.cells))
+                    tables.append(overlays[-1].table(of_map.version.cells))
             for place, source in enumerate(gradual):
+                assert view is not None  # for this source is not shown by one exposure
                 curve = DetectionCurve(self.seen[source], versions[0].nodes[place])
                 held = [(table, of_map.shells[place]) for table, of_map in zip(tables, maps)]
                 for of_map, value in zip(maps, curve.probability(view.seen, held)):
@@ -274,6 +278,15 @@ class _Bracket:
 
         side_by_side(through, enumerate(selections(self.visits.observations)))
         return found
+
+    def _kinds(
+        self, one: SeenSource, selection: Selection, view: View | None
+    ) -> tuple[NDArray[np.int32], Floats]:
+        """Kind of each place for a source, −1 where nobody looked, and the reach of each kind."""
+        if view is None or one.is_once:
+            chosen = selection.chosen[self.visits.exposure]
+            return kinds_by_reach(self.visits.seen, one.reach_mpc, chosen)
+        return view.kind, one.reach_at(view.seen)
 
 
 class _Under(NamedTuple):

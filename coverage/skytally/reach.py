@@ -31,11 +31,13 @@ __all__ = [
     "Visits",
     "absolute_magnitudes",
     "deciding_looks",
+    "kinds_by_reach",
     "reach_of_looks",
     "seen_share",
 ]
 
 Floats = NDArray[np.float64]
+Bools = NDArray[np.bool_]
 
 # Times are compared in whole milliseconds; rounding moves a difference by up to one.
 _SLACK_MS = 1
@@ -184,6 +186,35 @@ def reach_of_looks(
         # Beyond the cosmology's table, redshift 1000, nothing is left to be reached.
         reach = np.where(np.isnan(corrected), np.maximum(reach, cosmology.limit_mpc), corrected)
     return reach
+
+
+def kinds_by_reach(
+    seen: Lists, reach_mpc: Floats, chosen: Bools
+) -> tuple[NDArray[np.int32], Floats]:
+    """Tell places apart by their greatest reach, which decides where one exposure is enough.
+
+    Parameters
+    ----------
+    seen : Lists
+        Looks at each place.
+    reach_mpc, chosen : float64 and bool arrays, shape (looks,)
+        Reach of each look, 0 for none, and whether it counts.
+
+    Returns
+    -------
+    kind : int32 array, shape (places,)
+        Kind of each place; −1 where no chosen look was.
+    reach : float64 array, shape (kinds,)
+        Greatest reach, falling; 0 where the chosen looks show nothing.
+    """
+    falling, number = np.unique(-reach_mpc, return_inverse=True)
+    first = seen.reduce(np.minimum, np.where(chosen, number, falling.size))
+    occurs = np.zeros(falling.size + 1, dtype=bool)
+    occurs[first] = True
+    kept = np.flatnonzero(occurs[:-1])
+    kind = np.full(falling.size + 1, -1, dtype=np.int32)
+    kind[kept] = np.arange(kept.size)
+    return kind[first], -falling[kept]
 
 
 def deciding_looks(

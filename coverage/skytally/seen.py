@@ -77,6 +77,11 @@ class SeenSource:
         """Whether an exposure certainly shows everything down to some magnitude."""
         return self.source.detection.width == 0 and self.source.detection.plateau == 1
 
+    @property
+    def is_once(self) -> bool:
+        """Whether the one exposure that reaches farthest decides."""
+        return self.is_step and self.source.visits == 1
+
     def reach_at(self, seen: Lists) -> Floats:
         """How far each list of looks would have shown the source, 0 where unseen; (lists,)."""
         look = deciding_looks(
