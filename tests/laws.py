@@ -93,12 +93,12 @@ def differences(one, two, path=()):
 
 
 def _sorted(entries):
-    """By what an entry is of, then by its numbers, rounded: of two alike any comes first."""
-    rest = [
-        (_key(e), [round(v, 6) for v in e.values() if isinstance(v, int | float)], number)
-        for number, e in enumerate(entries)
-    ]
-    return [entries[number] for *_, number in sorted(rest)]
+    """By what an entry is of, then by all else, rounded: of two alike any comes first."""
+
+    def rest(entry):
+        return [round(v, 6) if isinstance(v, float) else v for v in entry.values()]
+
+    return sorted(entries, key=lambda entry: (_key(entry), repr(rest(entry))))
 
 
 def assert_alike(one, two, may_differ: Callable[[tuple], bool] = lambda path: False):
