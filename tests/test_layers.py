@@ -30,7 +30,8 @@ TABLE = (
     "sky_chart depth_chart figures limit_figures",
     "report_tables depth_tables page_charts page_data limit_tables sharing_tables audit_tables "
     "house_style report one_telescope circular_text circular_tables circular region_files paper "
-    "manifest outputs terminal api check_text where_text where_json changes verify verify_text",
+    "staging manifest outputs terminal api check_text where_text where_json changes verify "
+    "verify_text",
     "cli __main__",
 )
 LAYERS = {"": 0} | {name: layer for layer, names in enumerate(TABLE) for name in names.split()}

@@ -108,8 +108,18 @@ def main() -> NoReturn:
         app(prog_name="skytally")
     except KeyboardInterrupt:
         _say("Stopped.")
-        sys.exit(EXIT_INTERRUPTED)
+        _leave_at_once(EXIT_INTERRUPTED)
+    except SystemExit as leaving:
+        if leaving.code in {EXIT_INTERRUPTED, EXIT_TERMINATED}:
+            _leave_at_once(leaving.code)
+        raise
     sys.exit(0)
+
+
+def _leave_at_once(code: Any) -> NoReturn:
+    """End the process; the usual way out would wait for threads whose work nobody wants."""
+    sys.stderr.flush()
+    os._exit(code)
 
 
 def _leave(number: int, frame: FrameType | None) -> NoReturn:

@@ -14,7 +14,6 @@ import io
 import json
 import os
 import re
-import secrets
 import shutil
 import unicodedata
 from collections.abc import Callable, Iterable, Iterator, Mapping
@@ -40,6 +39,7 @@ from skytally.results import Results
 from skytally.serialise import to_json, to_table
 from skytally.skymap_io import write_skymap
 from skytally.spans import Spans
+from skytally.staging import hold_folder, staging_folder
 
 __all__ = ["file_stems", "is_ours", "left_over_files", "write_outputs", "write_regions"]
 
@@ -263,7 +263,7 @@ def _publish(
                 file=out_dir,
                 remedy="Choose another folder with --out.",
             )
-        with _staging(out_dir) as staging:
+        with staging_folder(out_dir) as staging:
             new = staging / "new"
             new.mkdir()
             render(new)
@@ -273,29 +273,14 @@ def _publish(
             _put(new / MANIFEST, manifest_text(results, command, origin, outputs))
             names.append(MANIFEST)
             _sync(new)
-            if out_dir.exists():
-                _replace(out_dir, names, command, staging)
-            else:
-                new.rename(out_dir)
+            # Of two runs that end at once, one folder is whole before the other's comes.
+            with hold_folder(out_dir.parent):
+                if out_dir.exists():
+                    _replace(out_dir, names, command, staging)
+                else:
+                    new.rename(out_dir)
             _sync_folder(out_dir.parent)
     return tuple(out_dir / name for name in names)
-
-
-@contextmanager
-def _staging(out_dir: Path) -> Iterator[Path]:
-    """Make a folder on the same file system; leave no trace of it, whatever happens."""
-    made = [folder for folder in out_dir.parents if not folder.exists()]
-    place = out_dir if out_dir.exists() else out_dir.parent
-    place.mkdir(parents=True, exist_ok=True)
-    staging = place / f".skytally-{secrets.token_hex(6)}"
-    try:
-        staging.mkdir()
-        yield staging
-    finally:
-        shutil.rmtree(staging, ignore_errors=True)
-        for folder in made:
-            with suppress(OSError):
-                folder.rmdir()  # Fails, as it should, where the output now stands.
 
 
 def _replace(out_dir: Path, names: list[str], command: str, staging: Path) -> None:

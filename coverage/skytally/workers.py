@@ -21,5 +21,9 @@ def side_by_side(function: Callable[[In], Out], items: Iterable[In]) -> list[Out
     items = list(items)
     if len(items) < 2 or _WORKERS < 2:
         return [function(item) for item in items]
-    with ThreadPoolExecutor(_WORKERS) as pool:
+    pool = ThreadPoolExecutor(_WORKERS)
+    try:
         return list(pool.map(function, items))
+    finally:
+        # Who is interrupted does not wait for work that nobody wants.
+        pool.shutdown(wait=False, cancel_futures=True)
