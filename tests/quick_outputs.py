@@ -6,7 +6,7 @@ from collections.abc import Callable
 from contextlib import nullcontext
 
 import pytest
-from skytally import outputs
+from skytally import outputs, paper
 from skytally.errors import OutputError
 
 __all__ = ["no_pdf", "quick_renderers"]
@@ -30,6 +30,7 @@ def quick_renderers(
         outputs, "render_html", lambda results, figures, style: f"<p>{results.event.name}</p>\n"
     )
     monkeypatch.setattr(outputs, "open_paper", lambda: nullcontext(_Paper(pdf)))
+    monkeypatch.setattr(paper, "open_paper", lambda: nullcontext(_Paper(pdf)))
 
 
 def no_pdf() -> bytes:

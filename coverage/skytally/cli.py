@@ -175,13 +175,16 @@ def report(
     """Write the report and its data files (the main job)."""
     from skytally.house_style import HouseStyle
     from skytally.outputs import write_outputs
+    from skytally.paper import open_paper
     from skytally.serialise import to_json
     from skytally.terminal import render_answer
 
     style = None if templates is None else HouseStyle.read(templates)
-    results = _tally(campaign, no_cache, "report.html lists them all")
-    with _progress("Writing") as progress:
-        written = write_outputs(results, out, progress, style, campaign)
+    # Its process gets ready while the numbers are made.
+    with open_paper() as paper:
+        results = _tally(campaign, no_cache, "report.html lists them all")
+        with _progress("Writing") as progress:
+            written = write_outputs(results, out, progress, style, campaign, paper)
     _print(to_json(results) if json else render_answer(results, sys.stdout))
     _say(f"Wrote {len(written)} files to {out}")
     _leave_if_unread(results)

@@ -17,7 +17,7 @@ import re
 import shutil
 import unicodedata
 from collections.abc import Callable, Iterable, Iterator, Mapping
-from contextlib import contextmanager, suppress
+from contextlib import contextmanager, nullcontext, suppress
 from pathlib import Path
 from typing import Any
 
@@ -69,6 +69,7 @@ def write_outputs(
     progress: Progress | None = None,
     style: HouseStyle | None = None,
     campaign: str | Path | None = None,
+    paper: Paper | None = None,
 ) -> tuple[Path, ...]:
     """Write the report in all its forms, the regions and the manifest.
 
@@ -84,6 +85,8 @@ def write_outputs(
         Templates that override ours.
     campaign : path, optional
         The campaign file, for the manifest to say where the numbers are from.
+    paper : Paper, optional
+        What `open_paper` gave, if it was opened before; good for one report.
 
     Returns
     -------
@@ -104,9 +107,9 @@ def write_outputs(
             progress(what, done)
 
     def render(folder: Path) -> None:
-        with open_paper() as paper:
+        with open_paper() if paper is None else nullcontext(paper) as sheets:
             say("Drawing the figures", 0.0)
-            figures = _draw(results, style, paper)
+            figures = _draw(results, style, sheets)
             # Beside each, the fraction of the time that the earlier ones have taken.
             writers: dict[str, tuple[float, Callable[[Path], None]]] = {
                 "report.html": (0.4, lambda path: _put(path, render_html(results, figures, style))),
@@ -119,7 +122,7 @@ def write_outputs(
                 ),
                 "circulars": (0.47, lambda path: _render_circulars(results, path)),
                 "regions": (0.48, lambda path: _render_regions(results, path)),
-                "report.pdf": (0.6, lambda path: _put(path, paper.pdf())),
+                "report.pdf": (0.6, lambda path: _put(path, sheets.pdf())),
             }
             for name, (done, write) in writers.items():
                 say(f"Writing {name}", done)
