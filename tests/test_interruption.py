@@ -199,7 +199,7 @@ def test_many_runs_into_one_folder_leave_the_files_of_one(tmp_path: Path) -> Non
         quick_renderers(pytest.MonkeyPatch())
         print("ready", flush=True)
         sys.stdin.readline()
-        for _ in range(15):
+        for _ in range(8):
             write_outputs(renamed(small_results(), "Heron", sys.argv[2]), sys.argv[1])
     """
     names = ["Dunlin", "Plover"]

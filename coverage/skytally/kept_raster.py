@@ -58,8 +58,7 @@ def _unpacked(arrays: Arrays) -> Raster:
 
 def _packed_table(table: SpanTable) -> Arrays:
     """Return the shift and three arrays: positions without the zeros that all of them end in."""
-    both = np.concatenate((table.starts, table.stops))
-    bits = int(np.bitwise_or.reduce(both))
+    bits = int(np.bitwise_or.reduce(table.starts) | np.bitwise_or.reduce(table.stops))
     shift = (bits & -bits).bit_length() - 1 if bits else 0
     kind: type[Any] = np.uint32 if LINE_END >> shift < 1 << 32 else np.int64
     return [
