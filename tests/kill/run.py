@@ -27,6 +27,7 @@ from quick_outputs import quick_renderers
 from skytally import account, outputs  # noqa: F401 - imported once, for every run
 from skytally.cache import Cache
 from skytally.cli import app
+from skytally.code_hash import code_sha256
 from skytally.scaffold import write_campaign
 
 STEPS = 12  # files that a run moves into place, or more
@@ -144,6 +145,7 @@ def main() -> int:
     parser.add_argument("--seed", type=int, default=7)
     parser.add_argument("--quick", action="store_true", help="without figures, page and PDF")
     options = parser.parse_args()
+    code_sha256()  # remembered, so that all runs are of one code even if it is edited meanwhile
     os.environ["SOURCE_DATE_EPOCH"] = "1931212800"
     with tempfile.TemporaryDirectory() as base, pytest.MonkeyPatch.context() as patch:
         os.environ["SKYTALLY_CACHE"] = f"{base}/cache"
