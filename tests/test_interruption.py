@@ -64,7 +64,7 @@ WORKING = """
     from skytally import cli, workers
 
     def stuck(item):
-        os.write(1, b"at work\n")  # in one piece, whoever else writes
+        os.write(1, b"at work\\n")  # in one piece, whoever else writes
         time.sleep(60)
 
     cli._tally = lambda campaign, no_cache, rest: workers.side_by_side(stuck, range(9))
