@@ -237,15 +237,13 @@ def test_what_is_infinitely_bright_is_seen_wherever_there_is_a_distance_and_a_li
     source = constant(magnitude, k_correction=k_correction, detection=detection)
     regions = [spans_of_cells(3, cell[:8]), spans_of_cells(3, cell[6:12])]
     row = tallied(regions, skymap, [source])[0]
-    # Where detection is gradual the integral's table is of single precision.
-    precision = 1e-9 if detection.width == 0 else 1e-7
-    assert row.probability == pytest.approx(share_of(cell, range(12)), rel=precision)
+    assert row.probability == pytest.approx(share_of(cell, range(12)), rel=1e-9)
     assert row.probability_beyond == pytest.approx(0.0, abs=1e-9)
     assert row.probability_without_distance == pytest.approx((4 + 9) / 300)
     # Without a limit an exposure covers, but shows nothing.
     row = tallied(regions, skymap, [source], depth=np.array([20.0, np.nan]))[0]
-    assert row.probability == pytest.approx(share_of(cell, range(8)), rel=precision)
-    assert row.probability_beyond == pytest.approx(share_of(cell, range(8, 12)), rel=precision)
+    assert row.probability == pytest.approx(share_of(cell, range(8)), rel=1e-9)
+    assert row.probability_beyond == pytest.approx(share_of(cell, range(8, 12)), rel=1e-9)
 
 
 @pytest.mark.parametrize("name", SOURCES)

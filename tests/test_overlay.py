@@ -190,7 +190,7 @@ def test_joined_places_hold_what_each_of_them_held():
     table = joined.table(cells).toarray()
     assert table.shape == (20, cells.size)
     for (place, cell), held in expected.items():
-        assert table[place, np.searchsorted(cells, cell)] == pytest.approx(held[0], rel=1e-7)
+        assert table[place, np.searchsorted(cells, cell)] == pytest.approx(held[0], rel=1e-12)
     assert np.count_nonzero(table) == np.count_nonzero(joined.probability)
     np.testing.assert_allclose(
         joined.by_place(joined.solid_angle_sr),

@@ -29,8 +29,8 @@ __all__ = ["Brackets", "Scene", "SourceRow", "tally_sources"]
 Floats = NDArray[np.float64]
 _Key = tuple[int, int, int]  # map, source and selection
 
-# Bounds what the maps' cells take that are cut along distance, in numbers of 4 bytes.
-_SHELLS_AT_ONCE = 40_000_000
+# Bounds what the maps' cells take that are cut along distance, in numbers of 8 bytes.
+_SHELLS_AT_ONCE = 20_000_000
 
 
 @dataclass(frozen=True)

@@ -133,10 +133,11 @@ class Overlay:
         return sum_by(self.place, amount, self.places)
 
     def table(self, cells: Ints) -> csr_array:
-        """Probability as a sparse table of float32, shape (places, cells), rows being by place."""
+        """Probability as a sparse table, shape (places, cells), rows being by place."""
         column = np.empty(self.skymap.starts.size + 1, dtype=np.int32)
         column[cells] = np.arange(cells.size)
         offsets = np.searchsorted(self.place, np.arange(self.places + 1))
         shape = self.places, cells.size
-        held = self.probability.astype(np.float32)
-        return csr_array((held, column[self.cell], offsets.astype(np.int32)), shape=shape)
+        return csr_array(
+            (self.probability, column[self.cell], offsets.astype(np.int32)), shape=shape
+        )

@@ -139,18 +139,17 @@ class Shells:
     ----------
     cells : int64 array, shape (n,)
         Cells of the map; −1 for what lies off it.
-    chance : float32 array, shape (n, nodes)
+    chance : float64 array, shape (n, nodes)
         0 without distance.
     """
 
     cells: Ints
-    chance: NDArray[np.float32]
+    chance: Floats
 
     @classmethod
     def of(cls, space: Space, cells: Ints, nodes: Floats) -> Shells:
         """Cut the distance distributions of cells at nodes (Mpc)."""
-        # Half the memory. Rounding is 1e-8, four orders below what the steps between nodes err.
-        chance = np.empty((cells.size, nodes.size), dtype=np.float32)
+        chance = np.empty((cells.size, nodes.size))
         for block in blocks(cells.size):
             distances = space.distances.take(cells[block])
             before = np.zeros(distances.m.size)
